@@ -1,0 +1,119 @@
+"""Blocks of audio in, numbers per hop out: the only pass over the sources before anything is decided.
+
+Each meter is one module with `push(block)` and `result()`, gives the same answer at any block size, and knows nothing of
+the others. `measure` walks all tracks block by block and hands each block to the meters; what it returns is small (about
+12 MB a track-hour) and everything after it is pure.
+
+================  ==========================================================
+`bands`           power in speech bands, K-weighted power, rumble, per hop
+`voice`           voice activity (webrtcvad)
+`arrival`         which microphone hears first (GCC-PHAT)
+`peaks`           sample peak, DC, clipping; true peak
+`loudness`        ITU-R BS.1770 loudness, EBU Tech 3342 range
+================  ==========================================================
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.audio import Resampler, TrackReader, open_readers
+from leveller.lanes import walk
+from leveller.measure.arrival import ArrivalMeter, Arrivals
+from leveller.measure.bands import ANALYSIS_HZ, BANDS, BandMeter, bands_within
+from leveller.measure.levels import SILENT, Levels
+from leveller.measure.peaks import PeakMeter, PeakReading
+from leveller.measure.voice import VoiceMeter
+from leveller.session import Session, Track
+from leveller.units import Bools, frames_to_hops
+
+BLOCK_S = 2.0
+OnProgress = Callable[[str, float, float], None]  # stage, done, total (seconds of programme)
+
+
+def no_progress(stage: str, done: float, total: float) -> None:
+    """For those who do not ask."""
+
+
+@dataclass(frozen=True)
+class Measurements:
+    """What is known of a session's sound, before any decision."""
+
+    levels: Levels  # (hops, tracks, bands) power in dB / STEP_DB
+    k_levels: Levels  # (hops, tracks) K-weighted power
+    rumble: Levels  # (hops, tracks) 50 to 180 Hz
+    voiced: Bools  # (hops, tracks) webrtcvad
+    arrivals: Arrivals
+    peaks: tuple[PeakReading, ...]  # per track
+    repaired_frames: tuple[int, ...]  # per track: NaN or Inf silenced
+
+    @property
+    def hops(self) -> int:
+        """Analysis steps in the session."""
+        return len(self.levels)
+
+
+def measure(session: Session, *, on_progress: OnProgress = no_progress, block_s: float = BLOCK_S) -> Measurements:
+    """One pass over all tracks of a session.
+
+    Raises
+    ------
+    InputError
+        when a source vanishes or shrinks while it is read.
+    """
+    frames = round(block_s * session.rate_hz)
+    blocks = -(-session.frames // frames)
+    with open_readers(session) as readers:
+        meters = [_TrackMeters(track, reader, session) for track, reader in zip(session.tracks, readers, strict=True)]
+        arrival = ArrivalMeter(len(meters), session.frames / session.rate_hz)
+
+        def step(lane: int, block: int) -> npt.NDArray[np.float32]:
+            return meters[lane].push(min(frames, session.frames - block * frames), last=block == blocks - 1)
+
+        for block, row in enumerate(walk(step, lanes=len(meters), blocks=blocks)):
+            arrival.push(row)
+            on_progress("measure", min((block + 1) * frames, session.frames) / session.rate_hz,
+                        session.frames / session.rate_hz)
+        return _collected(session, meters, arrival)
+
+
+class _TrackMeters:
+    """The meters of one track behind its reader."""
+
+    def __init__(self, track: Track, reader: TrackReader, session: Session) -> None:
+        self.reader = reader
+        self.peak = PeakMeter(session.rate_hz, track.width, float_source=track.is_float)
+        self.bands = BandMeter()
+        self.voice = VoiceMeter(track.loud_dbfs)
+        self._to_analysis = Resampler(session.rate_hz, ANALYSIS_HZ)
+
+    def push(self, frames: int, *, last: bool) -> npt.NDArray[np.float32]:
+        """Read and measure the next frames; returns them at the analysis rate."""
+        block = self.reader.read(frames)
+        self.peak.push(block)
+        one = block if block.ndim == 1 else block.mean(axis=1)
+        low = self._to_analysis.push(one, last=last)
+        self.bands.push(low)
+        self.voice.push(low)
+        return low
+
+
+def _collected(session: Session, meters: list[_TrackMeters], arrival: ArrivalMeter) -> Measurements:
+    """All results on one hop grid; hops the resampler left out at the end are silent."""
+    hops = frames_to_hops(session.frames, session.rate_hz)
+    bands = max(1, min((bands_within(t.source_rate_hz) for t in session.tracks), default=BANDS))
+    levels = np.full((hops, len(meters), bands), SILENT, np.int16)
+    others = np.full((2, hops, len(meters)), SILENT, np.int16)
+    voiced = np.zeros((hops, len(meters)), np.bool_)
+    for i, meter in enumerate(meters):
+        found, flags = meter.bands.result()[:hops], meter.voice.result()[:hops]
+        levels[: len(found), i] = found[:, :bands]
+        others[:, : len(found), i] = found[:, BANDS:].T
+        voiced[: len(flags), i] = flags
+    return Measurements(
+        levels=levels, k_levels=others[0], rumble=others[1], voiced=voiced, arrivals=arrival.result(),
+        peaks=tuple(m.peak.result() for m in meters), repaired_frames=tuple(m.reader.repaired_frames for m in meters))

@@ -1,0 +1,77 @@
+"""Power per hop in speech bands, with the K-weighted power and the rumble under the bands, from one spectrum.
+
+Everything that decides works at 16 kHz on 10 ms hops: a Hann window of 20 ms round each hop, 14 bands from 180 to
+7000 Hz, about a third-octave to half-octave wide (our choice; bands of equal loudness weight gave no better decisions).
+The periodic Hann window leaks DC into the first two bins only (0 and 50 Hz), which nothing here uses.
+
+K-weighted power is the same spectrum times |H(f)|^2 of ITU-R BS.1770-5; it misses what lies over 8 kHz, which for
+speech is below 0.1 dB. It serves to compare own speech hop by hop; the delivered mix is measured at full rate.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.measure.levels import Levels, power_to_level
+from leveller.measure.loudness import k_response_power
+from leveller.measure.pieces import Pieces
+
+ANALYSIS_HZ = 16000
+HOP = 160
+WINDOW = 320
+EDGES_HZ = (180, 280, 390, 510, 650, 810, 1000, 1230, 1510, 1850, 2270, 2800, 3600, 4900, 7000)
+BANDS = len(EDGES_HZ) - 1
+RUMBLE_HZ = (50, 180)  # thumps, plosives and hum live here
+_PIECE_HOPS = 100
+
+
+def bands_within(rate_hz: int) -> int:
+    """How many bands a source of this rate can fill."""
+    return sum(edge <= 0.46 * rate_hz for edge in EDGES_HZ[1:])
+
+
+class BandMeter:
+    """Streaming; `push` 16 kHz samples, then `result`: levels, shape=(hops, BANDS + 2), int16.
+
+    The last two columns are K-weighted power and rumble.
+    """
+
+    def __init__(self) -> None:
+        margin = (WINDOW - HOP) // 2
+        self._pieces = Pieces(_PIECE_HOPS * HOP, 1, before=margin, after=margin)
+        ramp = np.arange(WINDOW) / WINDOW
+        self._window = (0.5 - 0.5 * np.cos(2 * np.pi * ramp)).astype(np.float32)
+        frequencies = np.arange(WINDOW // 2 + 1) * ANALYSIS_HZ / WINDOW
+        self._starts = np.searchsorted(frequencies, EDGES_HZ)
+        self._rumble = np.searchsorted(frequencies, RUMBLE_HZ)
+        self._scale = np.float32(2.0 / (WINDOW * float((self._window**2).sum())))
+        self._k_weight = k_response_power(frequencies).astype(np.float32)
+        self._levels: list[Levels] = []
+
+    def push(self, block: npt.NDArray[np.float32]) -> None:
+        """Take 16 kHz samples, shape=(frames,)."""
+        self._levels.extend(self._measure(piece[0]) for piece in self._pieces.push(block))
+
+    def result(self) -> Levels:
+        """Levels of all hops begun so far."""
+        done = list(self._levels)
+        for piece, frames in self._pieces.rest():
+            done.append(self._measure(piece[0])[: -(-frames // HOP)])
+        return np.concatenate(done) if done else np.empty((0, BANDS + 2), np.int16)
+
+    def _measure(self, samples: npt.NDArray[np.float32]) -> Levels:
+        """One second's levels."""
+        import scipy.fft
+
+        windows = np.lib.stride_tricks.sliding_window_view(samples, WINDOW)[::HOP] * self._window
+        spectrum = scipy.fft.rfft(windows, axis=1)
+        power = np.square(spectrum.real)
+        power += np.square(spectrum.imag)
+        power *= self._scale
+        out = np.empty((len(power), BANDS + 2), np.float32)
+        np.add.reduceat(power[:, : self._starts[-1]], self._starts[:-1], axis=1, out=out[:, :BANDS])
+        out[:, BANDS + 1] = power[:, self._rumble[0] : self._rumble[1]].sum(axis=1)
+        power *= self._k_weight
+        out[:, BANDS] = power.sum(axis=1)
+        return power_to_level(out)

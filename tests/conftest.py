@@ -1,0 +1,1 @@
+"""Puts this folder on the path, so that tests import the helpers beside it."""
