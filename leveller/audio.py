@@ -1,0 +1,348 @@
+"""Opens tracks, yields aligned blocks, writes files; the sole user of soundfile and soxr.
+
+A `TrackReader` walks one track in *session* time: silence before its offset, the source resampled to the session's
+rate, silence behind its end, so that every reader of a session gives blocks of the same frames. Files are decoded in
+chunks of a fixed size and the resampler sees only those, so the bytes do not depend on how much is read at once.
+Readers on one polyphonic file share its decode. Sources are opened for reading only.
+
+Audio is float32, `(frames,)` for one channel or `(frames, channels)`. PCM is quantised by `samples.Quantiser`, since
+libsndfile rounds down. Own chunks, scaling in place and truncated files are the business of `riff`.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import os
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+from typing import Any, Literal
+
+import numpy as np
+import soundfile
+import soxr
+
+from leveller.decoder import CHUNK_FRAMES, Decoder
+from leveller.errors import InputError, OutputError
+from leveller.riff import (
+    RIFF_LIMIT,
+    FloatSpill,
+    append_chunks,
+    clear_peak_time,
+    missing_bytes,
+    read_chunks,
+    scale_float_wav,
+)
+from leveller.samples import AudioSource, FileFacts, HighPass, Preview, Quantiser, Samples, SourceList, repair
+from leveller.units import HOPS_PER_S
+
+__all__ = [
+    "AudioSource", "FileFacts", "FloatSpill", "Preview", "Resampler", "TrackReader", "WavWriter", "append_chunks",
+    "open_readers", "pieces", "preview", "probe", "read_chunks", "scale_float_wav", "spread_starts",
+]
+
+Kind = Literal["float32", "pcm24", "pcm16"]
+
+RATES_HZ = (8000, 192000)
+PREVIEW_PIECES = 60  # of 1 s each; enough for levels and likeness, a sixtieth of an hour's reading
+HEADER_BYTES = 4096  # room for all chunks but the audio when the size of a file is judged
+READ_QUALITY = "HQ"
+
+
+def probe(path: Path, *, accept_short: bool = False) -> FileFacts:
+    """What a file is, after checking that it can be read to its end.
+
+    Raises
+    ------
+    InputError
+        for a file that is missing, unreadable, empty, of a rate outside 8 to 192 kHz, or (without `accept_short`)
+        shorter than its header says.
+    """
+    with _open(path) as file:
+        facts = (file.samplerate, file.channels, file.subtype, file.format)
+        header_frames = file.frames
+        absent = missing_bytes(path)
+        there = header_frames
+        if absent:  # libsndfile has clamped its count already
+            header_frames += -(-absent // _frame_bytes(file))
+        elif file.format in ("FLAC", "MP3") and not _tail_reads(file):
+            there = _count_frames(path)
+    if not RATES_HZ[0] <= facts[0] <= RATES_HZ[1]:
+        raise InputError(f"{path}: {facts[0]} Hz, expected {RATES_HZ[0]} to {RATES_HZ[1]} Hz. Convert it first")
+    if there < header_frames and there > 0 and not accept_short:
+        raise InputError(
+            f"{path}: ends after {there / facts[0]:.3f} s, but its header says {header_frames / facts[0]:.3f} s. "
+            "Copy it again, or take what is there with --accept-short")
+    if there <= 0:
+        raise InputError(f"{path}: holds no audio (0 frames by its header, {path.stat().st_size} bytes on the disk). "
+                         "Leave it out, or have the header repaired if the recorder lost power")
+    is_float = facts[2] in ("FLOAT", "DOUBLE")
+    return FileFacts(facts[0], there, facts[1], facts[2], is_float, facts[3], header_frames)
+
+
+def spread_starts(frames: int, rate_hz: int) -> list[int]:
+    """First frames of up to 60 pieces of 1 s, evenly spread; all of a file that is shorter than a minute."""
+    if frames <= PREVIEW_PIECES * rate_hz:
+        return list(range(0, frames, rate_hz))
+    return [round(k * (frames - rate_hz) / (PREVIEW_PIECES - 1)) for k in range(PREVIEW_PIECES)]
+
+
+def pieces(path: Path, starts: Sequence[int], *, frames: int) -> Iterator[Samples]:
+    """Read some places of a file, each `(frames, channels)`; zeros where a place lies outside the file.
+
+    The same array is filled again for each place.
+    """
+    with _open(path) as file:
+        block = np.empty((frames, file.channels), np.float32)
+        for start in starts:
+            block.fill(0)
+            first, last = max(start, 0), min(start + frames, file.frames)
+            if last > first:
+                try:
+                    file.seek(first)
+                    file.read(out=block[first - start : last - start])
+                except (soundfile.LibsndfileError, OSError) as error:
+                    raise InputError(f"{path}: cannot be read at {first / file.samplerate:.3f} s "
+                                     f"({_detail(error)})") from error
+                repair(block)
+            yield block
+
+
+def preview(path: Path, facts: FileFacts) -> Preview:
+    """Powers of up to a minute of a file, for levels and for the likeness of two channels."""
+    hop = facts.rate_hz // HOPS_PER_S
+    starts = spread_starts(facts.frames, facts.rate_hz)
+    power, cross = [], []
+    for start, block in zip(starts, pieces(path, starts, frames=facts.rate_hz), strict=True):
+        hops = max(1, min(facts.rate_hz, facts.frames - start) // hop)  # the rest of the last piece is not there
+        grid = block[: hops * hop].reshape(hops, hop, -1).astype(np.float64)
+        grid -= grid.mean(axis=1, keepdims=True)  # DC is no level and no likeness
+        power.append(np.mean(grid * grid, axis=1))
+        cross.append(np.mean(grid[:, :, 0] * grid[:, :, 1], axis=1) if facts.channels > 1 else np.zeros(hops))
+    return Preview(np.concatenate(power), np.concatenate(cross))
+
+
+class Resampler:
+    """A streaming resampler, exact at any block size; it hands blocks through where both rates are equal.
+
+    Parameters
+    ----------
+    from_hz, to_hz : int
+    channels : int
+    quality : str
+        of soxr: 'LQ', 'MQ' (enough for analysis), 'HQ', 'VHQ'
+    """
+
+    def __init__(self, from_hz: int, to_hz: int, *, channels: int = 1, quality: str = "MQ") -> None:
+        self._stream = None if from_hz == to_hz else soxr.ResampleStream(
+            from_hz, to_hz, channels, dtype="float32", quality=quality)
+
+    def push(self, block: Samples, last: bool = False) -> Samples:
+        """The next samples at the new rate; `last` brings out what is still held back."""
+        if self._stream is None:
+            return block
+        out: Samples = self._stream.resample_chunk(block, last=last)
+        return out
+
+
+class TrackReader:
+    """One track in session time; a context manager. Use each reader from one thread at a time.
+
+    Attributes
+    ----------
+    repaired_frames : int
+        frames read so far in which a NaN or Inf was silenced
+    blocks_read : int
+        chunks that its file has decoded so far, for all readers of that file together
+    """
+
+    def __init__(self, track: AudioSource, rate_hz: int, *, decoder: Decoder | None = None, user: int = 0) -> None:
+        self.track = track
+        self.repaired_frames = 0
+        self._decoder = decoder or Decoder(_open(track.path), track, 1)
+        self._user = user
+        self._resampler = Resampler(track.source_rate_hz, rate_hz, channels=track.width, quality=READ_QUALITY)
+        self._pick_buffer = np.empty((CHUNK_FRAMES,), np.float32)
+        self._position = 0  # in session frames
+        self._chunk = 0
+        self._piece: Samples = np.empty((0,) if track.width == 1 else (0, 2), np.float32)
+        self._filter = None if track.high_pass_hz is None else HighPass(track.high_pass_hz, rate_hz, track.width)
+
+    def __enter__(self) -> TrackReader:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    @property
+    def blocks_read(self) -> int:
+        """Chunks decoded so far by this reader's file."""
+        return self._decoder.blocks_read
+
+    def close(self) -> None:
+        """Leave the file; closing twice does no harm."""
+        self._decoder.leave(self._user)
+
+    def read(self, frames: int, *, out: Samples | None = None) -> Samples:
+        """The next `frames` of session time, `(frames,)` or `(frames, 2)`; zeros outside the track.
+
+        `out` is filled and returned where it is given, else a new array.
+        """
+        shape = (frames,) if self.track.width == 1 else (frames, 2)
+        block = np.empty(shape, np.float32) if out is None else out
+        start = self.track.offset_frames - self._position
+        first = min(max(start, 0), frames)
+        last = min(max(start + self.track.frames, 0), frames)
+        block[:first] = 0
+        self._fill(block[first:last])
+        block[last:] = 0
+        self._position += frames
+        return block
+
+    def _fill(self, block: Samples) -> None:
+        """The next samples of the track itself."""
+        done = 0
+        while done < len(block):
+            if not len(self._piece):
+                if self._chunk == self._decoder.chunk_count:
+                    block[done:] = 0  # the resampler may end a frame early
+                    break
+                self._piece = self._next_piece()
+            part = self._piece[: len(block) - done]
+            block[done : done + len(part)] = part
+            self._piece = self._piece[len(part) :]
+            done += len(part)
+        if self.track.polarity < 0:
+            np.negative(block, out=block)
+        if self._filter is not None and len(block):
+            self._filter.apply(block)
+
+    def _next_piece(self) -> Samples:
+        """One chunk of the source at the session's rate."""
+        chunk, repaired = self._decoder.chunk(self._user, self._chunk)
+        self._chunk += 1
+        channels = self.track.channels
+        if repaired is not None:
+            self.repaired_frames += int(np.count_nonzero(repaired[:, list(channels)].any(axis=1)))
+        if len(channels) == 1:
+            picked = chunk[:, channels[0]]
+        elif self.track.width == 2:
+            picked = chunk[:, list(channels)]
+        else:
+            picked = np.add(chunk[:, channels[0]], chunk[:, channels[1]], out=self._pick_buffer[: len(chunk)])
+            picked *= np.float32(0.5)
+        return self._resampler.push(picked, last=self._chunk == self._decoder.chunk_count)
+
+
+@contextlib.contextmanager
+def open_readers(session: SourceList) -> Iterator[list[TrackReader]]:
+    """Readers of all tracks, in session order; those on one file (at one offset) share its decode."""
+    groups: dict[tuple[Path, int], list[AudioSource]] = {}
+    for track in session.tracks:
+        groups.setdefault((track.path, track.offset_frames), []).append(track)
+    with contextlib.ExitStack() as stack:
+        readers: dict[str, TrackReader] = {}
+        for tracks in groups.values():
+            decoder = Decoder(_open(tracks[0].path), tracks[0], len(tracks))
+            for user, track in enumerate(tracks):
+                reader = TrackReader(track, session.rate_hz, decoder=decoder, user=user)
+                readers[track.name] = stack.enter_context(reader)
+        yield [readers[track.name] for track in session.tracks]
+
+
+class WavWriter:
+    """Writes one WAV file (RF64 where it would pass 4 GiB); a context manager.
+
+    Parameters
+    ----------
+    path : Path
+    rate_hz, channels : int
+    kind : str
+        'float32', 'pcm24' or 'pcm16' (the only one with dither)
+    expected_frames : int
+        how many will be written at most; decides between WAV and RF64
+    """
+
+    def __init__(self, path: Path, rate_hz: int, channels: int, kind: Kind, *, expected_frames: int = 0) -> None:
+        subtype, bits = {"float32": ("FLOAT", 32), "pcm24": ("PCM_24", 24), "pcm16": ("PCM_16", 16)}[kind]
+        self.path, self.frames = path, 0
+        self._frame_bytes = channels * bits // 8
+        self._large = expected_frames * self._frame_bytes + HEADER_BYTES > RIFF_LIMIT
+        self._quantiser = None if kind == "float32" else Quantiser(bits, channels)
+        try:
+            self._file = soundfile.SoundFile(
+                _native(path), "w", rate_hz, channels, subtype, format="RF64" if self._large else "WAV")
+        except (soundfile.LibsndfileError, OSError) as error:
+            raise OutputError(f"{path}: cannot be written ({_detail(error)})") from error
+
+    def __enter__(self) -> WavWriter:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def write(self, block: Samples) -> None:
+        """Append `(frames,)` or `(frames, channels)` float32; PCM is clipped at full scale."""
+        if not self._large and (self.frames + len(block)) * self._frame_bytes + HEADER_BYTES > RIFF_LIMIT:
+            raise OutputError(f"{self.path}: would pass 4 GiB, more than was expected of it")
+        try:
+            self._file.write(block if self._quantiser is None else self._quantiser.push(block))
+        except (soundfile.LibsndfileError, OSError) as error:
+            raise OutputError(f"{self.path}: cannot be written ({_detail(error)}; is the disk full?)") from error
+        self.frames += len(block)
+
+    def close(self) -> None:
+        """Finish the file; closing twice does no harm."""
+        if self._file.closed:
+            return
+        try:
+            self._file.close()
+            if self._quantiser is None:
+                clear_peak_time(self.path)
+        except (soundfile.LibsndfileError, OSError) as error:
+            raise OutputError(f"{self.path}: cannot be finished ({_detail(error)}; is the disk full?)") from error
+
+def _open(path: Path) -> Any:
+    """An open SoundFile, or InputError that says why not."""
+    if not path.is_file():
+        raise InputError(f"{path}: no such file")
+    if not path.stat().st_size:
+        raise InputError(f"{path}: empty file (0 bytes). Leave it out or copy it again")
+    try:
+        return soundfile.SoundFile(_native(path))
+    except (soundfile.LibsndfileError, OSError) as error:
+        raise InputError(
+            f"{path}: not readable as audio ({_detail(error)}). Convert it to WAV or leave it out") from error
+
+
+def _detail(error: Exception) -> str:
+    """What went wrong, without the path."""
+    return str(getattr(error, "error_string", error)).strip().rstrip(".")
+
+
+def _native(path: Path) -> Path | bytes:
+    """The path as the system has it: soundfile refuses names that are no UTF-8, but takes their bytes."""
+    return path if os.name == "nt" else os.fsencode(path)
+
+
+def _frame_bytes(file: Any) -> int:
+    """Bytes of one frame in a PCM file; an estimate from 16 bit for coded ones."""
+    bits = {"PCM_S8": 8, "PCM_U8": 8, "PCM_24": 24, "PCM_32": 32, "FLOAT": 32, "DOUBLE": 64, "ULAW": 8, "ALAW": 8}
+    return int(file.channels) * bits.get(file.subtype, 16) // 8
+
+
+def _tail_reads(file: Any) -> bool:
+    """Whether the last frame that the header counts can be decoded."""
+    try:
+        file.seek(max(file.frames - 1, 0))
+        return len(file.read(1)) == 1
+    except (soundfile.LibsndfileError, OSError):
+        return False
+
+
+def _count_frames(path: Path) -> int:
+    """Decode a damaged file from its start until it fails."""
+    count = 0
+    with _open(path) as file, contextlib.suppress(soundfile.LibsndfileError, OSError):
+        while got := len(file.read(4096, dtype="float32")):
+            count += got
+    return count

@@ -1,0 +1,206 @@
+"""The output folder: whole or not at all.
+
+Everything is written to a hidden folder beside the wanted one (`.NAME.part-PID`, on the same file system) and renamed
+when all is done. A folder that is replaced is moved aside first (`.NAME.old-PID`), put back where the rename fails,
+and deleted only after it. What processes that died have left of either kind is cleaned up on the next start. Place,
+room and what lies in the folder to be replaced are checked before any work starts.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import shutil
+import sys
+from collections.abc import Iterable, Iterator
+from pathlib import Path
+from types import TracebackType
+
+from leveller.errors import OutputError
+
+_active: set[Path] = set()  # work folders of this very process
+
+
+class OutputFolder:
+    """A folder that appears when the work is done; a context manager.
+
+    Leaving it publishes the folder; leaving it by an exception (an interruption too) discards all that was written.
+
+    Parameters
+    ----------
+    path : Path
+        the wanted folder; its parents are made
+    replace : bool
+        allow a folder that exists already to be replaced
+    needed_bytes : int
+        room that the work will take
+    sources : iterable of Path
+        files that must not lie in the folder to be replaced
+
+    Attributes
+    ----------
+    work : Path
+        where to write until it is published
+
+    Raises
+    ------
+    OutputError
+        on entry: exists without `replace`, no folder, holds a source, read-only, no room
+    """
+
+    def __init__(
+        self, path: Path, replace: bool, *, needed_bytes: int = 0, sources: Iterable[Path] = ()
+    ) -> None:
+        self.path = Path(os.path.abspath(path))
+        self.work = self.path.with_name(f".{self.path.name}.part-{os.getpid()}")
+        self._old = self.path.with_name(f".{self.path.name}.old-{os.getpid()}")
+        self._replace, self._needed_bytes, self._sources = replace, needed_bytes, tuple(sources)
+        self._made = False  # the work folder, by this very object
+        self._parents: list[Path] = []  # that were made for it, deepest first
+
+    def __enter__(self) -> OutputFolder:
+        self._check_place()
+        try:
+            self._make()
+            self._check_room()
+        except BaseException:
+            self.discard()
+            raise
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        if kind is None:
+            self.publish()
+        else:
+            self.discard()
+
+    def file(self, name: str) -> Path:
+        """Where to write the file of that name, such as 'stems/Host.wav'; its folder is made.
+
+        Raises
+        ------
+        OutputError
+            where the name leads out of the folder
+        """
+        place = Path(os.path.normpath(self.work / name))
+        if place == self.work or not place.is_relative_to(self.work):
+            raise OutputError(f"{name!r}: leads out of the output folder {self.path}")
+        try:
+            place.parent.mkdir(parents=True, exist_ok=True)
+        except OSError as error:
+            raise OutputError(f"{place.parent}: cannot be made ({error.strerror})") from error
+        return place
+
+    def publish(self) -> None:
+        """Give the work its real name; an older folder of that name is deleted after it.
+
+        Raises
+        ------
+        OutputError
+            where the rename fails; the older folder is in its place again, the work is discarded
+        """
+        moved = False
+        try:
+            if self._replace and self.path.exists():
+                self.path.rename(self._old)
+                moved = True
+            elif self.path.exists():  # made by someone else meanwhile; a rename would take an empty one over
+                raise FileExistsError(17, "exists by now; choose another --out or add --replace")
+            self.work.rename(self.path)
+        except BaseException as error:
+            if moved and not self.path.exists():
+                self._old.rename(self.path)
+            self.discard()
+            if isinstance(error, OSError):
+                raise OutputError(f"{self.path}: the finished folder cannot be put here ({error.strerror})") from error
+            raise
+        _active.discard(self.work)
+        self._made, self._parents = False, []
+        shutil.rmtree(self._old, ignore_errors=True)
+
+    def discard(self) -> None:
+        """Remove all that was written, and the parents that were made for it; doing so twice does no harm."""
+        if self._made:
+            shutil.rmtree(self.work, ignore_errors=True)
+            _active.discard(self.work)
+            self._made = False
+        for parent in self._parents:
+            with contextlib.suppress(OSError):
+                parent.rmdir()  # stays where something else has come into it
+        self._parents = []
+
+    def _check_place(self) -> None:
+        """Refuse a folder that must not be touched."""
+        if not os.path.lexists(self.path):
+            return
+        if not self.path.is_dir() or self.path.is_symlink():
+            raise OutputError(f"{self.path}: exists and is no folder. Choose another --out")
+        if not self._replace:
+            raise OutputError(f"{self.path}: exists already. Choose another --out, or add --replace to replace it")
+        real = self.path.resolve()
+        for keep, what in ((Path.cwd(), "the current folder"), (Path.home(), "your home folder")):
+            if keep.resolve().is_relative_to(real):
+                raise OutputError(f"{self.path}: is or holds {what} and will not be replaced. Choose another --out")
+        for source in self._sources:
+            if source.resolve().is_relative_to(real) or Path(os.path.abspath(source)).is_relative_to(self.path):
+                raise OutputError(f"{self.path}: holds the source {source.name} and will not be replaced. "
+                                  "Choose another --out")
+
+    def _make(self) -> None:
+        """Make parents and the work folder, after cleaning up behind processes that died."""
+        try:
+            missing = [parent for parent in self.path.parents if not parent.exists()]
+            for parent in reversed(missing):
+                parent.mkdir(exist_ok=True)
+                self._parents.insert(0, parent)
+            self._clean_up()
+            self.work.mkdir()
+        except OSError as error:
+            raise OutputError(f"{self.path}: cannot be written here ({error.strerror})") from error
+        self._made = True
+        _active.add(self.work)
+
+    def _check_room(self) -> None:
+        """Refuse where the file system has less room than the work takes."""
+        free = shutil.disk_usage(self.work).free
+        if free < self._needed_bytes:
+            raise OutputError(f"{self.path}: needs {self._needed_bytes / 1e9:.2f} GB, but {free / 1e9:.2f} GB are "
+                              "free. Make room or choose another --out")
+
+    def _clean_up(self) -> None:
+        """Remove what dead processes left; put an older folder back that died between two renames."""
+        for rest in self._rests(".old-"):
+            if self.path.exists():
+                shutil.rmtree(rest, ignore_errors=True)
+            else:
+                rest.rename(self.path)
+                if not self._replace:
+                    raise OutputError(f"{self.path}: exists already (put back after an interruption). "
+                                      "Choose another --out, or add --replace to replace it")
+        for rest in self._rests(".part-"):
+            shutil.rmtree(rest, ignore_errors=True)
+
+    def _rests(self, mark: str) -> Iterator[Path]:
+        """Siblings of that kind whose process is gone."""
+        start = f".{self.path.name}{mark}"
+        for rest in sorted(self.path.parent.iterdir()):
+            pid = rest.name.removeprefix(start)
+            if rest.name.startswith(start) and pid.isdecimal() and rest not in _active and not _alive(int(pid)):
+                yield rest
+
+
+def _alive(pid: int) -> bool:
+    """Whether another process of that number runs; in doubt it does."""
+    if pid == os.getpid():
+        return False  # numbers come again: what this process works on stands in _active
+    if sys.platform == "win32":
+        return True  # signal 0 is no question there
+    try:
+        os.kill(pid, 0)
+    except (ProcessLookupError, OverflowError):
+        return False
+    except OSError:
+        return True
+    return True

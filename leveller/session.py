@@ -1,0 +1,391 @@
+"""Opens a session: a folder, a session.toml or some audio files, checked, named and aligned.
+
+`open_session` settles every doubt about the sources once, at the door, and what it decides it says in `notes`: which
+channels make a track, the session's rate (the most common; a tie takes the higher), what is padded or resampled, and
+what is set aside as a copy or as the recorder's mix. Inner code trusts the `Session` it returns.
+
+Session zero is 0 s; a track's `offset_frames` delay it; the session lasts until the latest end of its tracks. No audio
+is decoded here but the preview: up to a minute of each file, spread evenly.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import math
+from collections import Counter
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from leveller import audio
+from leveller.duplicates import find_duplicates
+from leveller.errors import AutomationError, InputError, LevellerError, SettingsError, nearest
+from leveller.names import safe_name, unique_names
+from leveller.sessionfile import Correction, SessionFile, Skip, TrackEntry, read_corrections, read_session_file
+from leveller.settings import DEFAULT_DELIVERY, Delivery, Settings, delivery_named
+from leveller.units import power_to_db, seconds_to_frames
+
+__all__ = ["AUDIO_SUFFIXES", "Correction", "Session", "SetAside", "Skip", "Track", "open_session", "safe_name"]
+
+SESSION_FILE = "session.toml"
+AUDIO_SUFFIXES = frozenset({
+    ".wav", ".wave", ".bwf", ".rf64", ".w64", ".aif", ".aiff", ".aifc", ".caf", ".au", ".snd", ".flac", ".ogg", ".oga",
+    ".opus", ".mp3",
+    ".m4a", ".aac", ".wma",  # cannot be read, but a voice must not be missing silently: refused, not ignored
+})
+AGREE_CORRELATION = 0.98  # two channels above this are one voice; DESIGN: on loud hops
+LOUD_RANGE_DB = 20.0  # hops this far below the loud ones still count as loud
+LOUD_PERCENTILE = 95.0
+SILENT_POWER = 1e-12  # -120 dBFS: below the last bit of 16
+
+
+@dataclass(frozen=True)
+class Track:
+    """One microphone, or one sound, of the session."""
+
+    name: str  # unique; the stem's file name
+    path: Path
+    channels: tuple[int, ...]  # of the file, from 0; two are averaged, or kept for width 2
+    width: int  # 1, or 2 for a stereo bed
+    role: str  # voice | room | bed
+    offset_frames: int  # silence before it, at the session's rate
+    frames: int  # its own length at the session's rate, without the offset
+    source_rate_hz: int
+    source_frames: int
+    is_float: bool
+    polarity: int  # +1 | -1
+    pan: float  # -1 left .. 1 right
+    trim_db: float
+    high_pass_hz: float | None
+    loud_dbfs: float  # 95th percentile of 10 ms RMS in the preview; -inf where silent
+
+
+@dataclass(frozen=True)
+class SetAside:
+    """A source that is not processed, and why."""
+
+    name: str
+    path: Path
+    why: str
+
+
+@dataclass(frozen=True)
+class Session:
+    """All that is known before the audio is read."""
+
+    title: str
+    rate_hz: int
+    frames: int  # latest end of all tracks
+    tracks: tuple[Track, ...]
+    set_aside: tuple[SetAside, ...]
+    skips: tuple[Skip, ...]
+    corrections: tuple[Correction, ...]
+    delivery: Delivery
+    mix_channels: int
+    settings: Settings
+    notes: tuple[str, ...]  # sentences for the user: padded, split, resampled, taken short
+
+
+@dataclass(frozen=True)
+class _Source:
+    """A file to open and what was said about it."""
+
+    path: Path
+    entry: TrackEntry
+
+
+@dataclass(frozen=True)
+class _Draft:
+    """A track before the session's rate is known."""
+
+    name: str
+    path: Path
+    entry: TrackEntry
+    facts: audio.FileFacts
+    channels: tuple[int, ...]
+    width: int
+    loud_dbfs: float
+
+
+def open_session(
+    sources: Sequence[Path | str],
+    *,
+    delivery: str | None = None,
+    assignments: Mapping[str, Any] | None = None,
+    accept_short: bool = False,
+    corrections: Path | None = None,
+) -> Session:
+    """Open and check a session.
+
+    Parameters
+    ----------
+    sources : sequence of paths
+        one folder, one session.toml, or one or more audio files; a folder's session.toml is used where there is one
+    delivery : str, optional
+        a delivery's name; it replaces what session.toml says of delivery, target and ceiling
+    assignments : mapping, optional
+        settings such as `{"expander.range_db": 18}`, stronger than session.toml
+    accept_short : bool
+        take what is there of a file that is shorter than its header says
+    corrections : Path, optional
+        a corrections.csv, after those of session.toml
+
+    Raises
+    ------
+    InputError, SettingsError, AutomationError
+    """
+    title, said, files, notes = _located([Path(source) for source in sources])
+    settings = Settings().changed(dict(said.settings), where=f"{said.where}: ").changed(
+        assignments or {}, where="--set ")
+    chosen = _delivery(delivery, said)
+    drafts = _drafts(files, accept_short, notes)
+    rate_hz = said.sample_rate or _common_rate(drafts)
+    tracks, set_aside = _without_duplicates(_tracks(drafts, rate_hz), rate_hz)
+    frames = max(track.offset_frames + track.frames for track in tracks)
+    _note_lengths(tracks, rate_hz, frames, notes)
+    mix_channels = _mix_channels(said, chosen, tracks, notes)
+    _check_skips(said, frames / rate_hz)
+    return Session(
+        title=said.title or title, rate_hz=rate_hz, frames=frames, tracks=tracks, set_aside=set_aside,
+        skips=said.skips, corrections=_corrections(said, corrections, tracks, set_aside, frames / rate_hz),
+        delivery=chosen, mix_channels=mix_channels, settings=settings, notes=tuple(notes))
+
+
+def _located(sources: list[Path]) -> tuple[str, SessionFile, list[_Source], list[str]]:
+    """Title, session.toml's words, the files, and notes so far."""
+    if not sources:
+        raise InputError("no source given: expected a folder, a session.toml or audio files")
+    first = sources[0]
+    if len(sources) == 1 and first.suffix.lower() == ".toml":
+        return _from_session_file(first)
+    if len(sources) == 1 and first.is_dir():
+        if (first / SESSION_FILE).is_file():
+            return _from_session_file(first / SESSION_FILE)
+        return _folder_title(first), SessionFile(), _all_of(first), []
+    for source in sources:
+        if source.is_dir() or source.suffix.lower() == ".toml":
+            raise InputError(f"{source}: give one folder, one session.toml, or audio files only")
+    title = first.stem if len(sources) == 1 else _folder_title(first.parent)
+    return title, SessionFile(), [_Source(path, TrackEntry(str(path))) for path in sources], []
+
+
+def _from_session_file(path: Path) -> tuple[str, SessionFile, list[_Source], list[str]]:
+    """A session.toml; without any [[track]] all audio files beside it count."""
+    said = read_session_file(path)
+    folder = path.parent
+    if not said.tracks:
+        return _folder_title(folder), said, _all_of(folder), []
+    beside = _audio_files(folder)
+    sources = []
+    for entry in said.tracks:
+        file = folder / entry.file
+        if not file.is_file():
+            hint = nearest(entry.file, [other.name for other in beside])
+            raise InputError(f"{file}: no such file, but {said.where} names it{hint}")
+        sources.append(_Source(file, entry))
+    named = {source.path.resolve() for source in sources}
+    left = [f"{file.name}: not named in {said.where}, left out" for file in beside if file.resolve() not in named]
+    return _folder_title(folder), said, sources, left
+
+
+def _folder_title(folder: Path) -> str:
+    """A folder's own name, also for '.'."""
+    return folder.resolve().name or "session"
+
+
+def _audio_files(folder: Path) -> list[Path]:
+    """The audio files directly in a folder, by name."""
+    try:
+        names = [path for path in folder.iterdir() if path.is_file()]
+    except OSError as error:
+        raise InputError(f"{folder}: cannot be listed ({error.strerror})") from None
+    files = [path for path in names if not path.name.startswith(".") and path.suffix.lower() in AUDIO_SUFFIXES]
+    return sorted(files, key=lambda path: (path.name.casefold(), path.name))
+
+
+def _all_of(folder: Path) -> list[_Source]:
+    """Every audio file of a folder, or InputError where there is none."""
+    files = _audio_files(folder)
+    if not files:
+        raise InputError(f"{folder}: no audio files directly in this folder (expected .wav, .flac, .mp3 and the like)")
+    return [_Source(path, TrackEntry(path.name)) for path in files]
+
+
+def _delivery(name: str | None, said: SessionFile) -> Delivery:
+    """The delivery that counts: the option's, else session.toml's with its own target and ceiling."""
+    if name is not None:
+        return delivery_named(name)
+    try:
+        base = delivery_named(said.delivery or DEFAULT_DELIVERY)
+    except SettingsError as error:
+        raise SettingsError(f"{said.where}: {error}") from None
+    changes = {"target_lufs": said.target_lufs, "ceiling_dbtp": said.ceiling_dbtp}
+    given: dict[str, Any] = {key: value for key, value in changes.items() if value is not None}
+    return dataclasses.replace(base, **given, source=said.where) if given else base
+
+
+def _drafts(files: list[_Source], accept_short: bool, notes: list[str]) -> list[_Draft]:
+    """Tracks of all files with their final names."""
+    known: dict[Path, tuple[audio.FileFacts, audio.Preview]] = {}
+    drafts: list[_Draft] = []
+    for source in files:
+        if source.path not in known:
+            facts = audio.probe(source.path, accept_short=accept_short)
+            known[source.path] = facts, audio.preview(source.path, facts)
+            if facts.frames < facts.header_frames:
+                notes.append(f"{source.path.name}: {facts.frames / facts.rate_hz:.3f} s of "
+                             f"{facts.header_frames / facts.rate_hz:.3f} s are there and taken")
+        drafts.extend(_drafts_of(source, *known[source.path], notes))
+    names = unique_names([draft.name for draft in drafts])
+    return [dataclasses.replace(draft, name=name) for draft, name in zip(drafts, names, strict=True)]
+
+
+def _drafts_of(
+    source: _Source, facts: audio.FileFacts, heard: audio.Preview, notes: list[str]
+) -> Iterator[_Draft]:
+    """One track, or one a channel."""
+    entry = source.entry
+    base = entry.name or safe_name(source.path.stem)
+    if entry.channel is not None and entry.channel > facts.channels:
+        raise SettingsError(f"{source.path}: channel = {entry.channel}, but the file has {facts.channels}")
+    if entry.channels == "together" and facts.channels > 2:
+        raise SettingsError(f'{source.path}: channels = "together" needs two channels, but the file has '
+                            f"{facts.channels}. Use channel = N")
+
+    def draft(name: str, channels: tuple[int, ...], width: int = 1) -> _Draft:
+        return _Draft(name, source.path, entry, facts, channels, width, _loud_dbfs(heard, channels))
+
+    if entry.channel is not None:
+        suffix = f" ch{entry.channel}" if entry.name is None and facts.channels > 1 else ""
+        yield draft(base + suffix, (entry.channel - 1,))
+    elif facts.channels == 1:
+        yield draft(base, (0,))
+    elif facts.channels == 2 and entry.role == "bed" and entry.channels != "split":
+        yield draft(base, (0, 1), 2)
+    elif facts.channels == 2 and _together(source, heard, notes):
+        yield draft(base, (0, 1))
+    else:
+        yield from (draft(f"{base} ch{n + 1}", (n,)) for n in range(facts.channels))
+
+
+def _together(source: _Source, heard: audio.Preview, notes: list[str]) -> bool:
+    """Whether two channels are one voice; said where it was found out and not told."""
+    if source.entry.channels is not None:
+        return source.entry.channels == "together"
+    correlation = _correlation(heard)
+    if correlation is None:
+        notes.append(f"{source.path.name}: two silent channels, taken as one track")
+        return True
+    one = correlation > AGREE_CORRELATION
+    notes.append(f"{source.path.name}: its two channels {'agree' if one else 'differ'} (correlation "
+                 f"{correlation:.3f}), taken as {'one track' if one else 'two tracks'}")
+    return one
+
+
+def _correlation(heard: audio.Preview) -> float | None:
+    """Correlation of the first two channels over loud hops; None where both are silent, 0 where one is."""
+    total = heard.power[:, 0] + heard.power[:, 1]
+    level = np.percentile(total, LOUD_PERCENTILE)
+    if total.max() <= SILENT_POWER:
+        return None
+    loud = total >= max(level * 10 ** (-LOUD_RANGE_DB / 10), SILENT_POWER)
+    left, right = heard.power[loud, 0].sum(), heard.power[loud, 1].sum()
+    return float(heard.cross[loud].sum() / math.sqrt(left * right)) if left * right > 0 else 0.0
+
+
+def _loud_dbfs(heard: audio.Preview, channels: tuple[int, ...]) -> float:
+    """The level that the loud hops of a track reach; two channels are averaged."""
+    power = heard.power[:, channels[0]]
+    if len(channels) == 2:
+        power = (power + heard.power[:, channels[1]] + 2 * heard.cross) / 4
+    return float(power_to_db(max(float(np.percentile(power, LOUD_PERCENTILE)), 0.0)))
+
+
+def _common_rate(drafts: list[_Draft]) -> int:
+    """The rate of most tracks; a tie takes the higher."""
+    counts = Counter(draft.facts.rate_hz for draft in drafts)
+    return max(counts, key=lambda rate: (counts[rate], rate))
+
+
+def _tracks(drafts: list[_Draft], rate_hz: int) -> list[Track]:
+    """Drafts at the session's rate."""
+    out = []
+    for draft in drafts:
+        entry, facts = draft.entry, draft.facts
+        frames = (2 * facts.frames * rate_hz + facts.rate_hz) // (2 * facts.rate_hz)
+        out.append(Track(
+            name=draft.name, path=draft.path, channels=draft.channels, width=draft.width, role=entry.role,
+            offset_frames=seconds_to_frames(entry.offset_s, rate_hz), frames=max(frames, 1),
+            source_rate_hz=facts.rate_hz, source_frames=facts.frames, is_float=facts.is_float,
+            polarity=entry.polarity, pan=entry.pan, trim_db=entry.trim_db, high_pass_hz=entry.high_pass_hz,
+            loud_dbfs=draft.loud_dbfs))
+    return out
+
+
+def _without_duplicates(tracks: list[Track], rate_hz: int) -> tuple[tuple[Track, ...], tuple[SetAside, ...]]:
+    """The tracks that stay, and those set aside."""
+    frames = max(track.offset_frames + track.frames for track in tracks)
+    candidates = [track.role == "voice" for track in tracks]
+    found = find_duplicates(tracks, candidates=candidates, rate_hz=rate_hz, frames=frames)
+    aside = tuple(SetAside(tracks[i].name, tracks[i].path, found[i]) for i in sorted(found))
+    return tuple(track for i, track in enumerate(tracks) if i not in found), aside
+
+
+def _note_lengths(tracks: tuple[Track, ...], rate_hz: int, frames: int, notes: list[str]) -> None:
+    """Say what is resampled and what is padded."""
+    for track in tracks:
+        if track.source_rate_hz != rate_hz:
+            notes.append(f"{track.name}: resampled from {track.source_rate_hz} to {rate_hz} Hz")
+        missing = frames - track.offset_frames - track.frames
+        if missing:
+            notes.append(f"{track.name}: ends {missing / rate_hz:.3f} s before the session, padded with silence")
+
+
+def _mix_channels(said: SessionFile, delivery: Delivery, tracks: tuple[Track, ...], notes: list[str]) -> int:
+    """1 unless session.toml, the delivery, a pan or a stereo bed asks for 2."""
+    wide = [track.name for track in tracks if track.pan or track.width == 2]
+    asked = 2 if wide or delivery.channels == 2 else 1
+    if said.mix_channels is not None and said.mix_channels < asked:
+        notes.append(f"mix_channels = 1 in {said.where}: pans and stereo are not heard in the mix")
+    elif said.mix_channels is None and asked == 2 and delivery.channels == 1:
+        notes.append(f"the mix has two channels, since {wide[0]} is panned or stereo; {delivery.name} is for one")
+    return said.mix_channels or asked
+
+
+def _check_skips(said: SessionFile, length_s: float) -> None:
+    """A skip must start within the session."""
+    for skip in said.skips:
+        if skip.from_s >= length_s:
+            raise SettingsError(f"{said.where}: [[skip]] from_s = {skip.from_s:g} lies behind the session's end "
+                                f"at {length_s:.3f} s")
+
+
+def _corrections(
+    said: SessionFile, path: Path | None, tracks: Sequence[Track], set_aside: Sequence[SetAside], length_s: float
+) -> tuple[Correction, ...]:
+    """All corrections, each for a track and a time that exist; later ones are stronger."""
+    out = [_checked(c, tracks, set_aside, length_s, said.where, SettingsError) for c in said.corrections]
+    if path is not None:
+        out += [_checked(c, tracks, set_aside, length_s, path.name, AutomationError) for c in read_corrections(path)]
+    return tuple(out)
+
+
+def _checked(
+    correction: Correction, tracks: Sequence[Track], set_aside: Sequence[SetAside], length_s: float, where: str,
+    kind: type[LevellerError],
+) -> Correction:
+    """The correction with its track's name as the session has it."""
+    names = [track.name for track in tracks]
+    name = correction.track
+    if name not in names and name.startswith("'") and name[1:] in names:
+        name = name[1:]  # as our own tables quote a name that a spreadsheet would run
+    if name in [aside.name for aside in set_aside]:
+        raise kind(f"{where}: track {name!r} was set aside and is not processed")
+    if name not in names:
+        raise kind(f"{where}: unknown track {name!r}{nearest(name, names)}; known: {', '.join(names)}")
+    if correction.from_s >= length_s:
+        raise kind(f"{where}: {name}, from_s = {correction.from_s:g} lies behind the session's end at {length_s:.3f} s")
+    return dataclasses.replace(correction, track=name)
