@@ -1,0 +1,107 @@
+"""Measurements in, activity out: who speaks into which microphone, hop by hop, and how sure that is.
+
+The story, each step a module:
+
+1. `tone`      leave out line-up tone and the stretches marked in the session file;
+2. `floor`     the noise floor of every microphone and band;
+3. `seeds`     a few hops per person that are as good as certain, from arrival times or levels;
+4. `coupling`  from the hops labelled so far: how much of every voice each microphone hears;
+5. `bleed`     from the coupling: what the others explain at each microphone, and the evidence for own voice;
+6. back to 4 with the hops in which one microphone clearly has its own voice and no other has, `ROUNDS` times;
+7. `decode`    evidence into states over time.
+
+Nothing here depends on how the recording gains were set, and voice activity is evidence, never a veto.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.attribute.bleed import Evidence, evidence_of
+from leveller.attribute.coupling import Coupling, estimate_coupling
+from leveller.attribute.decode import margins
+from leveller.attribute.floor import noise_floor
+from leveller.attribute.seeds import NOBODY, Labels, first_labels
+from leveller.attribute.tone import steady_tone
+from leveller.measure import Measurements
+from leveller.measure.levels import STEP_DB
+from leveller.session import Session
+from leveller.units import HOPS_PER_S, Bools, seconds_to_hops
+
+ROUNDS = 3
+CLEARLY_OWN = 0.6  # mean nats a band: this microphone has its own voice
+CLEARLY_NOT = 0.2  # ... and this one has not
+CLEARLY_AUDIBLE_DB = 6.0
+TAIL_DB_PER_HOP = 0.8
+
+Grid = npt.NDArray[np.float32]
+
+
+@dataclass(frozen=True)
+class Activity:
+    """Who speaks into which microphone."""
+
+    own: Bools  # (hops, tracks) the microphone's own voice speaks
+    bleed: Bools  # (hops, tracks) not own, and somebody else is heard
+    margin: Grid  # (hops, tracks) nats in favour of own
+    own_to_bleed_db: Grid  # (hops, tracks) level over predicted bleed plus noise
+    audible_db: Grid  # (hops, tracks) level over noise, 0 .. 20
+    floor_db: Grid  # (seconds, tracks, bands) noise
+    coupling: Coupling
+    programme: Bools  # (hops,) False in skipped stretches and steady tone
+    tone: Bools  # (hops,) steady tone found
+
+
+def attribute(m: Measurements, session: Session) -> Activity:
+    """Decide for every microphone and hop whether its own voice speaks."""
+    tone = steady_tone(m.levels)
+    programme = ~tone & ~_skipped(m.hops, session)
+    floor_db = noise_floor(m.levels)
+    labels = first_labels(m, _audible(m, floor_db), programme)
+    for _ in range(ROUNDS):
+        coupling = estimate_coupling(m.levels, floor_db, labels)
+        evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=TAIL_DB_PER_HOP)
+        labels = _relabelled(evidence, programme)
+    margin = margins(np.where(programme[:, None], evidence.own, 0))
+    own = margin > 0
+    return Activity(
+        own=own, bleed=_bleed(own, evidence), margin=margin, own_to_bleed_db=evidence.own_to_bleed_db,
+        audible_db=evidence.audible_db, floor_db=floor_db, coupling=coupling, programme=programme, tone=tone)
+
+
+def _skipped(hops: int, session: Session) -> Bools:
+    """Hops inside a marked stretch."""
+    out = np.zeros(hops, np.bool_)
+    for skip in session.skips:
+        out[seconds_to_hops(skip.from_s) : seconds_to_hops(skip.to_s)] = True
+    return out
+
+
+def _audible(m: Measurements, floor_db: Grid) -> Grid:
+    """Mean over bands of level over noise, clipped to 0 .. 20 dB, second by second to stay small."""
+    out = np.zeros(m.levels.shape[:2], np.float32)
+    for second in range(len(floor_db)):
+        rows = slice(second * HOPS_PER_S, (second + 1) * HOPS_PER_S)
+        over = m.levels[rows].astype(np.float32) * np.float32(STEP_DB) - floor_db[second]
+        out[rows] = np.clip(over, 0, 20).mean(axis=2)
+    return out
+
+
+def _relabelled(evidence: Evidence, programme: Bools) -> Labels:
+    """Hops in which one microphone clearly has its own voice and all others clearly have not."""
+    best = evidence.score.argmax(axis=1)
+    rows = np.arange(len(best))
+    clear = (evidence.score[rows, best] > CLEARLY_OWN) & (evidence.audible_db[rows, best] > CLEARLY_AUDIBLE_DB)
+    if evidence.score.shape[1] > 1:
+        clear &= np.partition(evidence.score, -2, axis=1)[:, -2] < CLEARLY_NOT
+    return np.where(clear & programme, best, NOBODY).astype(np.int16)
+
+
+def _bleed(own: Bools, evidence: Evidence) -> Bools:
+    """Not own, and somebody else's voice is decided or audible here."""
+    others = (own.sum(axis=1, keepdims=True) - own) > 0
+    heard = evidence.audible_db > 3.0
+    return np.asarray(~own & (others | heard))

@@ -1,0 +1,156 @@
+"""What a microphone hears against what the others' voices explain: the evidence for own voice, per hop.
+
+Per block of 5 s and band:
+
+1. *Sources.* The power of each voice at its own microphone is the power there, less noise, less the bleed of the other
+   voices; solved by a few rounds over the interference matrix (`coupling`), so that two people who talk at once do not
+   take each other for bleed of bleed.
+2. *Prediction.* The bleed at m is the sum over the other voices of coupling times source power, held up by the room's
+   decaying tail: what was loud a moment ago still sounds.
+3. *Evidence.* In each band the level over predicted bleed plus noise is about 0 dB in bleed, with a scatter of some 4 to 5 dB, and
+   anywhere up to 30 dB in own speech, which need not fill all bands. So the likelihood of bleed is a normal one and that of own
+   speech a mixture of it with a uniform one; the mean over bands of the log ratio, times `INDEPENDENT` (neighbouring
+   bands and hops are not independent), is the evidence in nats.
+
+Published relatives: level differences between channels beat correlation features (K. Boakye, A. Stolcke, Interspeech 2006);
+sources from an interference matrix (E. Kokkinis et al., 2012; T. Praetzlich et al., ICASSP 2015).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.attribute.coupling import LEAST_EVER, STEP_HOPS, Coupling
+from leveller.measure.levels import STEP_DB, Levels
+from leveller.units import HOPS_PER_S
+
+ROUNDS = 3
+SAFETY_DB = 1.0  # predicted bleed is taken this much higher
+SCATTER_DB = 4.5  # of band level in bleed round its prediction, measured
+OWN_SHARE = 0.2  # of bands in which own speech stands out, at least
+OWN_SPAN_DB = 30.0  # own speech lies anywhere up to this over the bleed
+BELOW = 0.05  # a band under its prediction speaks against own voice
+MOST_PER_BAND = 3.0  # nats
+INDEPENDENT = 3.0  # what 14 bands and three overlapping hops are worth together
+LEANING = 0.36  # nats: in doubt, open
+CLIP = 1.5  # nats a hop can say at most
+AUDIBLE_DB = 8.0  # a hop that stands less over the noise says proportionally less
+RATIO_SPAN_DB = (-6.0, 20.0)
+_TABLE_STEP_DB = 1 / 16
+
+Grid = npt.NDArray[np.float32]
+
+
+@dataclass(frozen=True)
+class Evidence:
+    """Per hop and track."""
+
+    own: Grid  # (hops, tracks) nats in favour of own voice, clipped, weighted by audibility
+    score: Grid  # (hops, tracks) mean log-likelihood ratio of a band, unclipped
+    own_to_bleed_db: Grid  # (hops, tracks) mean over bands of level over predicted bleed plus noise
+    bleed_db: Grid  # (hops, tracks) predicted bleed, power sum over bands
+    audible_db: Grid  # (hops, tracks) mean over bands of level over noise, clipped to 0 .. 20
+
+
+def evidence_of(levels: Levels, floor_db: Grid, coupling: Coupling, *, tail_db_per_hop: float) -> Evidence:
+    """Evidence of all hops.
+
+    Parameters
+    ----------
+    levels : shape=(hops, tracks, bands)
+    floor_db : shape=(seconds, tracks, bands)
+    tail_db_per_hop : float
+        How fast the room decays.
+    """
+    hops, tracks, _ = levels.shape
+    out = {name: np.zeros((hops, tracks), np.float32) for name in Evidence.__dataclass_fields__ if name != "own"}
+    tail = np.zeros(levels.shape[1:], np.float32)
+    table = _likelihood_table()
+    for block, start in enumerate(range(0, hops, STEP_HOPS)):
+        rows = slice(start, min(start + STEP_HOPS, hops))
+        level_db = levels[rows].astype(np.float32) * np.float32(STEP_DB)
+        noise_db = _per_hop(floor_db, rows)
+        bleed, tail = _held(_predicted(level_db, noise_db, coupling, block), tail, tail_db_per_hop)
+        _describe({name: grid[rows] for name, grid in out.items()}, level_db, noise_db, bleed, table)
+    score = _three(out["score"])
+    out["score"] = score
+    weight = np.clip(out["audible_db"] / np.float32(AUDIBLE_DB), 0, 1)
+    own = np.clip(np.float32(INDEPENDENT) * score + np.float32(LEANING), -CLIP, CLIP) * weight
+    return Evidence(own=own, **out)
+
+
+def _per_hop(floor_db: Grid, rows: slice) -> Grid:
+    """The floor of each hop of a block."""
+    seconds = np.minimum(np.arange(rows.start, rows.stop) // HOPS_PER_S, len(floor_db) - 1)
+    return np.asarray(floor_db[seconds])
+
+
+def _predicted(level_db: Grid, noise_db: Grid, coupling: Coupling, block: int) -> Grid:
+    """Power of the others' voices at each microphone, shape=(hops, tracks, bands), without the room's tail."""
+    clean = np.maximum(_power(level_db) - _power(noise_db), 0).transpose(2, 0, 1)  # (bands, hops, tracks)
+    matrix = _power(coupling.at(block)).transpose(2, 0, 1).copy()  # (bands, voice, microphone)
+    diagonal = np.arange(matrix.shape[1])
+    matrix[:, diagonal, diagonal] = 0
+    matrix[:, coupling.heard_hops < LEAST_EVER] = 0
+    source = clean
+    for _ in range(ROUNDS - 1):
+        source = np.maximum(clean - source @ matrix, 0)
+    return np.ascontiguousarray((source @ matrix).transpose(1, 2, 0))
+
+
+def _held(bleed: Grid, before: Grid, decay_db: float) -> tuple[Grid, Grid]:
+    """Bleed held up by a tail: the largest of all earlier values, each decayed since; and the state after it."""
+    out = np.empty_like(bleed)
+    step = 50  # powers of ten stay small
+    growth = _power(np.arange(1, step + 1, dtype=np.float32) * np.float32(decay_db))[:, None, None]
+    for start in range(0, len(bleed), step):
+        part = bleed[start : start + step]
+        grown = part * growth[: len(part)]
+        np.maximum(grown[0], before, out=grown[0])
+        np.maximum.accumulate(grown, axis=0, out=grown)
+        grown /= growth[: len(part)]
+        out[start : start + len(part)] = grown
+        before = grown[-1]
+    return out, before
+
+
+def _describe(out: dict[str, Grid], level_db: Grid, noise_db: Grid, bleed: Grid, table: Grid) -> None:
+    """Fill one block of every grid."""
+    noise = _power(noise_db)
+    expected_db = _db(bleed * np.float32(10 ** (SAFETY_DB / 10)) + noise)
+    ratio_db = level_db - expected_db
+    np.clip(ratio_db, *RATIO_SPAN_DB, out=ratio_db)
+    index = ((ratio_db - np.float32(RATIO_SPAN_DB[0])) * np.float32(1 / _TABLE_STEP_DB) + np.float32(0.5)).astype(np.int16)
+    out["score"][:] = table[index].mean(axis=2)
+    out["own_to_bleed_db"][:] = ratio_db.mean(axis=2)
+    out["bleed_db"][:] = _db(bleed.sum(axis=2))
+    out["audible_db"][:] = np.clip(level_db - noise_db, 0, 20).mean(axis=2)
+
+
+def _likelihood_table() -> Grid:
+    """Log-likelihood ratio own / bleed of one band over its clipped ratio, in nats."""
+    low, high = RATIO_SPAN_DB
+    ratio = np.arange(low, high + _TABLE_STEP_DB / 2, _TABLE_STEP_DB)
+    normal = np.exp(-0.5 * (ratio / SCATTER_DB) ** 2) / (SCATTER_DB * np.sqrt(2 * np.pi))
+    uniform = np.where(ratio > 0, 1.0, BELOW) / OWN_SPAN_DB
+    nats = np.log((1 - OWN_SHARE) + OWN_SHARE * uniform / np.maximum(normal, 1e-6))
+    return np.minimum(nats, MOST_PER_BAND).astype(np.float32)
+
+
+def _three(values: Grid) -> Grid:
+    """Mean over three hops, the edges repeated."""
+    padded = np.concatenate([values[:1], values, values[-1:]])
+    return np.asarray((padded[:-2] + padded[1:-1] + padded[2:]) / np.float32(3))
+
+
+def _power(level_db: Grid) -> Grid:
+    """Power of a level in dB, float32."""
+    return np.asarray(np.exp(level_db * np.float32(np.log(10) / 10)))
+
+
+def _db(power: Grid) -> Grid:
+    """Level of a power in dB, float32, never under -190."""
+    return np.asarray(np.float32(10 / np.log(10)) * np.log(np.maximum(power, np.float32(1e-19))))
