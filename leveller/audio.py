@@ -249,6 +249,13 @@ def open_readers(session: SourceList) -> Iterator[list[TrackReader]]:
         yield [readers[track.name] for track in session.tracks]
 
 
+def file_blocks(path: Path, frames: int) -> Iterator[Samples]:
+    """All of a file in blocks, shape=(frames, channels), at its own rate, the last block shorter."""
+    with _open(path) as file:
+        while len(block := file.read(frames, dtype="float32", always_2d=True)):
+            yield block
+
+
 class WavWriter:
     """Writes one WAV file (RF64 where it would pass 4 GiB); a context manager.
 

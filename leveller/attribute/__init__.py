@@ -16,12 +16,13 @@ Nothing here depends on how the recording gains were set, and voice activity is 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
-from leveller.attribute.bleed import Evidence, evidence_of
-from leveller.attribute.coupling import Coupling, estimate_coupling
+from leveller.attribute.bleed import CLIP, Evidence, evidence_of
+from leveller.attribute.coupling import NONE_DB, Coupling, estimate_coupling
 from leveller.attribute.decode import margins
 from leveller.attribute.floor import noise_floor
 from leveller.attribute.seeds import NOBODY, Labels, first_labels
@@ -52,13 +53,24 @@ class Activity:
     floor_db: Grid  # (seconds, tracks, bands) noise
     coupling: Coupling
     programme: Bools  # (hops,) False in skipped stretches and steady tone
-    tone: Bools  # (hops,) steady tone found
 
 
 def attribute(m: Measurements, session: Session) -> Activity:
-    """Decide for every microphone and hop whether its own voice speaks."""
+    """Decide for every microphone and hop whether its own voice speaks.
+
+    Tracks with another role than `voice` take no part; they have neither own voice nor bleed.
+    """
     tone = steady_tone(m.levels)
     programme = ~tone & ~_skipped(m.hops, session)
+    voices = [i for i, track in enumerate(session.tracks) if track.role == "voice"]
+    if not voices:
+        return _nobody(m, programme)
+    found = _decided(m.of_tracks(voices), programme)
+    return found if len(voices) == len(session.tracks) else _spread_out(found, voices, noise_floor(m.levels))
+
+
+def _decided(m: Measurements, programme: Bools) -> Activity:
+    """The story above, over voice tracks only."""
     floor_db = noise_floor(m.levels)
     labels = first_labels(m, _audible(m, floor_db), programme)
     for _ in range(ROUNDS):
@@ -69,7 +81,36 @@ def attribute(m: Measurements, session: Session) -> Activity:
     own = margin > 0
     return Activity(
         own=own, bleed=_bleed(own, evidence), margin=margin, own_to_bleed_db=evidence.own_to_bleed_db,
-        audible_db=evidence.audible_db, floor_db=floor_db, coupling=coupling, programme=programme, tone=tone)
+        audible_db=evidence.audible_db, floor_db=floor_db, coupling=coupling, programme=programme)
+
+
+def _nobody(m: Measurements, programme: Bools) -> Activity:
+    """A session without a single voice track."""
+    hops, tracks, bands = m.levels.shape
+    nothing, level = np.zeros((hops, tracks), np.bool_), np.zeros((hops, tracks), np.float32)
+    coupling = Coupling(np.full((1, tracks, tracks, bands), NONE_DB, np.float32), np.zeros(tracks, np.int64))
+    return Activity(
+        own=nothing, bleed=nothing, margin=level - CLIP, own_to_bleed_db=level, audible_db=level,
+        floor_db=noise_floor(m.levels), coupling=coupling, programme=programme)
+
+
+def _spread_out(found: Activity, voices: list[int], floor_db: Grid) -> Activity:
+    """The same activity with columns for the tracks that are not voices."""
+    hops, tracks = len(found.own), floor_db.shape[1]
+
+    def wide(grid: npt.NDArray[Any], fill: float) -> npt.NDArray[Any]:
+        out = np.full((hops, tracks), fill, grid.dtype)
+        out[:, voices] = grid
+        return out
+
+    local = np.full((len(found.coupling.local_db), tracks, tracks, floor_db.shape[2]), NONE_DB, np.float32)
+    local[:, np.array(voices)[:, None], voices] = found.coupling.local_db
+    heard = np.zeros(tracks, np.int64)
+    heard[voices] = found.coupling.heard_hops
+    return Activity(
+        own=wide(found.own, False), bleed=wide(found.bleed, False), margin=wide(found.margin, -CLIP),
+        own_to_bleed_db=wide(found.own_to_bleed_db, 0), audible_db=wide(found.audible_db, 0), floor_db=floor_db,
+        coupling=Coupling(local, heard), programme=found.programme)
 
 
 def _skipped(hops: int, session: Session) -> Bools:

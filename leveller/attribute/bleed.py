@@ -136,8 +136,8 @@ def _likelihood_table() -> Grid:
     ratio = np.arange(low, high + _TABLE_STEP_DB / 2, _TABLE_STEP_DB)
     normal = np.exp(-0.5 * (ratio / SCATTER_DB) ** 2) / (SCATTER_DB * np.sqrt(2 * np.pi))
     uniform = np.where(ratio > 0, 1.0, BELOW) / OWN_SPAN_DB
-    nats = np.log((1 - OWN_SHARE) + OWN_SHARE * uniform / np.maximum(normal, 1e-6))
-    return np.minimum(nats, MOST_PER_BAND).astype(np.float32)
+    nats: Grid = np.log((1 - OWN_SHARE) + OWN_SHARE * uniform / np.maximum(normal, 1e-6))
+    return np.asarray(np.minimum(nats, MOST_PER_BAND), np.float32)
 
 
 def _three(values: Grid) -> Grid:

@@ -45,6 +45,7 @@ class Measurements:
 
     levels: Levels  # (hops, tracks, bands) power in dB / STEP_DB
     k_levels: Levels  # (hops, tracks) K-weighted power
+    voice_levels: Levels  # (hops, tracks) the same over 180 Hz: no thumps, no plosives
     rumble: Levels  # (hops, tracks) 50 to 180 Hz
     voiced: Bools  # (hops, tracks) webrtcvad
     arrivals: Arrivals
@@ -55,6 +56,16 @@ class Measurements:
     def hops(self) -> int:
         """Analysis steps in the session."""
         return len(self.levels)
+
+    def of_tracks(self, tracks: list[int]) -> Measurements:
+        """The same measurements for some of the tracks only."""
+        if len(tracks) == self.levels.shape[1]:
+            return self
+        return Measurements(
+            levels=self.levels[:, tracks], k_levels=self.k_levels[:, tracks],
+            voice_levels=self.voice_levels[:, tracks], rumble=self.rumble[:, tracks], voiced=self.voiced[:, tracks],
+            arrivals=self.arrivals.of_tracks(tracks), peaks=tuple(self.peaks[i] for i in tracks),
+            repaired_frames=tuple(self.repaired_frames[i] for i in tracks))
 
 
 def measure(session: Session, *, on_progress: OnProgress = no_progress, block_s: float = BLOCK_S) -> Measurements:
@@ -107,7 +118,7 @@ def _collected(session: Session, meters: list[_TrackMeters], arrival: ArrivalMet
     hops = frames_to_hops(session.frames, session.rate_hz)
     bands = max(1, min((bands_within(t.source_rate_hz) for t in session.tracks), default=BANDS))
     levels = np.full((hops, len(meters), bands), SILENT, np.int16)
-    others = np.full((2, hops, len(meters)), SILENT, np.int16)
+    others = np.full((3, hops, len(meters)), SILENT, np.int16)
     voiced = np.zeros((hops, len(meters)), np.bool_)
     for i, meter in enumerate(meters):
         found, flags = meter.bands.result()[:hops], meter.voice.result()[:hops]
@@ -115,5 +126,5 @@ def _collected(session: Session, meters: list[_TrackMeters], arrival: ArrivalMet
         others[:, : len(found), i] = found[:, BANDS:].T
         voiced[: len(flags), i] = flags
     return Measurements(
-        levels=levels, k_levels=others[0], rumble=others[1], voiced=voiced, arrivals=arrival.result(),
+        levels=levels, k_levels=others[0], voice_levels=others[1], rumble=others[2], voiced=voiced, arrivals=arrival.result(),
         peaks=tuple(m.peak.result() for m in meters), repaired_frames=tuple(m.reader.repaired_frames for m in meters))

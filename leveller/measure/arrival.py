@@ -45,6 +45,26 @@ class Arrivals:
     strength: npt.NDArray[np.float32]  # (windows, pairs) height of the peak, 0 .. 1
     pairs: tuple[tuple[int, int], ...]
 
+    def of_tracks(self, tracks: list[int]) -> Arrivals:
+        """The same windows between some of the tracks only."""
+        place = {track: i for i, track in enumerate(tracks)}
+        kept = [p for p, (i, j) in enumerate(self.pairs) if i in place and j in place]
+        pairs = tuple((place[self.pairs[p][0]], place[self.pairs[p][1]]) for p in kept)
+        lag, strength = self.lag[:, kept], self.strength[:, kept]
+        return Arrivals(self.hop, leads(lag, strength, pairs, len(tracks)), lag, strength, pairs)
+
+
+def leads(
+    lag: npt.NDArray[np.int16], strength: Samples, pairs: tuple[tuple[int, int], ...], tracks: int
+) -> npt.NDArray[np.float32]:
+    """Mean signed peak height of each track against the others, shape=(windows, tracks)."""
+    lead = np.zeros((len(lag), tracks), np.float32)
+    for p, (i, j) in enumerate(pairs):
+        signed = strength[:, p] * np.sign(lag[:, p])  # positive: i hears later
+        lead[:, i] -= signed
+        lead[:, j] += signed
+    return lead / np.float32(max(1, tracks - 1))
+
 
 class ArrivalMeter:
     """Streaming over all tracks at once; `push` aligned 16 kHz blocks, then `result`."""
@@ -84,7 +104,7 @@ class ArrivalMeter:
         lag = np.concatenate([f[0] for f in self._found]) if count else np.zeros((0, pairs), np.int16)
         strength = np.concatenate([f[1] for f in self._found]) if count else np.zeros((0, pairs), np.float32)
         hop = (np.arange(count) * self._stride + WINDOW // 2) // HOP
-        return Arrivals(hop, self._lead(lag, strength), lag, strength, self._pairs)
+        return Arrivals(hop, leads(lag, strength, self._pairs, self._tracks), lag, strength, self._pairs)
 
     def _measure(self, count: int) -> None:
         """The next `count` windows."""
@@ -107,12 +127,3 @@ class ArrivalMeter:
         strength *= np.float32(_BACK / (2 * (self._high - self._low)))
         self._found.append((lag, strength))
         self._next += count * self._stride
-
-    def _lead(self, lag: npt.NDArray[np.int16], strength: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
-        """Mean signed peak height of each track against the others."""
-        lead = np.zeros((len(lag), self._tracks), np.float32)
-        for p, (i, j) in enumerate(self._pairs):
-            signed = strength[:, p] * np.sign(lag[:, p])  # positive: i hears later
-            lead[:, i] -= signed
-            lead[:, j] += signed
-        return lead / np.float32(max(1, self._tracks - 1))

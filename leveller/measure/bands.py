@@ -1,11 +1,13 @@
 """Power per hop in speech bands, with the K-weighted power and the rumble under the bands, from one spectrum.
 
 Everything that decides works at 16 kHz on 10 ms hops: a Hann window of 20 ms round each hop, 14 bands from 180 to
-7000 Hz, about a third-octave to half-octave wide (our choice), averaged over three hops: the power of one window of
-noise-like sound scatters by 6 dB, that of three by 4. K-weighted power and rumble stay as fast as the hop. The periodic Hann window leaks DC into the first two bins only (0 and 50 Hz), which nothing here uses.
+7000 Hz, about a third-octave to half-octave wide (our choice), averaged over three hops, because the power of a single
+window scatters. K-weighted power and rumble stay as fast as the hop. The periodic Hann window leaks DC into the first
+two bins only (0 and 50 Hz), which nothing here but the K-weighted power uses, and there they weigh next to nothing.
 
 K-weighted power is the same spectrum times |H(f)|^2 of ITU-R BS.1770-5; it misses what lies over 8 kHz, which for
-speech is below 0.1 dB. It serves to compare own speech hop by hop; the delivered mix is measured at full rate.
+speech is a small part. It serves to compare own speech hop by hop; the delivered mix is measured at full rate. Ride
+and compressor listen to it without the rumble, so that thumps and plosives do not drive them.
 """
 
 from __future__ import annotations
@@ -32,9 +34,9 @@ def bands_within(rate_hz: int) -> int:
 
 
 class BandMeter:
-    """Streaming; `push` 16 kHz samples, then `result`: levels, shape=(hops, BANDS + 2), int16.
+    """Streaming; `push` 16 kHz samples, then `result`: levels, shape=(hops, BANDS + 3), int16.
 
-    The last two columns are K-weighted power and rumble.
+    The last three columns are K-weighted power, the same without the rumble, and the rumble.
     """
 
     def __init__(self) -> None:
@@ -58,7 +60,7 @@ class BandMeter:
         done = list(self._levels)
         for piece, frames in self._pieces.rest():
             done.append(self._measure(piece[0])[: -(-frames // HOP)])
-        return np.concatenate(done) if done else np.empty((0, BANDS + 2), np.int16)
+        return np.concatenate(done) if done else np.empty((0, BANDS + 3), np.int16)
 
     def _measure(self, samples: npt.NDArray[np.float32]) -> Levels:
         """One second's levels."""
@@ -70,8 +72,12 @@ class BandMeter:
         power += np.square(spectrum.imag)
         power *= self._scale
         banded = np.add.reduceat(power[:, : self._starts[-1]], self._starts[:-1], axis=1)
-        out = np.empty((len(power) - 2, BANDS + 2), np.float32)
+        out = np.empty((len(power) - 2, BANDS + 3), np.float32)
         out[:, :BANDS] = (banded[:-2] + banded[1:-1] + banded[2:]) / np.float32(3)
-        out[:, BANDS + 1] = power[1:-1, self._rumble[0] : self._rumble[1]].sum(axis=1)
-        out[:, BANDS] = (power[1:-1] * self._k_weight).sum(axis=1)
+        middle = power[1:-1]
+        out[:, BANDS + 2] = middle[:, self._rumble[0] : self._rumble[1]].sum(axis=1)
+        middle *= self._k_weight
+        low = middle[:, : self._rumble[1]].sum(axis=1)
+        out[:, BANDS + 1] = middle[:, self._rumble[1] :].sum(axis=1)
+        out[:, BANDS] = out[:, BANDS + 1] + low
         return power_to_level(out)

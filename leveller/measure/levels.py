@@ -1,8 +1,8 @@
 """Levels held small: 16-bit integers in steps of 1/512 of a doubling of power.
 
 An hour of one track has 360 000 hops with 16 levels each. As float32 that is 23 MB, as int16 half of it, with steps of
-0.006 dB. Steps of a power of two (and not, say, hundredths of a dB) have a purpose: a source turned up by exactly 6.02 dB gives
-exactly shifted integers, so that a decision cannot hang on how the recording gains were set.
+0.006 dB. Steps of a power of two (and not, say, hundredths of a dB) have a purpose: a source of exactly twice the
+amplitude gives exactly shifted integers, so that no decision can hang on how the recording gains were set.
 """
 
 from __future__ import annotations

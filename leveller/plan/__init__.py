@@ -1,0 +1,153 @@
+"""Measurements and activity in, gain breakpoints out: all decisions, no samples.
+
+For each voice, in this order: a static `trim` that brings it to `VOICE_LUFS`, the `expander`, the slow `ride`, the gentle
+`compressor`. Every part is a curve in dB at hop edges; their sum is the track's gain. `thinning` takes the curves to the
+fewest rows, rounded to 0.01 dB, and from then on the rows *are* the plan: the automation file holds them and the
+renderer reads nothing else.
+
+Roles: `room` keeps its trim from the session file and is never expanded; `bed` likewise.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.attribute import Activity
+from leveller.measure import Measurements
+from leveller.measure.levels import level_to_db
+from leveller.plan.compressor import compressor_nodes_db
+from leveller.plan.expander import auto_range_db, expander_nodes_db, opened
+from leveller.plan.levels import k_power, level_lufs, own_speech
+from leveller.plan.ride import ride_nodes_db
+from leveller.plan.thinning import kept_rows
+from leveller.plan.trim import trim_nodes_db
+from leveller.session import Session
+from leveller.settings import AUTO
+from leveller.units import Bools
+
+PARTS = ("auto_trim", "expander", "ride", "compressor")
+TOLERANCE_DB = 0.1
+MOST_ROWS = 1_000_000
+GAIN_LIMITS_DB = (-120.0, 40.0)
+STATES = ("silence", "bleed", "own")
+CAUSES = ("hold", "trim", "opening", "closing", "ride", "compressor")
+
+Nodes = npt.NDArray[np.float32]
+
+
+@dataclass(frozen=True)
+class TrackGain:
+    """Breakpoints of one track: linear in dB between rows, gain = sum of the parts, in hundredths of a dB."""
+
+    hop: npt.NDArray[np.int64]  # (rows,) hop edges, never falling; a step is two rows at one hop
+    parts_cdb: npt.NDArray[np.int32]  # (rows, 4) in the order of `PARTS`
+    gain_cdb: npt.NDArray[np.int32]  # (rows,)
+    state: npt.NDArray[np.int8]  # (rows,) index into `STATES`, from this row on
+    cause: npt.NDArray[np.int8]  # (rows,) index into `CAUSES`: what moves the gain from this row on
+
+
+@dataclass(frozen=True)
+class GainPlan:
+    """The gain of every track over time."""
+
+    hops: int
+    tracks: tuple[TrackGain, ...]
+    range_db: tuple[float, ...]  # of each track's expander; 0 where there is none
+
+
+def make_plan(m: Measurements, activity: Activity, session: Session) -> GainPlan:
+    """Decide the gain of every track."""
+    counted = own_speech(activity)
+    voices = [i for i, track in enumerate(session.tracks) if track.role == "voice"]
+    trims = {i: trim_nodes_db(m, activity, counted, i, settings=session.settings.trim) for i in voices}
+    ranges = _ranges(activity, session, voices, trims)
+    open_ = np.ones_like(activity.own)
+    if activity.own.any():
+        lone = len(voices) == 1
+        open_[:, voices] = opened(activity.own[:, voices], settings=session.settings.expander, lone=lone)
+    curves = []
+    for i, track in enumerate(session.tracks):
+        if i in trims:
+            parts = _voice_parts(m, activity, session, i, counted[:, i], open_[:, i], trims[i], ranges[i])
+        else:
+            parts = np.zeros((m.hops + 1, len(PARTS)), np.float32)
+        parts[:, 0] += track.trim_db
+        curves.append(parts)
+    return GainPlan(m.hops, _thinned(curves, activity), tuple(ranges))
+
+
+def _ranges(activity: Activity, session: Session, voices: list[int], trims: dict[int, Nodes]) -> list[float]:
+    """Expander range of every track."""
+    wanted = session.settings.expander.range_db
+    out = [0.0] * len(session.tracks)
+    middle = np.array([float(np.median(trims[i])) for i in voices], np.float32)
+    coupling = activity.coupling.overall_db[np.ix_(voices, voices)]
+    auto = auto_range_db(coupling, activity.coupling.heard_hops[voices], middle)
+    for place, i in enumerate(voices):
+        out[i] = float(auto[place]) if wanted == AUTO else float(wanted)
+    return out
+
+
+def _voice_parts(
+    m: Measurements, activity: Activity, session: Session, i: int, counted: Bools, open_: Bools, trim: Nodes,
+    range_db: float,
+) -> Nodes:
+    """All parts of one voice, shape=(hops + 1, parts); the trim makes up for what ride and compressor take."""
+    settings = session.settings
+    expander = expander_nodes_db(open_, activity.own_to_bleed_db[:, i], range_db=range_db, settings=settings.expander)
+    power = k_power(m, i)
+    level = level_lufs(power * _per_hop_gain(trim), counted)
+    if level is None:
+        return np.stack([trim, expander, np.zeros_like(trim), np.zeros_like(trim)], axis=1)
+    speech_db = level_to_db(m.voice_levels[:, i]) + _middles(trim)
+    usual_db = 10 * np.log10(np.mean(10 ** (speech_db[counted] / 10)))
+    ride = ride_nodes_db(speech_db - usual_db, counted, open_ & ~activity.own[:, i], settings=settings.ride)
+    compressor = compressor_nodes_db(
+        speech_db - usual_db + _middles(ride), activity.own[:, i], settings=settings.compressor)
+    after = level_lufs(power * _per_hop_gain(trim + ride + compressor), counted)
+    if settings.trim.enabled and after is not None:
+        trim = trim + np.float32(level - after)
+    return np.stack([trim, expander, ride, compressor], axis=1)
+
+
+def _middles(nodes: Nodes) -> Nodes:
+    """Gain in the middle of each hop."""
+    return np.asarray((nodes[:-1] + nodes[1:]) / 2)
+
+
+def _per_hop_gain(nodes: Nodes) -> Nodes:
+    """Power gain of each hop."""
+    return np.asarray(10 ** (_middles(nodes) / 10))
+
+
+def _thinned(curves: list[Nodes], activity: Activity) -> tuple[TrackGain, ...]:
+    """Curves as rows; the tolerance widens only where a very long session would pass `MOST_ROWS`."""
+    tolerance = TOLERANCE_DB * 0.8  # rounding to 0.01 dB, four parts, takes the rest
+    while True:
+        rows = [kept_rows(np.column_stack([c, c.sum(axis=1)]), tolerance) for c in curves]
+        if sum(map(len, rows)) <= MOST_ROWS:
+            return tuple(_track_gain(c, r, activity, i) for i, (c, r) in enumerate(zip(curves, rows, strict=True)))
+        tolerance *= 1.5
+
+
+def _track_gain(curve: Nodes, rows: npt.NDArray[np.int64], activity: Activity, track: int) -> TrackGain:
+    """Rounded rows of one track with state and cause."""
+    parts = np.rint(curve[rows].astype(np.float64) * 100).astype(np.int32)
+    low, high = (round(100 * limit) for limit in GAIN_LIMITS_DB)
+    parts[:, 0] += np.clip(parts.sum(axis=1), low, high) - parts.sum(axis=1)
+    hop = np.minimum(rows, len(activity.own) - 1)
+    state = np.where(activity.own[hop, track], 2, np.where(activity.bleed[hop, track], 1, 0)).astype(np.int8)
+    return TrackGain(rows, parts, parts.sum(axis=1, dtype=np.int32), state, _causes(parts))
+
+
+def _causes(parts: npt.NDArray[np.int32]) -> npt.NDArray[np.int8]:
+    """What moves the gain most from each row to the next."""
+    moves = np.diff(parts, axis=0, append=parts[-1:])
+    most = np.abs(moves).argmax(axis=1)
+    named = np.array([CAUSES.index(c) for c in ("trim", "opening", "ride", "compressor")], np.int8)[most]
+    named[(most == 1) & (moves[:, 1] < 0)] = CAUSES.index("closing")
+    named[~moves.any(axis=1)] = CAUSES.index("hold")
+    return np.asarray(named)

@@ -1,0 +1,44 @@
+"""Own speech and its K-weighted level, as every levelling step hears it: bleed, pauses and noise are left out."""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.attribute import Activity
+from leveller.measure import Measurements
+from leveller.measure.levels import level_to_db
+from leveller.measure.loudness import power_to_lufs
+from leveller.units import Bools
+
+SURE_NATS = 1.0  # of the decision, for a hop to count
+AUDIBLE_DB = 6.0  # over the noise
+QUIET_DB = 25.0  # under the mean of own speech: the gate of the level
+LEAST_HOPS = 30  # own speech shorter than this has no level
+
+Grid = npt.NDArray[np.float32]
+
+
+def own_speech(activity: Activity) -> Bools:
+    """Hops of surely own, clearly audible speech while nobody else speaks, shape=(hops, tracks)."""
+    alone = activity.own.sum(axis=1, keepdims=True) == 1
+    sure = activity.own & (activity.margin > SURE_NATS) & (activity.audible_db > AUDIBLE_DB)
+    counted = sure & activity.programme[:, None]
+    for track in range(counted.shape[1]):  # somebody who is always talked over still has a level
+        if np.count_nonzero(counted[:, track] & alone[:, 0]) >= LEAST_HOPS:
+            counted[:, track] &= alone[:, 0]
+    return np.asarray(counted)
+
+
+def k_power(m: Measurements, track: int) -> Grid:
+    """K-weighted power of one track per hop, shape=(hops,)."""
+    return np.asarray(10 ** (level_to_db(m.k_levels[:, track]) / 10), np.float32)
+
+
+def level_lufs(power: npt.NDArray[np.floating], counted: Bools) -> float | None:
+    """Level of the counted hops, gated `QUIET_DB` under their mean; None where there is too little."""
+    own = power[counted]
+    if len(own) < LEAST_HOPS:
+        return None
+    gate = own.mean(dtype=np.float64) * 10 ** (-QUIET_DB / 10)
+    return float(power_to_lufs(own[own > gate].mean(dtype=np.float64)))

@@ -1,0 +1,110 @@
+"""The slow ride: one hand on one fader, following a voice that leans back and comes forward.
+
+Method: own speech in pieces of `CELL_S`; the level of a moment is the mean of the pieces round it under a Gaussian window, both
+ways in time, drawn towards the voice's overall level where there is little speech. Pieces far from the voice's usual
+level (laughter, whispers) do not count: a whisper stays a whisper. Only a part of the deviation is taken out, so
+that phrases keep their weight. The gain then moves within `rate_db_s`, and stands still in pauses in which the
+microphone is open: there only room tone would be heard to move.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller import settings as settings_
+from leveller.units import HOPS_PER_S, Bools
+
+CELL_S = 0.25
+STRENGTH = 0.85
+PRIOR_CELLS = 2.0  # as much as half a second of speech at the usual level
+UNUSUAL_DB = 9.0  # pieces further from the moment's level are laughter or whispers
+
+Grid = npt.NDArray[np.float32]
+_CELL = round(CELL_S * HOPS_PER_S)
+
+
+def ride_nodes_db(level_db: Grid, counted: Bools, still: Bools, *, settings: settings_.Ride) -> Grid:
+    """Gain of one voice at hop edges, shape=(hops + 1,).
+
+    Parameters
+    ----------
+    level_db : shape=(hops,)
+        K-weighted level after the trim, against where the voice shall lie.
+    counted : shape=(hops,)
+        Own speech that may be listened to.
+    still : shape=(hops,)
+        Open, but the voice is silent: the gain must not move.
+    """
+    hops = len(level_db)
+    if not settings.enabled or np.count_nonzero(counted) < 2 * _CELL:
+        return np.zeros(hops + 1, np.float32)
+    power, weight = _cells(level_db, counted)
+    wanted = -STRENGTH * _smoothed(power, weight, settings.window_s)
+    wanted = _within_rate(np.clip(wanted, -settings.range_db, settings.range_db), settings.rate_db_s * CELL_S)
+    at = np.clip((np.arange(hops + 1) - _CELL / 2) / _CELL, 0, len(wanted) - 1)
+    return np.asarray(_standing(np.interp(at, np.arange(len(wanted)), wanted), still), np.float32)
+
+
+def _cells(level_db: Grid, counted: Bools) -> tuple[Grid, Grid]:
+    """Level of each piece in dB and its weight (share of it that is speech)."""
+    cells = -(-len(level_db) // _CELL)
+    power = np.zeros(cells * _CELL, np.float32)
+    power[: len(level_db)] = np.where(counted, 10 ** (level_db / 10), 0)
+    count = np.zeros(cells * _CELL, np.float32)
+    count[: len(level_db)] = counted
+    total, heard = power.reshape(cells, _CELL).sum(axis=1), count.reshape(cells, _CELL).sum(axis=1)
+    level = 10 * np.log10(np.maximum(total, 1e-12) / np.maximum(heard, 1))
+    return np.asarray(np.where(heard > 0, level, 0), np.float32), np.asarray(heard / _CELL, np.float32)
+
+
+def _smoothed(level: Grid, weight: Grid, window_s: float) -> Grid:
+    """Deviation of each moment from the usual level; two rounds, the second without unusual pieces."""
+    sigma = window_s / CELL_S / 4
+    reach = int(np.ceil(3 * sigma))
+    kernel = np.exp(-0.5 * (np.arange(-reach, reach + 1) / sigma) ** 2)
+    usual = np.full(len(level), np.average(level, weights=weight))
+    for _ in range(2):
+        heard = weight * (np.abs(level - usual) < UNUSUAL_DB) * 10 ** (np.minimum(level, 6) / 20)
+        top = np.convolve(level * heard, kernel, "full")[reach : reach + len(level)]
+        bottom = np.convolve(heard, kernel, "full")[reach : reach + len(level)]
+        usual = top / (bottom + PRIOR_CELLS)
+    mean = np.average(usual, weights=weight)
+    return np.asarray(usual - mean, np.float32)
+
+
+def _within_rate(wanted: Grid, step_db: float) -> Grid:
+    """The curve nearest to the wanted one whose steps stay within bounds: mean of its upper and lower envelope."""
+    upper, lower = wanted.astype(np.float64), wanted.astype(np.float64)
+    ramp = np.arange(len(wanted)) * step_db
+    upper = np.maximum(np.maximum.accumulate(upper + ramp) - ramp,
+                       (np.maximum.accumulate((upper + ramp[::-1])[::-1])[::-1]) - ramp[::-1])
+    lower = np.minimum(np.minimum.accumulate(lower - ramp) + ramp,
+                       (np.minimum.accumulate((lower - ramp[::-1])[::-1])[::-1]) + ramp[::-1])
+    return np.asarray((upper + lower) / 2, np.float32)
+
+
+def _standing(curve: npt.NDArray[np.floating], still: Bools) -> npt.NDArray[np.floating]:
+    """The curve with its movement during `still` moved to the stretch before the voice falls silent."""
+    moves = np.diff(curve)
+    if not still.any():
+        return curve
+    ends = np.flatnonzero(np.diff(np.concatenate([still.astype(np.int8), [0]])) == -1)
+    starts = np.flatnonzero(np.diff(np.concatenate([[0], still.astype(np.int8)])) == 1)
+    total = np.concatenate([[0], np.cumsum(moves)])
+    for first, last in zip(starts.tolist(), ends.tolist(), strict=True):
+        owed = total[last + 1] - total[first]
+        moves[first : last + 1] = 0
+        room = _movable(still, last + 1)
+        if room > 0:
+            moves[last + 1 : last + 1 + room] += owed / room
+        elif first > 0:
+            room = min(first, HOPS_PER_S)
+            moves[first - room : first] += owed / room
+    return np.concatenate([curve[:1], curve[0] + np.cumsum(moves)])
+
+
+def _movable(still: Bools, at: int) -> int:
+    """Hops from here on, at most one second, that are not still."""
+    part = still[at : at + HOPS_PER_S]
+    return int(part.argmax()) if part.any() else len(part)

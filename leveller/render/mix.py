@@ -1,0 +1,212 @@
+"""Stems and their sum, then make-up gain and limiter: no decisions about microphones, only what the plan says.
+
+Pass over the sources: each track is read, gets its gain and its place, and is written as a stem; the sum goes to a temporary
+float file while its loudness and true peak are measured. From these two readings the make-up gain is found without touching audio
+again (`limiter.find_make_up`). One pass over the sum then writes the mix and measures it as written; should its
+loudness or true peak miss by more than the reading can tell, make-up or ceiling are corrected and the pass repeated.
+Last, the stems take the make-up gain in place, so that they add up to the mix before the limiter.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.audio import FloatSpill, TrackReader, WavWriter, file_blocks, open_readers, scale_float_wav
+from leveller.lanes import walk
+from leveller.measure.loudness import Loudness, LoudnessMeter, short_term_lufs
+from leveller.measure.peaks import TruePeakMeter
+from leveller.plan import GainPlan
+from leveller.render.gain import GainCurve
+from leveller.render.limiter import LimiterSummary, MakeUp, apply_nodes, find_make_up, summarise
+from leveller.session import Session, Track
+from leveller.settings import Delivery, Limiter
+from leveller.units import db_to_gain
+
+Samples = npt.NDArray[np.float32]
+OnProgress = Callable[[str, float, float], None]
+
+BLOCK_S = 2.0
+LOUDNESS_SLACK_LU = 0.03
+PEAK_SLACK_DB = 0.0005
+MOST_ROUNDS = 4
+LEVELS = ("before-limiter", "limited")
+
+
+@dataclass(frozen=True)
+class Mix:
+    """The mix as written."""
+
+    delivery: Delivery
+    channels: int
+    loudness: Loudness
+    true_peak_dbtp: float
+    true_peak_s: float
+    make_up_db: float
+    limiter_db: npt.NDArray[np.float32]  # gain at the edges of its cells
+    cell_s: float
+    limiting: LimiterSummary
+    reason: str  # why the target is out of reach; empty where it is met
+
+    @property
+    def met(self) -> bool:
+        """On target within 0.1 LU and not over the ceiling."""
+        near = abs(self.loudness.integrated_lufs - self.delivery.target_lufs) <= 0.1
+        return near and self.true_peak_dbtp <= self.delivery.ceiling_dbtp + 0.005
+
+    @property
+    def short_term_lufs(self) -> npt.NDArray[np.float64]:
+        """Short-term loudness at the end of each hop from 3 s on."""
+        return short_term_lufs(self.loudness.cells)
+
+
+def render(
+    session: Session, plan: GainPlan, work: Path, *, stems: str = LEVELS[0], on_progress: OnProgress,
+    block_s: float = BLOCK_S,
+) -> Mix:
+    """Write `stems/` and `mix.wav` below `work`.
+
+    Parameters
+    ----------
+    stems : "before-limiter" or "limited"
+        Float stems that add up to the mix before the limiter, or 24-bit ones that add up to `mix.wav`.
+    """
+    frames = round(block_s * session.rate_hz)
+    paths = [work / "stems" / f"{track.name}.wav" for track in session.tracks]
+    paths[0].parent.mkdir(exist_ok=True)
+    with FloatSpill(work / ".sum", session.mix_channels) as spill:
+        bus = Bus(session.rate_hz, session.mix_channels, spill)
+        _write_stems(session, plan, paths, frames, bus, on_progress)
+        mix = bus.deliver(work / "mix.wav", session.delivery, session.settings.limiter, frames, on_progress)
+    for path in paths:
+        if stems == LEVELS[0]:
+            scale_float_wav(path, float(db_to_gain(mix.make_up_db)))
+        else:
+            _limit_stem(path, mix, session.rate_hz, frames)
+    return mix
+
+
+class Bus:
+    """The sum on its way to the mix: spilled and measured as it grows, then delivered."""
+
+    def __init__(self, rate_hz: int, channels: int, spill: FloatSpill) -> None:
+        self._rate_hz, self._channels, self._spill = rate_hz, channels, spill
+        self._loudness = LoudnessMeter(rate_hz, channels)
+        self._peaks = TruePeakMeter(rate_hz, channels)
+
+    def push(self, block: Samples) -> None:
+        """Add the next block of the sum."""
+        self._spill.append(block)
+        self._loudness.push(block)
+        self._peaks.push(block)
+
+    def deliver(
+        self, path: Path, delivery: Delivery, limiter: Limiter, frames: int, on_progress: OnProgress
+    ) -> Mix:
+        """Write the mix on target under the ceiling; the reading is of what was written."""
+        cells, peak_cells, cell_s = self._loudness.cells(), self._peaks.cells(), self._peaks.cell_frames / self._rate_hz
+        target, ceiling = delivery.target_lufs, delivery.ceiling_dbtp
+        for _ in range(MOST_ROUNDS):
+            make_up = find_make_up(
+                cells, peak_cells, target_lufs=target, ceiling_dbtp=ceiling, settings=limiter, cell_s=cell_s)
+            mix = self._write(path, make_up, delivery, frames, cell_s, on_progress)
+            off = delivery.target_lufs - mix.loudness.integrated_lufs
+            over = mix.true_peak_dbtp - delivery.ceiling_dbtp
+            if make_up.reason or not math.isfinite(off) or (abs(off) <= LOUDNESS_SLACK_LU and over <= PEAK_SLACK_DB):
+                break
+            target += off if abs(off) > LOUDNESS_SLACK_LU else 0.0
+            ceiling -= max(0.0, over)
+        return mix
+
+    def _write(
+        self, path: Path, make_up: MakeUp, delivery: Delivery, frames: int, cell_s: float, on_progress: OnProgress
+    ) -> Mix:
+        """One pass over the sum."""
+        loudness, peaks = LoudnessMeter(self._rate_hz, self._channels), TruePeakMeter(self._rate_hz, self._channels)
+        total = self._spill.frames / self._rate_hz
+        at = 0
+        with WavWriter(path, self._rate_hz, self._channels, "pcm24", expected_frames=self._spill.frames) as writer:
+            for block in self._spill.blocks(frames):
+                out = apply_nodes(block, make_up.nodes_db, first_frame=at, cell_frames=peaks.cell_frames,
+                                  make_up_db=make_up.make_up_db)
+                writer.write(out)
+                loudness.push(out)
+                peaks.push(out)
+                at += len(block)
+                on_progress("mix", at / self._rate_hz, total)
+        reading = peaks.result()
+        return Mix(delivery, self._channels, loudness.result(), reading.true_peak_dbtp, reading.true_peak_s,
+                   make_up.make_up_db, make_up.nodes_db, cell_s, summarise(make_up.nodes_db, cell_s=cell_s),
+                   make_up.reason)
+
+
+def _write_stems(
+    session: Session, plan: GainPlan, paths: list[Path], frames: int, bus: Bus, on_progress: OnProgress
+) -> None:
+    """One pass over the sources; the sum goes to the bus."""
+    blocks = -(-session.frames // frames)
+    hops_per_block = round(frames / session.rate_hz * 100)
+    length_s = session.frames / session.rate_hz
+    with open_readers(session) as readers:
+        lanes = [
+            _StemLane(reader, track, GainCurve(gain, plan.hops, session.rate_hz),
+                      WavWriter(path, session.rate_hz, session.mix_channels, "float32", expected_frames=session.frames),
+                      session.mix_channels)
+            for reader, track, gain, path in zip(readers, session.tracks, plan.tracks, paths, strict=True)
+        ]
+
+        def step(lane: int, block: int) -> Samples:
+            return lanes[lane].next(min(frames, session.frames - block * frames), block * hops_per_block)
+
+        try:
+            for block, row in enumerate(walk(step, lanes=len(lanes), blocks=blocks)):
+                total = row[0].copy()
+                for stem in row[1:]:
+                    total += stem
+                bus.push(total)
+                on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
+        finally:
+            for lane in lanes:
+                lane.writer.close()
+
+
+class _StemLane:
+    """One track on its way from source to stem."""
+
+    def __init__(self, reader: TrackReader, track: Track, curve: GainCurve, writer: WavWriter, channels: int) -> None:
+        self.writer = writer
+        self._reader, self._curve, self._channels = reader, curve, channels
+        self._places = pan_gains(track.pan) if track.width == 1 and channels == 2 else None
+
+    def next(self, frames: int, first_hop: int) -> Samples:
+        """Read, apply the gain, place, write; returns the stem's block."""
+        block = self._curve.apply(self._reader.read(frames), first_hop)
+        if self._places is not None:
+            block = block[:, None] * self._places
+        elif block.ndim == 2 and self._channels == 1:
+            block = block.mean(axis=1)
+        self.writer.write(block)
+        return block
+
+
+def pan_gains(pan: float) -> Samples:
+    """Left and right gain of a place from -1 to 1: sine / cosine law, -3.01 dB each in the middle."""
+    angle = (pan + 1) * math.pi / 4
+    return np.array([math.cos(angle), math.sin(angle)], np.float32)
+
+
+def _limit_stem(path: Path, mix: Mix, rate_hz: int, frames: int) -> None:
+    """Replace a float stem by a 24-bit one that has make-up and the limiter's gain."""
+    limited = path.with_suffix(".limited")
+    at = 0
+    with WavWriter(limited, rate_hz, mix.channels, "pcm24") as writer:
+        for block in file_blocks(path, frames):
+            writer.write(apply_nodes(block, mix.limiter_db, first_frame=at, cell_frames=round(mix.cell_s * rate_hz),
+                                     make_up_db=mix.make_up_db))
+            at += len(block)
+    limited.replace(path)
