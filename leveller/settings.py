@@ -58,7 +58,7 @@ class Ride:
 
     enabled: bool = switch(True, "off leaves each voice at its static trim")
     range_db: float = setting(6.0, "dB", 0, 20, "most it moves either way")
-    window_s: float = setting(8.0, "s", 1, 60, "own speech it averages over, both ways in time")
+    window_s: float = setting(40.0, "s", 1, 120, "it averages over this, both ways; shorter flattens phrases")
     rate_db_s: float = setting(1.0, "dB/s", 0.05, 10, "slower than the ear takes for a level step")
 
 
@@ -67,7 +67,7 @@ class Compressor:
     """Gentle soft-knee compressor (JAES 60(6), 2012), threshold relative to the voice's own level."""
 
     enabled: bool = switch(True, "off leaves the dynamics within a phrase as spoken")
-    threshold_db: float = setting(4.0, "dB over the voice's level", -20, 30, "works on the loudest syllables only")
+    threshold_db: float = setting(8.0, "dB over the voice's level", -20, 30, "works on the loudest syllables only")
     ratio: float = setting(2.0, ":1", 1, 20, "common practice, no source: 2 to 3 for speech")
     knee_db: float = setting(6.0, "dB", 0, 24, "soft onset")
     attack_s: float = setting(0.01, "s", 0.001, 1, "common practice, no source: 5 to 20 ms for speech")

@@ -8,14 +8,15 @@ The story, each step a module:
 4. `coupling`  from the hops labelled so far: how much of every voice each microphone hears;
 5. `bleed`     from the coupling: what the others explain at each microphone, and the evidence for own voice;
 6. back to 4 with the hops in which one microphone clearly has its own voice and no other has, `ROUNDS` times;
-7. `decode`    evidence into states over time.
+7. `decode`    evidence into states over time;
+8. `knobs`     recording gains that were turned in the middle.
 
 Nothing here depends on how the recording gains were set, and voice activity is evidence, never a veto.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -24,11 +25,12 @@ import numpy.typing as npt
 from leveller.attribute.bleed import CLIP, Evidence, evidence_of
 from leveller.attribute.coupling import NONE_DB, Coupling, estimate_coupling
 from leveller.attribute.decode import margins
-from leveller.attribute.floor import noise_floor
+from leveller.attribute.floor import noise_floor, quietest_db
+from leveller.attribute.knobs import Step, knob_steps
 from leveller.attribute.seeds import NOBODY, Labels, first_labels
 from leveller.attribute.tone import steady_tone
 from leveller.measure import Measurements
-from leveller.measure.levels import STEP_DB
+from leveller.measure.levels import STEP_DB, level_to_db
 from leveller.session import Session
 from leveller.units import HOPS_PER_S, Bools, seconds_to_hops
 
@@ -53,6 +55,7 @@ class Activity:
     floor_db: Grid  # (seconds, tracks, bands) noise
     coupling: Coupling
     programme: Bools  # (hops,) False in skipped stretches and steady tone
+    steps: tuple[Step, ...] = ()  # recording gains that were turned
 
 
 def attribute(m: Measurements, session: Session) -> Activity:
@@ -81,7 +84,8 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
     own = margin > 0
     return Activity(
         own=own, bleed=_bleed(own, evidence), margin=margin, own_to_bleed_db=evidence.own_to_bleed_db,
-        audible_db=evidence.audible_db, floor_db=floor_db, coupling=coupling, programme=programme)
+        audible_db=evidence.audible_db, floor_db=floor_db, coupling=coupling, programme=programme,
+        steps=tuple(knob_steps(quietest_db(m.levels), level_to_db(m.voice_levels), own)))
 
 
 def _nobody(m: Measurements, programme: Bools) -> Activity:
@@ -110,7 +114,8 @@ def _spread_out(found: Activity, voices: list[int], floor_db: Grid) -> Activity:
     return Activity(
         own=wide(found.own, False), bleed=wide(found.bleed, False), margin=wide(found.margin, -CLIP),
         own_to_bleed_db=wide(found.own_to_bleed_db, 0), audible_db=wide(found.audible_db, 0), floor_db=floor_db,
-        coupling=Coupling(local, heard), programme=found.programme)
+        coupling=Coupling(local, heard), programme=found.programme,
+        steps=tuple(replace(step, track=voices[step.track]) for step in found.steps))
 
 
 def _skipped(hops: int, session: Session) -> Bools:

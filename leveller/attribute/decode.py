@@ -8,10 +8,13 @@ sign is the decision, its size the confidence.
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import numpy.typing as npt
 
 CHANGE_COST = 2.0  # nats
+SURE_NATS = 2.0  # scale of `sure_of`; not calibrated yet
 
 Grid = npt.NDArray[np.float32]
 
@@ -25,6 +28,11 @@ def margins(evidence: Grid, *, cost: float = CHANGE_COST) -> Grid:
         backward = _leads(column[::-1], cost)[::-1]
         out[:, track] = np.array(forward) + np.array(backward) - np.array(column)
     return out
+
+
+def sure_of(margin: npt.NDArray[np.floating[Any]]) -> Grid:
+    """How sure a decision is, 0.5 (a coin) to 1, same shape: the logistic function of the margin's size."""
+    return np.asarray(1 / (1 + np.exp(-np.abs(margin) / np.float32(SURE_NATS))), np.float32)
 
 
 def _leads(column: list[float], cost: float) -> list[float]:

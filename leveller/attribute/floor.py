@@ -28,7 +28,7 @@ FloorDb = npt.NDArray[np.float32]
 
 def noise_floor(levels: Levels) -> FloorDb:
     """Floor in dB, shape=(seconds, tracks, bands); `NONE_DB` for a track that is digitally silent throughout."""
-    quiet = _quietest(levels)
+    quiet = quietest_db(levels)
     floor = np.full(quiet.shape, np.nan, np.float32)
     for second in range(len(quiet)):
         before = _low(quiet[max(0, second - WINDOW_S + 1) : second + 1])
@@ -37,7 +37,7 @@ def noise_floor(levels: Levels) -> FloorDb:
     return _filled(floor) + np.float32(BIAS_DB)
 
 
-def _quietest(levels: Levels) -> FloorDb:
+def quietest_db(levels: Levels) -> FloorDb:
     """Quietest 90 ms of each second, nan where none of them has sound throughout."""
     hops, tracks, bands = levels.shape
     out = np.full((-(-hops // HOPS_PER_S), tracks, bands), np.nan, np.float32)

@@ -19,10 +19,10 @@ from leveller.attribute import Activity
 from leveller.measure import Measurements
 from leveller.measure.levels import level_to_db
 from leveller.plan.compressor import compressor_nodes_db
+from leveller.plan.corrections import corrected_curves, overruled, spliced_rows
 from leveller.plan.expander import auto_range_db, expander_nodes_db, opened
 from leveller.plan.levels import k_power, level_lufs, own_speech
 from leveller.plan.ride import ride_nodes_db
-from leveller.plan.thinning import kept_rows
 from leveller.plan.trim import trim_nodes_db
 from leveller.session import Session
 from leveller.settings import AUTO
@@ -33,7 +33,7 @@ TOLERANCE_DB = 0.1
 MOST_ROWS = 1_000_000
 GAIN_LIMITS_DB = (-120.0, 40.0)
 STATES = ("silence", "bleed", "own")
-CAUSES = ("hold", "trim", "opening", "closing", "ride", "compressor")
+CAUSES = ("hold", "trim", "opening", "closing", "ride", "compressor", "edit")
 
 Nodes = npt.NDArray[np.float32]
 
@@ -62,7 +62,11 @@ def make_plan(m: Measurements, activity: Activity, session: Session) -> GainPlan
     """Decide the gain of every track."""
     counted = own_speech(activity)
     voices = [i for i, track in enumerate(session.tracks) if track.role == "voice"]
-    trims = {i: trim_nodes_db(m, activity, counted, i, settings=session.settings.trim) for i in voices}
+    trims = {
+        i: trim_nodes_db(k_power(m, i), counted[:, i], [step for step in activity.steps if step.track == i],
+                         settings=session.settings.trim)
+        for i in voices
+    }
     ranges = _ranges(activity, session, voices, trims)
     open_ = np.ones_like(activity.own)
     if activity.own.any():
@@ -76,7 +80,8 @@ def make_plan(m: Measurements, activity: Activity, session: Session) -> GainPlan
             parts = np.zeros((m.hops + 1, len(PARTS)), np.float32)
         parts[:, 0] += track.trim_db
         curves.append(parts)
-    return GainPlan(m.hops, _thinned(curves, activity), tuple(ranges))
+    corrected = corrected_curves(curves, activity.own, open_, session, ranges)
+    return GainPlan(m.hops, _thinned(curves, corrected, overruled(activity, session)), tuple(ranges))
 
 
 def _ranges(activity: Activity, session: Session, voices: list[int], trims: dict[int, Nodes]) -> list[float]:
@@ -123,24 +128,29 @@ def _per_hop_gain(nodes: Nodes) -> Nodes:
     return np.asarray(10 ** (_middles(nodes) / 10))
 
 
-def _thinned(curves: list[Nodes], activity: Activity) -> tuple[TrackGain, ...]:
-    """Curves as rows; the tolerance widens only where a very long session would pass `MOST_ROWS`."""
+def _thinned(curves: list[Nodes], corrected: list[Nodes], activity: Activity) -> tuple[TrackGain, ...]:
+    """Corrected curves as rows; the tolerance widens only where a very long session would pass `MOST_ROWS`."""
     tolerance = TOLERANCE_DB * 0.8  # rounding to 0.01 dB, four parts, takes the rest
     while True:
-        rows = [kept_rows(np.column_stack([c, c.sum(axis=1)]), tolerance) for c in curves]
-        if sum(map(len, rows)) <= MOST_ROWS:
-            return tuple(_track_gain(c, r, activity, i) for i, (c, r) in enumerate(zip(curves, rows, strict=True)))
+        rows = [spliced_rows(before, after, tolerance) for before, after in zip(curves, corrected, strict=True)]
+        if sum(len(kept) for kept, _ in rows) <= MOST_ROWS:
+            return tuple(_track_gain(curve, kept, touched, activity, i)
+                         for i, (curve, (kept, touched)) in enumerate(zip(corrected, rows, strict=True)))
         tolerance *= 1.5
 
 
-def _track_gain(curve: Nodes, rows: npt.NDArray[np.int64], activity: Activity, track: int) -> TrackGain:
+def _track_gain(
+    curve: Nodes, rows: npt.NDArray[np.int64], touched: Bools, activity: Activity, track: int
+) -> TrackGain:
     """Rounded rows of one track with state and cause."""
     parts = np.rint(curve[rows].astype(np.float64) * 100).astype(np.int32)
     low, high = (round(100 * limit) for limit in GAIN_LIMITS_DB)
     parts[:, 0] += np.clip(parts.sum(axis=1), low, high) - parts.sum(axis=1)
     hop = np.minimum(rows, len(activity.own) - 1)
     state = np.where(activity.own[hop, track], 2, np.where(activity.bleed[hop, track], 1, 0)).astype(np.int8)
-    return TrackGain(rows, parts, parts.sum(axis=1, dtype=np.int32), state, _causes(parts))
+    causes = _causes(parts)
+    causes[touched & (causes != CAUSES.index("hold"))] = CAUSES.index("edit")
+    return TrackGain(rows, parts, parts.sum(axis=1, dtype=np.int32), state, causes)
 
 
 def _causes(parts: npt.NDArray[np.int32]) -> npt.NDArray[np.int8]:

@@ -11,22 +11,21 @@ from leveller.measure.levels import level_to_db
 from leveller.measure.loudness import power_to_lufs
 from leveller.units import Bools
 
-SURE_NATS = 1.0  # of the decision, for a hop to count
 AUDIBLE_DB = 6.0  # over the noise
 QUIET_DB = 25.0  # under the mean of own speech: the gate of the level
-LEAST_HOPS = 30  # own speech shorter than this has no level
+LEAST_HOPS = 10  # own speech shorter than this has no level
+ENOUGH_HOPS = 200  # spoken alone: what was spoken over others is not needed
 
 Grid = npt.NDArray[np.float32]
 
 
 def own_speech(activity: Activity) -> Bools:
-    """Hops of surely own, clearly audible speech while nobody else speaks, shape=(hops, tracks)."""
-    alone = activity.own.sum(axis=1, keepdims=True) == 1
-    sure = activity.own & (activity.margin > SURE_NATS) & (activity.audible_db > AUDIBLE_DB)
-    counted = sure & activity.programme[:, None]
-    for track in range(counted.shape[1]):  # somebody who is always talked over still has a level
-        if np.count_nonzero(counted[:, track] & alone[:, 0]) >= LEAST_HOPS:
-            counted[:, track] &= alone[:, 0]
+    """Hops of own, clearly audible speech, shape=(hops, tracks); while nobody else speaks, if there are enough."""
+    alone = activity.own.sum(axis=1) == 1
+    counted = activity.own & (activity.audible_db > AUDIBLE_DB) & activity.programme[:, None]
+    for track in range(counted.shape[1]):
+        if np.count_nonzero(counted[:, track] & alone) >= ENOUGH_HOPS:
+            counted[:, track] &= alone
     return np.asarray(counted)
 
 

@@ -16,7 +16,7 @@ from leveller import settings as settings_
 from leveller.units import HOPS_PER_S, Bools
 
 CELL_S = 0.25
-STRENGTH = 0.85
+STRENGTH = 0.65
 PRIOR_CELLS = 2.0  # as much as half a second of speech at the usual level
 UNUSUAL_DB = 9.0  # pieces further from the moment's level are laughter or whispers
 
