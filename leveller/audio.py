@@ -3,7 +3,8 @@
 A `TrackReader` walks one track in *session* time: silence before its offset, the source resampled to the session's
 rate, silence behind its end, so that every reader of a session gives blocks of the same frames. Files are decoded in
 chunks of a fixed size and the resampler sees only those, so the bytes do not depend on how much is read at once.
-Readers on one polyphonic file share its decode. Sources are opened for reading only.
+Readers on one polyphonic file share its decode; a take split into several files is read as one. Sources are opened for
+reading only.
 
 Audio is float32, `(frames,)` for one channel or `(frames, channels)`. PCM is quantised by `samples.Quantiser`, since
 libsndfile rounds down. Own chunks, scaling in place and truncated files are the business of `riff`.
@@ -21,7 +22,7 @@ import numpy as np
 import soundfile
 import soxr
 
-from leveller.decoder import CHUNK_FRAMES, Decoder
+from leveller.decoder import CHUNK_FRAMES, Chain, Decoder
 from leveller.errors import InputError, OutputError
 from leveller.riff import (
     RIFF_LIMIT,
@@ -32,19 +33,31 @@ from leveller.riff import (
     read_chunks,
     scale_float_wav,
 )
-from leveller.samples import AudioSource, FileFacts, HighPass, Preview, Quantiser, Samples, SourceList, repair
+from leveller.samples import (
+    AudioSource,
+    FileFacts,
+    HighPass,
+    Part,
+    Preview,
+    Quantiser,
+    Samples,
+    SourceList,
+    parts_of,
+    repair,
+)
 from leveller.units import HOPS_PER_S
 
 __all__ = [
-    "AudioSource", "FileFacts", "FloatSpill", "Preview", "Resampler", "TrackReader", "WavWriter", "append_chunks",
-    "open_readers", "pieces", "preview", "probe", "read_chunks", "scale_float_wav", "spread_starts",
+    "AudioSource", "FileFacts", "FloatSpill", "Part", "Preview", "Resampler", "TrackReader", "WavWriter",
+    "append_chunks", "open_readers", "parts_of", "pieces", "preview", "probe", "read_chunks", "scale_float_wav",
+    "spread_starts",
 ]
 
 Kind = Literal["float32", "pcm24", "pcm16"]
 
 RATES_HZ = (8000, 192000)
 PREVIEW_PIECES = 60  # of 1 s each; enough for levels and likeness, a sixtieth of an hour's reading
-HEADER_BYTES = 4096  # room for all chunks but the audio when the size of a file is judged
+HEADER_BYTES = 1 << 20  # room for all chunks but the audio (cue points, text) when the size of a file is judged
 READ_QUALITY = "HQ"
 
 
@@ -86,12 +99,12 @@ def spread_starts(frames: int, rate_hz: int) -> list[int]:
     return [round(k * (frames - rate_hz) / (PREVIEW_PIECES - 1)) for k in range(PREVIEW_PIECES)]
 
 
-def pieces(path: Path, starts: Sequence[int], *, frames: int) -> Iterator[Samples]:
+def pieces(path: Path | Sequence[Part], starts: Sequence[int], *, frames: int) -> Iterator[Samples]:
     """Read some places of a file, each `(frames, channels)`; zeros where a place lies outside the file.
 
-    The same array is filled again for each place.
+    The same array is filled again for each place. The files of a split take (`parts_of(track)`) count as one.
     """
-    with _open(path) as file:
+    with _open(path) if isinstance(path, Path) else _open_parts(path) as file:
         block = np.empty((frames, file.channels), np.float32)
         for start in starts:
             block.fill(0)
@@ -101,14 +114,15 @@ def pieces(path: Path, starts: Sequence[int], *, frames: int) -> Iterator[Sample
                     file.seek(first)
                     file.read(out=block[first - start : last - start])
                 except (soundfile.LibsndfileError, OSError) as error:
-                    raise InputError(f"{path}: cannot be read at {first / file.samplerate:.3f} s "
+                    name = path if isinstance(path, Path) else path[0].path
+                    raise InputError(f"{name}: cannot be read at {first / file.samplerate:.3f} s "
                                      f"({_detail(error)})") from error
                 repair(block)
             yield block
 
 
-def preview(path: Path, facts: FileFacts) -> Preview:
-    """Powers of up to a minute of a file, for levels and for the likeness of two channels."""
+def preview(path: Path | Sequence[Part], facts: FileFacts) -> Preview:
+    """Powers of up to a minute of a file or a split take, for levels and for the likeness of two channels."""
     hop = facts.rate_hz // HOPS_PER_S
     starts = spread_starts(facts.frames, facts.rate_hz)
     power, cross = [], []
@@ -158,7 +172,7 @@ class TrackReader:
     def __init__(self, track: AudioSource, rate_hz: int, *, decoder: Decoder | None = None, user: int = 0) -> None:
         self.track = track
         self.repaired_frames = 0
-        self._decoder = decoder or Decoder(_open(track.path), track, 1)
+        self._decoder = decoder or Decoder(_open_parts(parts_of(track)), track, 1)
         self._user = user
         self._resampler = Resampler(track.source_rate_hz, rate_hz, channels=track.width, quality=READ_QUALITY)
         self._pick_buffer = np.empty((CHUNK_FRAMES,), np.float32)
@@ -236,13 +250,13 @@ class TrackReader:
 @contextlib.contextmanager
 def open_readers(session: SourceList) -> Iterator[list[TrackReader]]:
     """Readers of all tracks, in session order; those on one file (at one offset) share its decode."""
-    groups: dict[tuple[Path, int], list[AudioSource]] = {}
+    groups: dict[tuple[tuple[Part, ...], int], list[AudioSource]] = {}
     for track in session.tracks:
-        groups.setdefault((track.path, track.offset_frames), []).append(track)
+        groups.setdefault((parts_of(track), track.offset_frames), []).append(track)
     with contextlib.ExitStack() as stack:
         readers: dict[str, TrackReader] = {}
-        for tracks in groups.values():
-            decoder = Decoder(_open(tracks[0].path), tracks[0], len(tracks))
+        for (parts, _), tracks in groups.items():
+            decoder = Decoder(_open_parts(parts), tracks[0], len(tracks))
             for user, track in enumerate(tracks):
                 reader = TrackReader(track, session.rate_hz, decoder=decoder, user=user)
                 readers[track.name] = stack.enter_context(reader)
@@ -307,6 +321,12 @@ class WavWriter:
                 clear_peak_time(self.path)
         except (soundfile.LibsndfileError, OSError) as error:
             raise OutputError(f"{self.path}: cannot be finished ({_detail(error)}; is the disk full?)") from error
+
+
+def _open_parts(parts: Sequence[Part]) -> Any:
+    """One open file, or a chain of several."""
+    return _open(parts[0].path) if len(parts) == 1 else Chain(parts, _open)
+
 
 def _open(path: Path) -> Any:
     """An open SoundFile, or InputError that says why not."""

@@ -12,14 +12,22 @@ from pathlib import Path
 from typing import Any
 
 from leveller.attribute import Activity, attribute
-from leveller.automation import write_automation
+from leveller.automation import NO_ROWS, read_automation, row_keys, write_automation
+from leveller.cut import Finished, finish
+from leveller.edits import differences, is_speech_table, keep_file, with_speech_table
 from leveller.errors import SettingsError
 from leveller.folder import OutputFolder
+from leveller.kept import MEASUREMENTS_FILE, ROWS_FILE, keep_measurements, keep_rows, kept_measurements, kept_rows
 from leveller.measure import Measurements, OnProgress, measure, no_progress
 from leveller.names import safe_name
 from leveller.plan import GainPlan, make_plan
+from leveller.plan.corrections import check_corrections, overruled
 from leveller.render.mix import LEVELS, Mix, render
+from leveller.report.tables import write_tables
 from leveller.session import Session, open_session
+from leveller.units import frames_to_hops
+
+__all__ = ["Finished", "Result", "finish", "process", "render_again"]
 
 DEFAULT_OUT = Path("levelled")
 MARGIN_BYTES = 64 << 20  # tables, page and what else is small
@@ -66,7 +74,7 @@ def process(
     settings : mapping, optional
         Settings by dotted name, such as `{"expander.range_db": 18}`.
     corrections : path, optional
-        A corrections.csv.
+        A corrections.csv, or an edited speech.csv.
     accept_short : bool
         Take what is there of a file that is shorter than its header says.
     on_progress : callable (stage, done, total), optional
@@ -80,20 +88,113 @@ def process(
     LevellerError
         With one line that says what, where and the way out; nothing is written then.
     """
-    if stems not in LEVELS:
-        raise SettingsError(f"stems {stems!r}: expected {' or '.join(LEVELS)}")
-    paths = [sources] if isinstance(sources, str | Path) else list(sources)
-    session = open_session(paths, delivery=delivery, assignments=settings, accept_short=accept_short,
-                           corrections=corrections)
+    session = _opened(sources, delivery, stems, settings, accept_short, corrections)
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=[track.path for track in session.tracks])
     with folder:
-        measurements = measure(session, on_progress=on_progress)
+        measurements = kept_measurements(folder.path, session) or measure(session, on_progress=on_progress)
         activity = attribute(measurements, session)
+        session = _with_table(session, activity, corrections)
         plan = make_plan(measurements, activity, session)
-        mix = render(session, plan, folder.work, stems=stems, on_progress=on_progress)
-        result = Result(session, measurements, activity, plan, mix, stems, folder.path)
-        write_automation(folder.file("automation.csv"), plan, session)
+        result = _delivered(folder, session, measurements, activity, plan, stems, on_progress)
+        if corrections is not None:
+            keep_file(folder, Path(corrections))
+    return result
+
+
+def render_again(
+    sources: Sequence[Path | str] | Path | str,
+    automation: Path | str,
+    *,
+    out: Path | str | None = None,
+    replace: bool = False,
+    delivery: str | None = None,
+    stems: str = LEVELS[0],
+    settings: Mapping[str, Any] | None = None,
+    corrections: Path | None = None,
+    accept_short: bool = False,
+    on_progress: OnProgress = no_progress,
+) -> Result:
+    """Render a session from an automation file, edited or not; the delivery is met again.
+
+    The gains are those of the file and nothing else; without an edit the stems and the mix have the same bytes as those
+    of `process`. Measurements are taken from the folder of the file or from `out`, where they are kept. Corrections
+    change what the tables say of the states, not the gains.
+
+    Parameters
+    ----------
+    sources, out, replace, delivery, stems, settings, corrections, accept_short, on_progress
+        As for `process`.
+    automation : path
+        An automation.csv as `process` writes it, or as a spreadsheet saves it.
+
+    Returns
+    -------
+    Result
+        Its session's notes say what was rounded, how many rows were edited, and where delivery, rate or channels are
+        not those of the report.json beside the file.
+
+    Raises
+    ------
+    LevellerError
+        `AutomationError` for a row that cannot be rendered, with file and line.
+    """
+    automation = Path(automation)
+    session = _opened(sources, delivery, stems, settings, accept_short, corrections)
+    folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
+                          sources=[track.path for track in session.tracks])
+    homes = (automation.parent, folder.path)
+    hops = frames_to_hops(session.frames, session.rate_hz)
+    written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
+    read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)
+    with folder:
+        kept = next((m for home in homes if (m := kept_measurements(home, session)) is not None), None)
+        measurements = kept or measure(session, on_progress=on_progress)
+        activity = attribute(measurements, session)
+        session = _with_table(session, activity, corrections)
+        if written is None:
+            planned = make_plan(measurements, activity, session)
+            read = read_automation(automation, session, hops=hops, written=row_keys(planned))
+        notes = (*session.notes, *differences(automation.parent, session), *read.notes)
+        session = dataclasses.replace(session, notes=notes)
+        result = _delivered(folder, session, measurements, activity, read.plan, stems, on_progress)
+        keep_file(folder, automation)
+    return result
+
+
+def _opened(
+    sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
+    accept_short: bool, corrections: Path | None,
+) -> Session:
+    """The session, with its options checked."""
+    if stems not in LEVELS:
+        raise SettingsError(f"stems {stems!r}: expected {' or '.join(LEVELS)}")
+    paths = [sources] if isinstance(sources, str | Path) else list(sources)
+    table = corrections is not None and is_speech_table(Path(corrections))
+    session = open_session(paths, delivery=delivery, assignments=settings, accept_short=accept_short,
+                           corrections=None if table else corrections)
+    check_corrections(session)
+    return session
+
+
+def _with_table(session: Session, activity: Activity, corrections: Path | None) -> Session:
+    """The session with the corrections of an edited speech.csv, where that is what was given."""
+    if corrections is None or not is_speech_table(Path(corrections)):
+        return session
+    return with_speech_table(session, activity, Path(corrections))
+
+
+def _delivered(
+    folder: OutputFolder, session: Session, measurements: Measurements, activity: Activity, plan: GainPlan, stems: str,
+    on_progress: OnProgress,
+) -> Result:
+    """Render the plan and write all that belongs to it."""
+    mix = render(session, plan, folder.work, stems=stems, on_progress=on_progress)
+    result = Result(session, measurements, overruled(activity, session), plan, mix, stems, folder.path)
+    write_automation(folder.file("automation.csv"), plan, session)
+    write_tables(folder, result)
+    keep_rows(folder.file(ROWS_FILE), plan, session)
+    keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
     return result
 
 

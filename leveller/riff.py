@@ -44,6 +44,16 @@ def read_chunks(path: Path) -> dict[bytes, tuple[int, int]]:
     return chunks
 
 
+def read_chunk(path: Path, kind: bytes, *, most_bytes: int) -> bytes | None:
+    """A chunk's payload as far as it is there, at most so many bytes; None where the file has no such chunk."""
+    with open(path, "rb") as file:
+        place = (_walk(file) or {}).get(kind)
+        if place is None:
+            return None
+        file.seek(place[0])
+        return file.read(min(place[1], most_bytes))
+
+
 def missing_bytes(path: Path) -> int:
     """How many bytes of audio the header promises beyond the file's end; 0 for whole files and for other formats."""
     with open(path, "rb") as file:
@@ -159,6 +169,8 @@ def _walk(file: BinaryIO) -> dict[bytes, tuple[int, int]] | None:
     while at + 8 <= length:
         file.seek(at)
         kind, size = struct.unpack(order + "4sI", file.read(8))
+        if not all(32 <= byte < 127 for byte in kind):
+            break  # not a chunk; a header that lost its size would else be searched through hours of zeros
         if kind == b"ds64" and head[:4] != b"RIFF":
             data_size = struct.unpack("<QQ", file.read(16).ljust(16, b"\0"))[1]
         if kind == b"data" and size == UNKNOWN_SIZE and data_size is not None:

@@ -43,8 +43,16 @@ class Preview:
     cross: npt.NDArray[np.float64]  # mean product of the first two channels, shape=(hops,); zeros for one channel
 
 
+@dataclass(frozen=True)
+class Part:
+    """One file of a take that a recorder has split."""
+
+    path: Path
+    frames: int  # that are taken of it
+
+
 class AudioSource(Protocol):
-    """What a reader must know of a track; `session.Track` is one."""
+    """What a reader must know of a track; `session.Track` is one. It may have `parts`, see `parts_of`."""
 
     @property
     def name(self) -> str: ...
@@ -77,6 +85,12 @@ class SourceList(Protocol):
     def rate_hz(self) -> int: ...
     @property
     def tracks(self) -> Sequence[AudioSource]: ...
+
+
+def parts_of(source: AudioSource) -> tuple[Part, ...]:
+    """The files that a track is read from, in order; one unless its take was split (then it has `parts`)."""
+    parts: tuple[Part, ...] = getattr(source, "parts", ())
+    return parts or (Part(source.path, source.source_frames),)
 
 
 class Quantiser:

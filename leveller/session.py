@@ -1,8 +1,9 @@
 """Opens a session: a folder, a session.toml or some audio files, checked, named and aligned.
 
 `open_session` settles every doubt about the sources once, at the door, and what it decides it says in `notes`: which
-channels make a track, the session's rate (the most common; a tie takes the higher), what is padded or resampled, and
-what is set aside as a copy or as the recorder's mix. Inner code trusts the `Session` it returns.
+channels make a track and which files one take (`drafts`, `takes`), the session's rate (the most common; a tie takes the
+higher), what is delayed, padded or resampled, and what is set aside as a copy or as the recorder's mix. Inner code
+trusts the `Session` it returns.
 
 Session zero is 0 s; a track's `offset_frames` delay it; the session lasts until the latest end of its tracks. No audio
 is decoded here but the preview: up to a minute of each file, spread evenly.
@@ -11,22 +12,20 @@ is decoded here but the preview: up to a minute of each file, spread evenly.
 from __future__ import annotations
 
 import dataclasses
-import math
 from collections import Counter
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
 from leveller import audio
+from leveller.drafts import Draft, SourceFile, drafts_of
 from leveller.duplicates import find_duplicates
 from leveller.errors import AutomationError, InputError, LevellerError, SettingsError, nearest
-from leveller.names import safe_name, unique_names
+from leveller.names import safe_name
 from leveller.sessionfile import Correction, SessionFile, Skip, TrackEntry, read_corrections, read_session_file
 from leveller.settings import DEFAULT_DELIVERY, Delivery, Settings, delivery_named
-from leveller.units import power_to_db, seconds_to_frames
+from leveller.takes import session_reference
 
 __all__ = ["AUDIO_SUFFIXES", "Correction", "Session", "SetAside", "Skip", "Track", "open_session", "safe_name"]
 
@@ -36,10 +35,6 @@ AUDIO_SUFFIXES = frozenset({
     ".opus", ".mp3",
     ".m4a", ".aac", ".wma",  # cannot be read, but a voice must not be missing silently: refused, not ignored
 })
-AGREE_CORRELATION = 0.98  # two channels above this are one voice; DESIGN: on loud hops
-LOUD_RANGE_DB = 20.0  # hops this far below the loud ones still count as loud
-LOUD_PERCENTILE = 95.0
-SILENT_POWER = 1e-12  # -120 dBFS: below the last bit of 16
 
 
 @dataclass(frozen=True)
@@ -61,6 +56,8 @@ class Track:
     trim_db: float
     high_pass_hz: float | None
     loud_dbfs: float  # 95th percentile of 10 ms RMS in the preview; -inf where silent
+    time_reference: int | None = None  # frames of the file since midnight at its start, where the recorder says so
+    parts: tuple[audio.Part, ...] = ()  # the files of a split take in order, `path` the first; empty for one file
 
 
 @dataclass(frozen=True)
@@ -86,28 +83,9 @@ class Session:
     delivery: Delivery
     mix_channels: int
     settings: Settings
-    notes: tuple[str, ...]  # sentences for the user: padded, split, resampled, taken short
-
-
-@dataclass(frozen=True)
-class _Source:
-    """A file to open and what was said about it."""
-
-    path: Path
-    entry: TrackEntry
-
-
-@dataclass(frozen=True)
-class _Draft:
-    """A track before the session's rate is known."""
-
-    name: str
-    path: Path
-    entry: TrackEntry
-    facts: audio.FileFacts
-    channels: tuple[int, ...]
-    width: int
-    loud_dbfs: float
+    notes: tuple[str, ...]  # sentences for the user: padded, split, joined, delayed, resampled, taken short
+    time_reference: int | None = None  # of session zero, frames since midnight at the session's rate
+    origination: tuple[str, str] = ("", "")  # date and time that the recorder gave the first file of session zero
 
 
 def open_session(
@@ -141,7 +119,7 @@ def open_session(
     settings = Settings().changed(dict(said.settings), where=f"{said.where}: ").changed(
         assignments or {}, where="--set ")
     chosen = _delivery(delivery, said)
-    drafts = _drafts(files, accept_short, notes)
+    drafts = drafts_of(files, accept_short, notes)
     rate_hz = said.sample_rate or _common_rate(drafts)
     tracks, set_aside = _without_duplicates(_tracks(drafts, rate_hz), rate_hz)
     frames = max(track.offset_frames + track.frames for track in tracks)
@@ -151,10 +129,12 @@ def open_session(
     return Session(
         title=said.title or title, rate_hz=rate_hz, frames=frames, tracks=tracks, set_aside=set_aside,
         skips=said.skips, corrections=_corrections(said, corrections, tracks, set_aside, frames / rate_hz),
-        delivery=chosen, mix_channels=mix_channels, settings=settings, notes=tuple(notes))
+        delivery=chosen, mix_channels=mix_channels, settings=settings, notes=tuple(notes),
+        time_reference=session_reference([(d.take, _offset_frames(d, rate_hz)) for d in drafts], rate_hz),
+        origination=_origination(drafts))
 
 
-def _located(sources: list[Path]) -> tuple[str, SessionFile, list[_Source], list[str]]:
+def _located(sources: list[Path]) -> tuple[str, SessionFile, list[SourceFile], list[str]]:
     """Title, session.toml's words, the files, and notes so far."""
     if not sources:
         raise InputError("no source given: expected a folder, a session.toml or audio files")
@@ -169,10 +149,10 @@ def _located(sources: list[Path]) -> tuple[str, SessionFile, list[_Source], list
         if source.is_dir() or source.suffix.lower() == ".toml":
             raise InputError(f"{source}: give one folder, one session.toml, or audio files only")
     title = first.stem if len(sources) == 1 else _folder_title(first.parent)
-    return title, SessionFile(), [_Source(path, TrackEntry(str(path))) for path in sources], []
+    return title, SessionFile(), [SourceFile(path, TrackEntry(str(path))) for path in sources], []
 
 
-def _from_session_file(path: Path) -> tuple[str, SessionFile, list[_Source], list[str]]:
+def _from_session_file(path: Path) -> tuple[str, SessionFile, list[SourceFile], list[str]]:
     """A session.toml; without any [[track]] all audio files beside it count."""
     said = read_session_file(path)
     folder = path.parent
@@ -185,7 +165,7 @@ def _from_session_file(path: Path) -> tuple[str, SessionFile, list[_Source], lis
         if not file.is_file():
             hint = nearest(entry.file, [other.name for other in beside])
             raise InputError(f"{file}: no such file, but {said.where} names it{hint}")
-        sources.append(_Source(file, entry))
+        sources.append(SourceFile(file, entry))
     named = {source.path.resolve() for source in sources}
     left = [f"{file.name}: not named in {said.where}, left out" for file in beside if file.resolve() not in named]
     return _folder_title(folder), said, sources, left
@@ -206,12 +186,12 @@ def _audio_files(folder: Path) -> list[Path]:
     return sorted(files, key=lambda path: (path.name.casefold(), path.name))
 
 
-def _all_of(folder: Path) -> list[_Source]:
+def _all_of(folder: Path) -> list[SourceFile]:
     """Every audio file of a folder, or InputError where there is none."""
     files = _audio_files(folder)
     if not files:
         raise InputError(f"{folder}: no audio files directly in this folder (expected .wav, .flac, .mp3 and the like)")
-    return [_Source(path, TrackEntry(path.name)) for path in files]
+    return [SourceFile(path, TrackEntry(path.name)) for path in files]
 
 
 def _delivery(name: str | None, said: SessionFile) -> Delivery:
@@ -227,102 +207,40 @@ def _delivery(name: str | None, said: SessionFile) -> Delivery:
     return dataclasses.replace(base, **given, source=said.where) if given else base
 
 
-def _drafts(files: list[_Source], accept_short: bool, notes: list[str]) -> list[_Draft]:
-    """Tracks of all files with their final names."""
-    known: dict[Path, tuple[audio.FileFacts, audio.Preview]] = {}
-    drafts: list[_Draft] = []
-    for source in files:
-        if source.path not in known:
-            facts = audio.probe(source.path, accept_short=accept_short)
-            known[source.path] = facts, audio.preview(source.path, facts)
-            if facts.frames < facts.header_frames:
-                notes.append(f"{source.path.name}: {facts.frames / facts.rate_hz:.3f} s of "
-                             f"{facts.header_frames / facts.rate_hz:.3f} s are there and taken")
-        drafts.extend(_drafts_of(source, *known[source.path], notes))
-    names = unique_names([draft.name for draft in drafts])
-    return [dataclasses.replace(draft, name=name) for draft, name in zip(drafts, names, strict=True)]
-
-
-def _drafts_of(
-    source: _Source, facts: audio.FileFacts, heard: audio.Preview, notes: list[str]
-) -> Iterator[_Draft]:
-    """One track, or one a channel."""
-    entry = source.entry
-    base = entry.name or safe_name(source.path.stem)
-    if entry.channel is not None and entry.channel > facts.channels:
-        raise SettingsError(f"{source.path}: channel = {entry.channel}, but the file has {facts.channels}")
-    if entry.channels == "together" and facts.channels > 2:
-        raise SettingsError(f'{source.path}: channels = "together" needs two channels, but the file has '
-                            f"{facts.channels}. Use channel = N")
-
-    def draft(name: str, channels: tuple[int, ...], width: int = 1) -> _Draft:
-        return _Draft(name, source.path, entry, facts, channels, width, _loud_dbfs(heard, channels))
-
-    if entry.channel is not None:
-        suffix = f" ch{entry.channel}" if entry.name is None and facts.channels > 1 else ""
-        yield draft(base + suffix, (entry.channel - 1,))
-    elif facts.channels == 1:
-        yield draft(base, (0,))
-    elif facts.channels == 2 and entry.role == "bed" and entry.channels != "split":
-        yield draft(base, (0, 1), 2)
-    elif facts.channels == 2 and _together(source, heard, notes):
-        yield draft(base, (0, 1))
-    else:
-        yield from (draft(f"{base} ch{n + 1}", (n,)) for n in range(facts.channels))
-
-
-def _together(source: _Source, heard: audio.Preview, notes: list[str]) -> bool:
-    """Whether two channels are one voice; said where it was found out and not told."""
-    if source.entry.channels is not None:
-        return source.entry.channels == "together"
-    correlation = _correlation(heard)
-    if correlation is None:
-        notes.append(f"{source.path.name}: two silent channels, taken as one track")
-        return True
-    one = correlation > AGREE_CORRELATION
-    notes.append(f"{source.path.name}: its two channels {'agree' if one else 'differ'} (correlation "
-                 f"{correlation:.3f}), taken as {'one track' if one else 'two tracks'}")
-    return one
-
-
-def _correlation(heard: audio.Preview) -> float | None:
-    """Correlation of the first two channels over loud hops; None where both are silent, 0 where one is."""
-    total = heard.power[:, 0] + heard.power[:, 1]
-    level = np.percentile(total, LOUD_PERCENTILE)
-    if total.max() <= SILENT_POWER:
-        return None
-    loud = total >= max(level * 10 ** (-LOUD_RANGE_DB / 10), SILENT_POWER)
-    left, right = heard.power[loud, 0].sum(), heard.power[loud, 1].sum()
-    return float(heard.cross[loud].sum() / math.sqrt(left * right)) if left * right > 0 else 0.0
-
-
-def _loud_dbfs(heard: audio.Preview, channels: tuple[int, ...]) -> float:
-    """The level that the loud hops of a track reach; two channels are averaged."""
-    power = heard.power[:, channels[0]]
-    if len(channels) == 2:
-        power = (power + heard.power[:, channels[1]] + 2 * heard.cross) / 4
-    return float(power_to_db(max(float(np.percentile(power, LOUD_PERCENTILE)), 0.0)))
-
-
-def _common_rate(drafts: list[_Draft]) -> int:
+def _common_rate(drafts: list[Draft]) -> int:
     """The rate of most tracks; a tie takes the higher."""
-    counts = Counter(draft.facts.rate_hz for draft in drafts)
+    counts = Counter(draft.take.facts.rate_hz for draft in drafts)
     return max(counts, key=lambda rate: (counts[rate], rate))
 
 
-def _tracks(drafts: list[_Draft], rate_hz: int) -> list[Track]:
+def _tracks(drafts: list[Draft], rate_hz: int) -> list[Track]:
     """Drafts at the session's rate."""
     out = []
     for draft in drafts:
-        entry, facts = draft.entry, draft.facts
+        take, entry, facts = draft.take, draft.take.entry, draft.take.facts
         frames = (2 * facts.frames * rate_hz + facts.rate_hz) // (2 * facts.rate_hz)
         out.append(Track(
-            name=draft.name, path=draft.path, channels=draft.channels, width=draft.width, role=entry.role,
-            offset_frames=seconds_to_frames(entry.offset_s, rate_hz), frames=max(frames, 1),
+            name=draft.name, path=take.path, channels=draft.channels, width=draft.width, role=entry.role,
+            offset_frames=_offset_frames(draft, rate_hz), frames=max(frames, 1),
             source_rate_hz=facts.rate_hz, source_frames=facts.frames, is_float=facts.is_float,
             polarity=entry.polarity, pan=entry.pan, trim_db=entry.trim_db, high_pass_hz=entry.high_pass_hz,
-            loud_dbfs=draft.loud_dbfs))
+            loud_dbfs=draft.loud_dbfs, time_reference=take.time_reference,
+            parts=take.parts if len(take.parts) > 1 else ()))
     return out
+
+
+def _offset_frames(draft: Draft, rate_hz: int) -> int:
+    """Where a draft begins in the session."""
+    return round(draft.take.offset_s * rate_hz)
+
+
+def _origination(drafts: list[Draft]) -> tuple[str, str]:
+    """Date and time of the first file that starts at session zero and has them."""
+    for draft in drafts:
+        bext = draft.take.bext
+        if bext is not None and bext.date and not draft.take.offset_s:
+            return bext.date, bext.time
+    return "", ""
 
 
 def _without_duplicates(tracks: list[Track], rate_hz: int) -> tuple[tuple[Track, ...], tuple[SetAside, ...]]:

@@ -78,7 +78,7 @@ class TrackEntry:
     channels: str | None = None  # split | together
     name: str | None = None
     role: str = "voice"
-    offset_s: float = 0.0
+    offset_s: float | None = None  # None: by the recorder's clock, else 0
     polarity: int = 1
     pan: float = 0.0
     trim_db: float = 0.0
@@ -211,7 +211,7 @@ def _track_entry(table: dict[str, Any], where: str) -> TrackEntry:
     if channel is not None and channels is not None:
         raise SettingsError(f"{where}: channel and channels exclude each other; give one of them")
     return TrackEntry(
-        file, channel, channels, name, _choice(table, "role", ROLES, where) or "voice", numbers["offset_s"] or 0.0,
+        file, channel, channels, name, _choice(table, "role", ROLES, where) or "voice", numbers["offset_s"],
         int(polarity), numbers["pan"] or 0.0, numbers["trim_db"] or 0.0, numbers["high_pass_hz"])
 
 

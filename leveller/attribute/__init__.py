@@ -39,6 +39,8 @@ CLEARLY_OWN = 0.6  # mean nats a band: this microphone has its own voice
 CLEARLY_NOT = 0.2  # ... and this one has not
 CLEARLY_AUDIBLE_DB = 6.0
 TAIL_DB_PER_HOP = 0.8
+HEARD_DB = 3.0  # mean over bands, over the noise: something sounds
+NEAR_HOPS = 10
 
 Grid = npt.NDArray[np.float32]
 
@@ -81,7 +83,7 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
         evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=TAIL_DB_PER_HOP)
         labels = _relabelled(evidence, programme)
     margin = margins(np.where(programme[:, None], evidence.own, 0))
-    own = margin > 0
+    own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)
     return Activity(
         own=own, bleed=_bleed(own, evidence), margin=margin, own_to_bleed_db=evidence.own_to_bleed_db,
         audible_db=evidence.audible_db, floor_db=floor_db, coupling=coupling, programme=programme,
@@ -118,6 +120,12 @@ def _spread_out(found: Activity, voices: list[int], floor_db: Grid) -> Activity:
         steps=tuple(replace(step, track=voices[step.track]) for step in found.steps))
 
 
+def _near(flags: Bools) -> Bools:
+    """Flags widened by `NEAR_HOPS` either way along the first axis: a word's soft end belongs to the word."""
+    total = np.cumsum(np.pad(flags, ((NEAR_HOPS + 1, NEAR_HOPS), (0, 0))), axis=0)
+    return np.asarray(total[2 * NEAR_HOPS + 1 :] > total[: -2 * NEAR_HOPS - 1])
+
+
 def _skipped(hops: int, session: Session) -> Bools:
     """Hops inside a marked stretch."""
     out = np.zeros(hops, np.bool_)
@@ -149,5 +157,4 @@ def _relabelled(evidence: Evidence, programme: Bools) -> Labels:
 def _bleed(own: Bools, evidence: Evidence) -> Bools:
     """Not own, and somebody else's voice is decided or audible here."""
     others = (own.sum(axis=1, keepdims=True) - own) > 0
-    heard = evidence.audible_db > 3.0
-    return np.asarray(~own & (others | heard))
+    return np.asarray(~own & (others | (evidence.audible_db > HEARD_DB)))

@@ -1,9 +1,9 @@
 """Evidence into states: own voice or not, decoded over time, with a confidence.
 
-Two states a microphone and a cost for every change between them (Viterbi). For two states the recursion is one number,
-the lead of *open* over *closed*, clamped to the cost before each hop's evidence is added; run forwards and backwards, and added,
-it gives the max-marginal of every hop: by how much the best path through *open* beats the best path through *closed*. Its
-sign is the decision, its size the confidence.
+Two states a microphone and a cost for every change between them (Viterbi). For two states the recursion is one
+number, the lead of *open* over *closed*, clamped to the cost before each hop's evidence is added; run forwards and
+backwards, and added, it gives the max-marginal of every hop: by how much the best path through *open* beats the best
+path through *closed*. Its sign is the decision, its size the confidence.
 """
 
 from __future__ import annotations

@@ -1,18 +1,19 @@
 """The editor's word: stretches in which the decision or the gain is overruled, and nothing else changes.
 
-`decide = own` opens the microphone with the look-ahead, hold and ramps of the expander's settings, as if the voice had been found
-there. `bleed` and `silence` close it, by the whole range; voice of the same microphone that is left beside the stretch
-keeps its look-ahead and hold. (Both close, since whoever overrules a voice wants it gone; they differ in what the tables
-say.) `gain_db` is added to the automatic trim, with ramps of 50 ms outside the stretch. Of two corrections of one stretch the
-later counts.
+`decide = own` opens the microphone with the look-ahead, hold and ramps of the expander's settings, as if the voice had
+been found there. `bleed` and `silence` close it, by the whole range; voice of the same microphone that is left beside
+the stretch keeps its look-ahead and hold. (Both close, since whoever overrules a voice wants it gone; they differ in
+what the tables say.) `gain_db` is added to the automatic trim, with ramps of 50 ms outside the stretch. Of two
+corrections of one stretch the later counts.
 
-Levels, trims, ride, compressor and all other microphones stay as they were decided without the corrections, and so do the rows of the
-automation outside the reach of a correction: `spliced_rows` keeps them one for one.
+Levels, trims, ride, compressor and all other microphones stay as they were decided without the corrections, and so do
+the rows of the automation outside the reach of a correction: `spliced_rows` keeps them one for one.
 """
 
 from __future__ import annotations
 
 import dataclasses
+import itertools
 from collections.abc import Sequence
 
 import numpy as np
@@ -40,7 +41,7 @@ def check_corrections(session: Session) -> None:
     for correction in session.corrections:
         if correction.decide is not None and roles[correction.track] != "voice":
             raise SettingsError(f"correction of {correction.track} at {correction.from_s:g} s: decide = "
-                                f"{correction.decide}, but its role is {roles[correction.track]}. Only gain_db works there")
+                                f"{correction.decide}, but its role is {roles[correction.track]}. Use gain_db there")
 
 
 def overruled(activity: Activity, session: Session) -> Activity:
@@ -135,14 +136,16 @@ def reopened(
         return np.asarray(open_[:, track])
     all_own = own.copy()
     all_own[:, track] = corrected_own
-    out: Bools = opened(all_own[:, list(voices)], settings=settings, lone=len(voices) == 1)[:, list(voices).index(track)]
+    found = opened(all_own[:, list(voices)], settings=settings, lone=len(voices) == 1)
+    out = found[:, list(voices).index(track)]
     before, after = round(settings.lookahead_s * HOPS_PER_S), round(settings.hold_s * HOPS_PER_S)
     near = flagged(stretches(corrected_own) + np.array([-before, after]), len(out))
     return np.asarray(out & ~(by_hand & ~near))
 
 
 def expander_again_db(
-    nodes_db: Nodes, open_: Bools, *, corrected_open: Bools, by_hand: Bools, range_db: float, settings: settings_.Expander
+    nodes_db: Nodes, open_: Bools, *, corrected_open: Bools, by_hand: Bools, range_db: float,
+    settings: settings_.Expander,
 ) -> Nodes:
     """The expander's gain with the corrections, shape=(hops + 1,); outside their reach as given, to the bit.
 
@@ -206,7 +209,7 @@ def _ramped(depth_db: Nodes, attack: int, release: int) -> Nodes:
     edges = [0, *(np.flatnonzero(np.diff(depth_db)) + 1).tolist(), len(depth_db)]
     level = [float(depth_db[first]) for first in edges[:-1]]
     out = np.full(len(depth_db) + 1, -np.inf, np.float32)
-    for i, (first, after) in enumerate(zip(edges[:-1], edges[1:], strict=True)):
+    for i, (first, after) in enumerate(itertools.pairwise(edges)):
         here = level[i]
         left = max(here, level[i - 1]) if i else here
         right = max(here, level[i + 1]) if i + 1 < len(level) else here

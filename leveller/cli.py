@@ -1,0 +1,256 @@
+"""The command line: one short function a command; nothing is computed or drawn here. The sole user of typer.
+
+Commands import what they need when they run, so that `leveller --help` waits for nothing. An error is one line on the
+standard error and an exit code of its kind (`errors`); 2 is a wrong command line, 130 an interruption. `main` limits
+the linear algebra library to one thread unless the environment says otherwise: the work is spread over tracks already.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import sys
+import traceback
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+from typing import Annotated, Any
+
+import typer
+
+from leveller import __version__, console
+from leveller.errors import LevellerError
+
+THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
+USAGE_EXIT, INTERRUPTED_EXIT, UNEXPECTED_EXIT = 2, 130, 1
+INTERRUPTED = "interrupted; nothing was left half-written"
+
+_UsageError: Any = typer.BadParameter.__mro__[1]  # by way of typer, which may carry a click of its own
+_ClickError: Any = _UsageError.__mro__[1]
+
+app = typer.Typer(
+    name="leveller", rich_markup_mode=None, pretty_exceptions_enable=False, add_completion=False,
+    context_settings={"help_option_names": ["-h", "--help"]})
+
+Sources = Annotated[list[Path], typer.Argument(
+    metavar="SESSION...", help="A folder, a session.toml, or the audio files of one conversation.", show_default=False)]
+Files = Annotated[list[Path], typer.Argument(metavar="FILE...", help="Audio files of any kind.", show_default=False)]
+Out = Annotated[Path | None, typer.Option(
+    metavar="DIR", help="Folder to write; ./levelled/TITLE by default. It appears whole or not at all.")]
+Replace = Annotated[bool, typer.Option("--replace", help="Replace DIR where it exists.")]
+DeliveryName = Annotated[str | None, typer.Option(
+    metavar="NAME", help="What the mix shall read, such as podcast-mono or r128; `leveller settings` lists them.")]
+Stems = Annotated[str, typer.Option(
+    metavar="LEVEL", help="before-limiter (32-bit float) or limited (24 bit; they add up to mix.wav).")]
+Assignments = Annotated[list[str] | None, typer.Option(
+    "--set", metavar="KEY=VALUE", help="A setting, such as expander.range_db=18; may be given again.")]
+Corrections = Annotated[Path | None, typer.Option(metavar="FILE", help="A corrections.csv, or an edited speech.csv.")]
+AcceptShort = Annotated[bool, typer.Option(
+    "--accept-short", help="Take what is there of a file that is shorter than its header says.")]
+Quiet = Annotated[bool, typer.Option("--quiet", "-q", help="Print nothing but errors and a delivery that is not met.")]
+Debug = Annotated[bool, typer.Option("--debug", help="Show where in the program an error arose.")]
+
+
+def _print_version(wanted: bool) -> None:
+    """The version alone."""
+    if wanted:
+        typer.echo(f"leveller {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _root(
+    version: Annotated[bool, typer.Option(
+        "--version", help="Show the version and leave.", callback=_print_version, is_eager=True)] = False,
+) -> None:
+    """Multitrack dialogue leveller: closes the microphones that only hear the others, levels the voices, delivers on
+    target."""
+
+
+@app.command()
+def process(
+    sources: Sources, out: Out = None, replace: Replace = False, delivery: DeliveryName = None,
+    stems: Stems = "before-limiter", assignments: Assignments = None, corrections: Corrections = None,
+    accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
+) -> None:
+    """Level a conversation: write stems, mix, automation and reports."""
+    with _reported(debug):
+        from leveller import pipeline
+        from leveller.settings import parse_assignments
+
+        with console.progress(console.PROCESS_SHARES, quiet=quiet) as on_progress:
+            result = pipeline.process(
+                sources, out=out, replace=replace, delivery=delivery, stems=stems,
+                settings=parse_assignments(assignments or []), corrections=corrections, accept_short=accept_short,
+                on_progress=on_progress)
+        _print_summary(result, quiet)
+
+
+@app.command()
+def render(
+    sources: Sources,
+    automation: Annotated[Path, typer.Option(
+        metavar="FILE", help="An automation.csv, as written or edited; its gains are what is heard.",
+        show_default=False)],
+    out: Out = None, replace: Replace = False, delivery: DeliveryName = None, stems: Stems = "before-limiter",
+    assignments: Assignments = None, corrections: Corrections = None, accept_short: AcceptShort = False,
+    quiet: Quiet = False, debug: Debug = False,
+) -> None:
+    """Render a session again, from edited automation; the delivery is met again."""
+    with _reported(debug):
+        from leveller import pipeline
+        from leveller.settings import parse_assignments
+
+        with console.progress(console.PROCESS_SHARES, quiet=quiet) as on_progress:
+            result = pipeline.render_again(
+                sources, automation, out=out, replace=replace, delivery=delivery, stems=stems,
+                settings=parse_assignments(assignments or []), corrections=corrections, accept_short=accept_short,
+                on_progress=on_progress)
+        _print_summary(result, quiet)
+
+
+@app.command()
+def finish(
+    files: Annotated[list[Path], typer.Argument(
+        metavar="FILE...", help="The edited programme, or its stems and music: they are summed as they are.",
+        show_default=False)],
+    out: Annotated[Path | None, typer.Option(
+        metavar="DIR", help="Folder to write; './levelled/TITLE finished' by default.")] = None,
+    replace: Replace = False, delivery: DeliveryName = None, assignments: Assignments = None,
+    accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
+) -> None:
+    """Bring an edited programme to its delivery: make-up gain and limiter only."""
+    with _reported(debug):
+        from leveller import pipeline
+        from leveller.report.finished import finished_figures
+        from leveller.settings import parse_assignments
+
+        with console.progress(console.FINISH_SHARES, quiet=quiet) as on_progress:
+            finished = pipeline.finish(
+                files, out=out, replace=replace, delivery=delivery, settings=parse_assignments(assignments or []),
+                accept_short=accept_short, on_progress=on_progress)
+        _print_report(finished_figures(finished), finished.out, quiet)
+
+
+@app.command()
+def measure(
+    files: Files,
+    as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
+    accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
+) -> None:
+    """Read the loudness and true peak of any files."""
+    with _reported(debug):
+        from leveller.reading import measure_files
+        from leveller.report.text import format_readings
+
+        with console.progress(console.READ_SHARES, quiet=quiet) as on_progress:
+            readings = measure_files(files, accept_short=accept_short, on_progress=on_progress)
+        if as_json:
+            _print_json(readings)
+        else:
+            console.print_lines(format_readings(readings, width=console.terminal_width(sys.stdout)))
+
+
+@app.command()
+def settings(
+    session: Annotated[Path | None, typer.Argument(
+        metavar="[SESSION]", help="A folder or a session.toml whose values count.", show_default=False)] = None,
+    assignments: Assignments = None,
+    why: Annotated[bool, typer.Option("--why", help="Say the reason for each default.")] = False,
+    debug: Debug = False,
+) -> None:
+    """List every setting and where it came from."""
+    with _reported(debug):
+        from leveller.report.origins import settings_in_force
+        from leveller.report.text import format_settings
+        from leveller.settings import DELIVERIES, parse_assignments
+
+        rows = settings_in_force(session, parse_assignments(assignments or []))
+        lines = format_settings([row if why else (*row[:4], "") for row in rows], list(DELIVERIES.values()),
+                                width=console.terminal_width(sys.stdout))
+        console.print_lines(lines)
+
+
+def main(arguments: Sequence[str] | None = None) -> None:
+    """Run a command and leave with its exit code; `sys.argv` by default."""
+    for name in THREAD_LIMITS:
+        os.environ.setdefault(name, "1")
+    for stream in (sys.stdout, sys.stderr):
+        with contextlib.suppress(AttributeError):  # not every stream can change its ways
+            stream.reconfigure(errors="backslashreplace")  # type: ignore[union-attr]
+    sys.exit(_run(list(sys.argv[1:] if arguments is None else arguments)))
+
+
+def _run(arguments: list[str]) -> int:
+    """The exit code of a command line; without any words it shows the help."""
+    try:
+        code = app(args=arguments or ["--help"], prog_name="leveller", standalone_mode=False)
+        sys.stdout.flush()
+    except _ClickError as error:
+        command = error.ctx.command_path if getattr(error, "ctx", None) else "leveller"
+        message = error.format_message()
+        console.print_error(f"{message}{'' if message.endswith(('.', '?')) else '.'} See {command} --help")
+        return USAGE_EXIT
+    except (KeyboardInterrupt, typer.Abort):
+        console.print_error(INTERRUPTED)
+        return INTERRUPTED_EXIT
+    except BrokenPipeError:  # the reader of a pipe has gone; nobody is left to tell
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return UNEXPECTED_EXIT
+    return code if isinstance(code, int) else 0
+
+
+@contextlib.contextmanager
+def _reported(debug: bool) -> Iterator[None]:
+    """Errors as one line and an exit code; with the way through the program where asked for."""
+    try:
+        yield
+    except (typer.Exit, BrokenPipeError):
+        raise
+    except (Exception, KeyboardInterrupt) as error:
+        if debug:
+            traceback.print_exc()
+        message, code = _told(error, debug)
+        console.print_error(message)
+        raise typer.Exit(code) from None
+
+
+def _told(error: BaseException, debug: bool) -> tuple[str, int]:
+    """What to say of an error, and the exit code."""
+    if isinstance(error, LevellerError):
+        return str(error), error.exit_code
+    if isinstance(error, KeyboardInterrupt):
+        return INTERRUPTED, INTERRUPTED_EXIT
+    return f"unexpected {type(error).__name__}: {error}{'' if debug else '. --debug shows where'}", UNEXPECTED_EXIT
+
+
+def _print_summary(result: Any, quiet: bool) -> None:
+    """The summary of a run."""
+    from leveller.report.figures import figures_of
+
+    _print_report(figures_of(result), result.out, quiet)
+
+
+def _print_report(report: Any, out: Path, quiet: bool) -> None:
+    """A report; a delivery that is not met is said in any case."""
+    from leveller.report.text import format_summary
+
+    if not quiet:
+        width = console.terminal_width(sys.stdout)
+        console.print_lines(format_summary(report, out=_near(out), width=width))
+    elif not report.delivery.met:
+        console.print_error(f"delivery not met: {report.delivery.why_not}")
+
+
+def _near(path: Path) -> str:
+    """A path as seen from here, where it lies below."""
+    here = Path.cwd()
+    return str(path.relative_to(here)) if path.is_relative_to(here) else str(path)
+
+
+def _print_json(readings: Sequence[Any]) -> None:
+    """Readings as JSON."""
+    import json
+
+    from leveller.report.tables import as_json
+
+    typer.echo(json.dumps([as_json(reading) for reading in readings], indent=1, ensure_ascii=False))

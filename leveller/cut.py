@@ -1,0 +1,210 @@
+"""After the creative edit: the finished cut, or its stems, to the delivery by make-up gain and limiter alone.
+
+Nothing is gated, ridden or compressed a second time, and several files are summed as they are: sample for sample, no
+pan law. A file of one channel goes unchanged to both channels of a mix of two; a file of two is averaged for a mix of
+one. (So a voice keeps its balance with stereo music, and folding down what was spread gives the same samples again.)
+Without a delivery the files decide: `podcast-stereo` where one of them has two channels, else `podcast-mono`.
+
+Files of other rates are resampled to the most common one (a tie takes the higher); all start together, and shorter ones
+end in silence.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.audio import FloatSpill, TrackReader, open_readers, probe
+from leveller.errors import InputError, SettingsError
+from leveller.folder import OutputFolder
+from leveller.lanes import walk
+from leveller.measure import OnProgress, no_progress
+from leveller.names import safe_name, unique_names
+from leveller.render.mix import BLOCK_S, Bus, Mix
+from leveller.samples import FileFacts
+from leveller.session import AUDIO_SUFFIXES, Session, Track
+from leveller.settings import Settings, delivery_named
+
+DEFAULT_OUT = Path("levelled")
+MARGIN_BYTES = 16 << 20  # tables and what else is small
+BY_CHANNELS = {1: "podcast-mono", 2: "podcast-stereo"}
+
+Samples = npt.NDArray[np.float32]
+
+
+@dataclass(frozen=True)
+class Finished:
+    """Everything known of a finished cut; its session holds the files as tracks."""
+
+    session: Session
+    mix: Mix
+    repaired_frames: tuple[int, ...]  # per file: NaN or Inf silenced
+    out: Path
+    stems: str = "none"  # as report.json names them
+
+
+def open_cut(
+    paths: Sequence[Path], *, delivery: str | None, settings: Mapping[str, Any] | None, accept_short: bool
+) -> Session:
+    """The files of a cut as a session without voices.
+
+    Raises
+    ------
+    InputError, SettingsError
+    """
+    files = _files(paths)
+    facts = [probe(path, accept_short=accept_short) for path in files]
+    for path, fact in zip(files, facts, strict=True):
+        if fact.channels > 2:
+            raise InputError(f"{path}: {fact.channels} channels, expected 1 or 2. Mix it down first")
+    notes: list[str] = []
+    widest = max(fact.channels for fact in facts)
+    chosen = delivery_named(delivery or BY_CHANNELS[widest])
+    counts = Counter(fact.rate_hz for fact in facts)
+    rate_hz = max(counts, key=lambda rate: (counts[rate], rate))
+    names = unique_names([safe_name(path.stem) for path in files])
+    tracks = tuple(_track(*entry, rate_hz) for entry in zip(names, files, facts, strict=True))
+    frames = max(track.frames for track in tracks)
+    channels = chosen.channels or widest
+    _say(notes, tracks, facts, rate_hz, frames, channels)
+    title = files[0].stem if len(files) == 1 else files[0].resolve().parent.name or "cut"
+    return Session(
+        title=title, rate_hz=rate_hz, frames=frames, tracks=tracks, set_aside=(), skips=(), corrections=(),
+        delivery=chosen, mix_channels=channels, settings=_settings(settings), notes=tuple(notes))
+
+
+def finish(
+    paths: Sequence[Path | str] | Path | str,
+    *,
+    out: Path | str | None = None,
+    replace: bool = False,
+    delivery: str | None = None,
+    settings: Mapping[str, Any] | None = None,
+    accept_short: bool = False,
+    on_progress: OnProgress = no_progress,
+) -> Finished:
+    """Bring a cut to its delivery: write mix.wav, mix.csv and report.json.
+
+    Parameters
+    ----------
+    paths : path or sequence of paths
+        One file, several that are summed, or a folder whose audio files are summed.
+    out : path, optional
+        Folder to write, `./levelled/<title> finished` by default; it appears whole or not at all.
+    replace : bool
+        Allow an existing folder to be replaced.
+    delivery : str, optional
+        Name of a delivery; by default `podcast-stereo` or `podcast-mono`, after the files' channels.
+    settings : mapping, optional
+        Settings of the limiter, such as `{"limiter.release_s": 0.2}`.
+    accept_short : bool
+        Take what is there of a file that is shorter than its header says.
+    on_progress : callable (stage, done, total), optional
+
+    Raises
+    ------
+    LevellerError
+        With one line that says what, where and the way out; nothing is written then.
+    """
+    from leveller.report.finished import write_finished
+
+    given = [paths] if isinstance(paths, str | Path) else paths
+    session = open_cut([Path(path) for path in given], delivery=delivery, settings=settings, accept_short=accept_short)
+    wanted = Path(out) if out is not None else DEFAULT_OUT / f"{safe_name(session.title)} finished"
+    needed = session.frames * session.mix_channels * (4 + 3) + MARGIN_BYTES
+    folder = OutputFolder(wanted, replace, needed_bytes=needed, sources=[track.path for track in session.tracks])
+    with folder:
+        finished = _delivered(session, folder, on_progress)
+        write_finished(folder, finished)
+    return finished
+
+
+def _delivered(session: Session, folder: OutputFolder, on_progress: OnProgress) -> Finished:
+    """Sum the files and deliver the sum."""
+    frames = round(BLOCK_S * session.rate_hz)
+    length_s = session.frames / session.rate_hz
+    with (FloatSpill(folder.work / ".sum", session.mix_channels) as spill, open_readers(session) as readers):
+        bus = Bus(session.rate_hz, session.mix_channels, spill)
+
+        def step(lane: int, block: int) -> Samples:
+            return _placed(readers[lane], min(frames, session.frames - block * frames), session.mix_channels)
+
+        for block, row in enumerate(walk(step, lanes=len(readers), blocks=-(-session.frames // frames))):
+            total = row[0].copy()
+            for part in row[1:]:
+                total += part
+            bus.push(total)
+            on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
+        repaired = tuple(reader.repaired_frames for reader in readers)
+        mix = bus.deliver(folder.work / "mix.wav", session.delivery, session.settings.limiter, frames, on_progress)
+    return Finished(session, mix, repaired, folder.path)
+
+
+def _placed(reader: TrackReader, frames: int, channels: int) -> Samples:
+    """The next block of a file with the channels of the mix."""
+    block = reader.read(frames)
+    if channels == 1:
+        return block if block.ndim == 1 else np.asarray(block.mean(axis=1))
+    return block if block.ndim == 2 else np.repeat(block[:, None], 2, axis=1)
+
+
+def _files(paths: Sequence[Path]) -> list[Path]:
+    """The audio files named, a folder's by name."""
+    if not paths:
+        raise InputError("no file given: expected the finished cut, or its stems")
+    out: list[Path] = []
+    for path in paths:
+        if not path.is_dir():
+            out.append(path)
+            continue
+        found = sorted(file for file in path.iterdir()
+                       if file.is_file() and not file.name.startswith(".") and file.suffix.lower() in AUDIO_SUFFIXES)
+        if not found:
+            raise InputError(f"{path}: no audio files directly in this folder")
+        out += found
+    twice = [path for path, count in Counter(path.resolve() for path in out).items() if count > 1]
+    if twice:
+        raise InputError(f"{twice[0]}: named twice, and would be heard twice as loud. Name each file once")
+    return out
+
+
+def _track(name: str, path: Path, facts: FileFacts, rate_hz: int) -> Track:
+    """A file as a track that is left as it is."""
+    frames = max(1, (2 * facts.frames * rate_hz + facts.rate_hz) // (2 * facts.rate_hz))
+    return Track(
+        name=name, path=path, channels=tuple(range(facts.channels)), width=facts.channels, role="bed", offset_frames=0,
+        frames=frames, source_rate_hz=facts.rate_hz, source_frames=facts.frames, is_float=facts.is_float, polarity=1,
+        pan=0.0, trim_db=0.0, high_pass_hz=None, loud_dbfs=0.0)
+
+
+def _say(
+    notes: list[str], tracks: Sequence[Track], facts: Sequence[FileFacts], rate_hz: int, frames: int, channels: int
+) -> None:
+    """Say what is not taken as it is."""
+    for track, fact in zip(tracks, facts, strict=True):
+        if fact.frames < fact.header_frames:
+            there_s, promised_s = fact.frames / fact.rate_hz, fact.header_frames / fact.rate_hz
+            notes.append(f"{track.name}: {there_s:.3f} s of {promised_s:.3f} s are there and taken")
+        if track.source_rate_hz != rate_hz:
+            notes.append(f"{track.name}: resampled from {track.source_rate_hz} to {rate_hz} Hz")
+        if track.frames < frames:
+            notes.append(f"{track.name}: ends {(frames - track.frames) / rate_hz:.3f} s before the end, "
+                         "padded with silence")
+        if track.width > channels:
+            notes.append(f"{track.name}: its two channels are averaged, since the delivery has one")
+        elif track.width < channels:
+            notes.append(f"{track.name}: one channel, heard unchanged on both")
+
+
+def _settings(values: Mapping[str, Any] | None) -> Settings:
+    """Settings, of which only the limiter's count here."""
+    for key in values or {}:
+        if not key.startswith("limiter."):
+            raise SettingsError(f"--set {key}: nothing but the limiter works on a finished cut; expected limiter.NAME")
+    return Settings().changed(values or {}, where="--set ")

@@ -1,0 +1,39 @@
+"""A finished cut -> the same kind of report as a session has: delivery, mix, what was said of the files."""
+
+from __future__ import annotations
+
+import dataclasses
+
+from leveller.cut import Finished
+from leveller.folder import OutputFolder
+from leveller.report.faults import mix_left_open
+from leveller.report.figures import delivery_figures, mix_figures
+from leveller.report.records import Fault, Report
+from leveller.report.tables import write_mix, write_report
+
+
+def finished_figures(finished: Finished) -> Report:
+    """All figures of a finished cut; it has no voices, and its speech is not told from the rest."""
+    report = Report(
+        title=finished.session.title, delivery=delivery_figures(finished.mix),
+        mix=mix_figures(finished, speech_lufs=None), voices=(), others=(), faults=_faults(finished), left_open=())
+    return dataclasses.replace(report, left_open=tuple(mix_left_open(report)))
+
+
+def write_finished(folder: OutputFolder, finished: Finished) -> Report:
+    """Write mix.csv and report.json; returns the report they were made from."""
+    report = finished_figures(finished)
+    write_mix(folder.file("mix.csv"), finished)
+    write_report(folder.file("report.json"), report, finished, stages=("limiter",))
+    return report
+
+
+def _faults(finished: Finished) -> tuple[Fault, ...]:
+    """What was not taken as it is, and what was repaired."""
+    names = [track.name for track in finished.session.tracks]
+    said = [Fault("note", next((name for name in names if note.startswith(f"{name}: ")), ""), note, ())
+            for note in finished.session.notes]
+    repaired = [Fault("repaired", name, f"{name}: {count} sample{'' if count == 1 else 's'} that held no number "
+                      "(NaN or Inf) silenced", ())
+                for name, count in zip(names, finished.repaired_frames, strict=True) if count]
+    return (*said, *repaired)

@@ -1,0 +1,52 @@
+"""Every setting with its value and where that came from: the default, session.toml or the command line."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+from leveller.errors import InputError
+from leveller.session import SESSION_FILE
+from leveller.sessionfile import SessionFile, read_session_file
+from leveller.settings import Settings
+
+DEFAULT = "default"
+SET = "--set"
+
+Row = tuple[str, str, str, str, str]  # key, value, unit, where it came from, reason of the default
+
+
+def settings_in_force(session: Path | None, assignments: Mapping[str, Any]) -> list[Row]:
+    """All settings as they would count for a session; no audio is opened.
+
+    Raises
+    ------
+    InputError, SettingsError
+        for a session that is not there, and as `open_session` does
+    """
+    said = _said(session)
+    written = dict(said.settings)
+    settings = Settings().changed(written, where=f"{said.where}: ").changed(assignments, where="--set ")
+
+    def origin(key: str) -> str:
+        return SET if key in assignments else said.where if key in written else DEFAULT
+
+    return [(key, value_text(value), unit, origin(key), why) for key, value, unit, why in settings.rows()]
+
+
+def value_text(value: Any) -> str:
+    """A value as session.toml and --set take it."""
+    return str(value).lower() if isinstance(value, bool) else f"{value:g}" if isinstance(value, float) else str(value)
+
+
+def _said(session: Path | None) -> SessionFile:
+    """What the session's file says, nothing without one."""
+    if session is None:
+        return SessionFile()
+    if not session.exists():
+        raise InputError(f"{session}: no such file or folder")
+    file = session / SESSION_FILE if session.is_dir() else session
+    if file.suffix.lower() != ".toml":
+        raise InputError(f"{session}: expected a folder or a session.toml")
+    return read_session_file(file) if file.exists() else SessionFile()

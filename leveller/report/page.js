@@ -1,0 +1,293 @@
+// Wiring: what a key, a click or a drag does, and what is said about the position.
+
+const KEYS = [
+  ["Left, Right", "a tenth of a second at close range, a second else; with Ctrl ten times as far"],
+  ["Up, Down", "the line above, the line below"],
+  ["Home, End", "start and end of the line; with Ctrl of the session"],
+  ["with Shift", "marks a stretch of the chosen track"],
+  ["T, Shift+T", "next track, track before"],
+  ["Enter", "marks the whole stretch of one state at the position"],
+  ["Space", "plays, or pauses; a marked stretch alone"],
+  ["1, 2, 3", "hear the source, the stem, the mix"],
+  ["N, P", "next doubtful place, place before: jumps and plays"],
+  ["O, B, S", "it is own voice, bleed, silence"],
+  ["G", "to the gain field"],
+  ["+, \u2212, 0", "shorter lines, longer lines, all on one line"],
+  ["Ctrl+Z, Ctrl+Y", "undo, redo"],
+  ["Escape", "unmarks"],
+];
+const LEAD_S = 1; // heard before and behind a doubtful place
+
+let place = -1;
+let saying = 0;
+
+function moveTo(time, {quiet = false} = {}) {
+  view.time = Math.max(0, Math.min(record.length_s, time));
+  show(view.time);
+  describe(quiet);
+  wantDrawing();
+}
+
+function choose(track) {
+  view.track = track;
+  byId("track").selectedIndex = track.index;
+  byId("mend-track").selectedIndex = track.index;
+  countShort();
+  if (sound.playing && sound.what !== "mix") playFrom(view.time, sound.until); else shownPlaying();
+  show(view.time);
+  describe();
+  wantDrawing();
+}
+
+function pick(track, from, to, {jump = false} = {}) {
+  const picked = {track, from: Math.max(0, Math.min(from, to)), to: Math.min(record.length_s, Math.max(from, to))};
+  view.picked = picked.to - picked.from < HOP_S / 2 ? null : picked;
+  if (track !== view.track) choose(track);
+  byId("scope-one").checked = true;
+  byId("mend-from").value = view.picked ? clock(view.picked.from) : "";
+  byId("mend-to").value = view.picked ? clock(view.picked.to) : "";
+  if (jump) moveTo(from);
+  else describe();
+  wantDrawing();
+}
+
+function unpick() {
+  view.picked = view.anchor = null;
+  byId("mend-from").value = byId("mend-to").value = "";
+  describe();
+  wantDrawing();
+}
+
+// The position in words: beside the score for all, and aloud for who cannot see it.
+function describe(quiet = false) {
+  byId("clock").textContent = clock(view.time);
+  const lufs = loudnessAt(view.time);
+  const parts = record.tracks.map((track) => `${track.name} ${stateWord(track, view.time)} ${signed(gainAt(track, view.time))} dB`);
+  if (lufs !== null) parts.push(`mix ${plain(lufs)} LUFS short-term`);
+  byId("reading").textContent = `At ${clock(view.time)}: ${parts.join(" \u00b7 ")}`;
+  if (quiet) return;
+  clearTimeout(saying);
+  saying = setTimeout(() => {
+    const picked = view.picked ? `, marked ${clock(view.picked.from)} to ${clock(view.picked.to)} on ${view.picked.track.name}` : "";
+    byId("said").textContent = `${clock(view.time)}, ${view.track.name}: ${stateWord(view.track, view.time)}, gain ${signed(gainAt(view.track, view.time))} dB${picked}`;
+  }, 300);
+}
+
+function toPlace(i) {
+  if (!record.places.length) return;
+  place = (i + record.places.length) % record.places.length;
+  const found = record.places[place];
+  [...byId("places").children].forEach((item, n) => item.toggleAttribute("data-here", n === place));
+  const item = byId("places").children[place];
+  if (document.activeElement?.closest("#places")) item.firstElementChild.focus();
+  item.scrollIntoView({block: "nearest"});
+  if (found.owner) pick(found.owner, found.from_s, found.to_s, {jump: true}); else moveTo(found.from_s);
+  playFrom(Math.max(0, found.from_s - LEAD_S), Math.min(record.length_s, found.to_s + LEAD_S));
+}
+
+function step(time, marking) {
+  const anchor = view.anchor ?? view.time;
+  if (sound.playing && !marking) playFrom(Math.max(0, Math.min(record.length_s, time)));
+  moveTo(time);
+  if (!marking) { if (view.picked) unpick(); view.anchor = null; return; }
+  pick(view.track, anchor, view.time);
+  view.anchor = anchor;
+}
+
+function takeRun() {
+  const run = runAt(view.track, view.time);
+  pick(view.track, view.track.runStart[run] * HOP_S, view.track.runStart[run + 1] * HOP_S);
+}
+
+function turnTrack(by) {
+  const count = record.tracks.length;
+  choose(record.tracks[(view.track.index + by + count) % count]);
+}
+
+function scoreKey(event) {
+  const near = view.span <= 30 ? 0.1 : 1, far = event.ctrlKey || event.metaKey ? 10 : 1;
+  const lineStart = lineOf(view.time) * view.span, lineEnd = Math.min(record.length_s, lineStart + view.span - HOP_S);
+  const moves = {
+    ArrowLeft: () => view.time - near * far, ArrowRight: () => view.time + near * far,
+    ArrowUp: () => view.time - view.span, ArrowDown: () => view.time + view.span,
+    PageUp: () => view.time - view.span * 3, PageDown: () => view.time + view.span * 3,
+    Home: () => (far > 1 ? 0 : lineStart), End: () => (far > 1 ? record.length_s : lineEnd),
+  };
+  if (event.key in moves) step(moves[event.key](), event.shiftKey);
+  else if (far > 1 || event.altKey || !letterKey(event)) return;
+  event.preventDefault();
+}
+
+function letterKey(event) {
+  const keys = {
+    " ": playOrPause, enter: takeRun, escape: unpick, t: () => turnTrack(event.shiftKey ? -1 : 1),
+    1: () => hear("source"), 2: () => hear("stem"), 3: () => hear("mix"), n: () => toPlace(place + 1), p: () => toPlace(place < 0 ? -1 : place - 1),
+    o: () => decide("own"), b: () => decide("bleed"), s: () => decide("silence"), g: () => byId("gain").focus(),
+    "+": () => nextSpan(false), "=": () => nextSpan(false), "-": () => nextSpan(true), 0: () => setSpan(wholeSpan()),
+  };
+  const act = keys[event.key.toLowerCase()];
+  if (act) act();
+  return Boolean(act);
+}
+
+function anyKey(event) {
+  if (!(event.ctrlKey || event.metaKey) || event.target.matches("input:not([type=radio])")) return;
+  const key = event.key.toLowerCase();
+  if (key === "z" || key === "y") {
+    event.preventDefault();
+    if (key === "y" || event.shiftKey) redo(); else undo();
+  }
+}
+
+let pressed = null;
+
+function spot(event) {
+  const box = marks.getBoundingClientRect();
+  return under(event.clientX - box.left, event.clientY - box.top);
+}
+
+function pressedDown(event) {
+  if (event.button !== 0) return;
+  const {time, track} = spot(event);
+  pressed = {x: event.clientX, y: event.clientY, time, track: track ?? view.track, moved: false};
+  marks.setPointerCapture(event.pointerId);
+}
+
+function dragged(event) {
+  if (!pressed) return;
+  pressed.moved ||= Math.hypot(event.clientX - pressed.x, event.clientY - pressed.y) > 4;
+  if (pressed.moved) pick(pressed.track, pressed.time, spot(event).time);
+}
+
+function released() {
+  if (!pressed) return;
+  const {time, track, moved} = pressed;
+  pressed = null;
+  if (moved) { moveTo(view.picked ? view.picked.from : time); return; }
+  view.anchor = null;
+  if (view.picked) unpick();
+  if (track !== view.track) choose(track);
+  const playing = Boolean(sound.playing);
+  moveTo(time);
+  if (playing) playFrom(time);
+}
+
+function wheeled(event) {
+  if (!event.ctrlKey) return;
+  event.preventDefault();
+  setSpan(view.span * Math.exp(event.deltaY / 400), spot(event).time);
+}
+
+function countShort() {
+  byId("short-count").textContent = String(shortAnswers(view.track, secondsOf(byId("short-s").value)).length);
+}
+
+function fill() {
+  const {delivery} = record, number = (value, text) => (value === null ? "silence" : `${plain(value)} ${text}`);
+  byId("title").textContent = record.title;
+  byId("facts").textContent = [clock(record.length_s, 0), `${record.tracks.length} ${record.tracks.length === 1 ? "track" : "tracks"}`,
+    `${delivery.name}: wanted ${plain(delivery.target_lufs)} LUFS under ${plain(delivery.ceiling_dbtp)} dBTP`,
+    `reads ${number(delivery.reads_lufs, "LUFS")}, ${number(delivery.peak_dbtp, "dBTP")}`,
+    delivery.met ? "on target" : `not on target${delivery.reason ? `: ${delivery.reason}` : ""}`].join(" \u00b7 ");
+  for (const id of ["track", "mend-track"])
+    byId(id).append(...record.tracks.map((track) => make("option", {}, track.name)));
+  fillHear();
+  fillPlaces();
+  byId("keys-list").append(...KEYS.flatMap(([key, does]) => [make("dt", {}, key), make("dd", {}, does)]));
+  byId("summary-box").hidden = !record.summary.length;
+  for (const {heading, lines: texts} of record.summary)
+    byId("summary").append(make("h3", {}, heading), make("ul", {}, ...texts.map((text) => make("li", {}, text))));
+  const legend = [["own", "own voice: filled"], ["bleed", "bleed: hatched"], ["silence", "silence: a line"],
+    ["gain", "gain before make-up: hangs from its highest, named at the left beside its lowest"], ["loud", "mix: short-term loudness, target dashed"]];
+  byId("legend").append(...legend.map(([kind, text]) => make("li", {class: kind}, text)));
+}
+
+function fillHear() {
+  for (const [what, text] of [["source", "source"], ["stem", "stem"], ["mix", "mix"]]) {
+    const radio = make("input", {type: "radio", name: "hear", id: `hear-${what}`, "aria-describedby": `hear-${what}-why`});
+    radio.addEventListener("change", () => hear(what));
+    byId("hear").append(make("label", {}, radio, ` ${text} `, make("small", {id: `hear-${what}-why`})));
+  }
+}
+
+function fillPlaces() {
+  byId("places-none").hidden = record.places.length > 0;
+  record.places.forEach((found, i) => {
+    found.owner = trackNamed(found.track);
+    const button = make("button", {type: "button", class: "entry"},
+      make("b", {}, `${clock(found.from_s, 1)} ${found.track}`), make("span", {}, ` ${found.decided}, could be ${found.could_be}`),
+      make("small", {}, `${found.reason} \u00b7 doubt ${plain(found.doubt, 2)}`));
+    button.addEventListener("click", () => toPlace(i));
+    button.addEventListener("keydown", (event) => {
+      const by = {ArrowDown: 1, ArrowUp: -1}[event.key];
+      if (by) toPlace(i + by);
+      else if (event.ctrlKey || event.metaKey || event.altKey || " Enter".includes(event.key) || !letterKey(event)) return;
+      event.preventDefault();
+    });
+    byId("places").append(make("li", {}, button));
+  });
+}
+
+function wire() {
+  const on = (id, kind, act) => byId(id).addEventListener(kind, act);
+  on("play", "click", playOrPause);
+  on("longer", "click", () => nextSpan(true));
+  on("shorter", "click", () => nextSpan(false));
+  on("whole", "click", () => setSpan(wholeSpan()));
+  for (const id of ["track", "mend-track"]) on(id, "change", () => choose(record.tracks[byId(id).selectedIndex]));
+  on("keys-open", "click", () => {
+    byId("keys").hidden = !byId("keys").hidden;
+    byId("keys-open").setAttribute("aria-expanded", String(!byId("keys").hidden));
+  });
+  for (const what of ["own", "bleed", "silence"]) on(`decide-${what}`, "click", () => decide(what));
+  on("decide-gain", "click", decideGain);
+  on("gain", "keydown", (event) => { if (event.key === "Enter") decideGain(); });
+  on("short-s", "input", countShort);
+  on("undo", "click", undo);
+  on("redo", "click", redo);
+  on("save", "click", save);
+  for (const id of ["mend-from", "mend-to"]) on(id, "change", typedStretch);
+  wireScore(on);
+}
+
+function typedStretch() {
+  const from = secondsOf(byId("mend-from").value), to = secondsOf(byId("mend-to").value);
+  if (from < to) pick(view.track, from, to, {jump: true});
+}
+
+function wireScore(on) {
+  on("score", "keydown", scoreKey);
+  on("score", "scroll", wantDrawing);
+  score.addEventListener("wheel", wheeled, {passive: false});
+  on("marks", "pointerdown", pressedDown);
+  on("marks", "pointermove", dragged);
+  on("marks", "pointerup", released);
+  on("marks", "pointercancel", () => { pressed = null; });
+  on("marks", "dblclick", (event) => {
+    const {time, track} = spot(event);
+    if (track) choose(track);
+    moveTo(time);
+    takeRun();
+    playOrPause();
+  });
+  on("map", "click", (event) => {
+    const box = map.getBoundingClientRect(), time = (event.clientX - box.left) / box.width * record.length_s;
+    if (sound.playing) playFrom(time);
+    moveTo(time);
+  });
+  document.addEventListener("keydown", anyKey);
+  new ResizeObserver(wantDrawing).observe(score);
+  for (const query of ["(prefers-color-scheme: dark)", "(forced-colors: active)", "(prefers-contrast: more)"])
+    matchMedia(query).addEventListener("change", mixInk);
+}
+
+recall();
+fill();
+wire();
+mixInk();
+setSpan(record.length_s <= 40 ? wholeSpan() : record.length_s <= 600 ? 20 : 60);
+choose(record.tracks[0]);
+listMends();
+describe(true);
+draw();
+document.documentElement.setAttribute("data-ready", "");

@@ -1,0 +1,135 @@
+"""speech.csv, mix.csv and report.json: one Result, three files to read by machine or in a spreadsheet.
+
+CSV after RFC 4180, header on line 1; text cells that a spreadsheet would run as a formula are quoted; what was not
+measured, and silence, is an empty cell. speech.csv holds every track's states as stretches, by time, then session
+order. mix.csv has a row every 0.1 s: the limiter's gain is the deepest of the 0.1 s that begin there, short-term
+loudness that of the 3 s that end there. report.json holds the whole `Report`, the settings, what made it and the
+sources' fingerprints; no clock time, no folder name, so that two runs give the same bytes.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import hashlib
+import json
+import math
+from collections.abc import Sequence
+from importlib import metadata
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+import leveller
+from leveller.audio import parts_of
+from leveller.automation import text_cell
+from leveller.errors import InputError
+from leveller.folder import OutputFolder
+from leveller.measure.loudness import SHORT_TERM_CELLS
+from leveller.plan import STATES
+from leveller.report.figures import figures_of
+from leveller.report.quantities import quantities, rounded
+from leveller.report.records import Report, Run
+from leveller.report.segments import segments_of
+from leveller.settings import STAGES
+from leveller.units import HOPS_PER_S
+
+if TYPE_CHECKING:
+    from leveller.pipeline import Result
+
+SPEECH_COLUMNS = ("from_s", "to_s", "track", "state", "sure", "level_lufs")
+MIX_COLUMNS = ("time_s", "make_up_db", "limiter_db", "short_term_lufs")
+STEPS_PER_S = 10  # rows of mix.csv
+LIBRARIES = ("numpy", "scipy", "soundfile", "soxr")
+JSON_FORM = 1  # raised when a key of report.json changes its meaning
+
+
+def write_tables(folder: OutputFolder, result: Result) -> Report:
+    """Write speech.csv, mix.csv and report.json; returns the report they were made from."""
+    report = figures_of(result)
+    write_speech(folder.file("speech.csv"), result)
+    write_mix(folder.file("mix.csv"), result)
+    write_report(folder.file("report.json"), report, result)
+    return report
+
+
+def write_speech(path: Path, result: Result) -> None:
+    """Who speaks when, track by track."""
+    rows = []
+    for i, track in enumerate(result.session.tracks):
+        found, name = segments_of(result, i), text_cell(track.name)
+        columns = (found.first_hop, found.end_hop, found.state, found.sure, found.level_lufs)
+        for first, end, state, sure, level in zip(*(column.tolist() for column in columns), strict=True):
+            rows.append((first, i, f"{first / HOPS_PER_S:.2f},{end / HOPS_PER_S:.2f},{name},{STATES[state]},"
+                                   f"{sure:.2f},{_number(level, 1)}\r\n"))
+    _write(path, SPEECH_COLUMNS, [text for _, _, text in sorted(rows)])
+
+
+def write_mix(path: Path, result: Run) -> None:
+    """Make-up, limiter and short-term loudness over time."""
+    mix = result.mix
+    length_s = result.session.frames / result.session.rate_hz
+    short_term, step_cells = mix.short_term_lufs, HOPS_PER_S // STEPS_PER_S
+    make_up = _number(mix.make_up_db, 2)
+    rows = []
+    for step in range(math.ceil(length_s * STEPS_PER_S - 1e-9)):
+        first, end = (round((step + n) / STEPS_PER_S / mix.cell_s) for n in (0, 1))
+        here = mix.limiter_db[first : end + 1]
+        window = step * step_cells - SHORT_TERM_CELLS
+        loudness = short_term[window] if 0 <= window < len(short_term) else math.nan
+        rows.append(f"{step / STEPS_PER_S:.1f},{make_up},{_number(float(here.min(initial=0.0)), 2)},"
+                    f"{_number(loudness, 1)}\r\n")
+    _write(path, MIX_COLUMNS, rows)
+
+
+def write_report(path: Path, report: Report, result: Run, *, stages: Sequence[str] = STAGES) -> None:
+    """The whole report, with what made it and the settings of the stages that were at work."""
+    content = {
+        "form": JSON_FORM,
+        "made_by": {"leveller": leveller.__version__, **{name: metadata.version(name) for name in LIBRARIES}},
+        **as_json(report),
+        "stems": result.stems,
+        "settings": {key: value for key, value, _, _ in result.session.settings.rows()
+                     if key.split(".")[0] in stages},
+        "sources": sources_of(result),
+    }
+    path.write_text(json.dumps(content, indent=1, ensure_ascii=False, allow_nan=False) + "\n", encoding="utf-8")
+
+
+def as_json(value: Any) -> Any:
+    """A record as plain values: quantities rounded, silence and what was not measured null, times to 10 ms."""
+    if dataclasses.is_dataclass(value):
+        known = quantities(value)
+        return {f.name: rounded(value, f.name) if f.name in known else as_json(getattr(value, f.name))
+                for f in dataclasses.fields(value)}
+    if isinstance(value, tuple):
+        return [as_json(part) for part in value]
+    return round(value, 2) if isinstance(value, float) else value
+
+
+def sources_of(result: Run) -> list[dict[str, Any]]:
+    """Name, size and SHA-256 of every file that was read, in session order, then those set aside."""
+    used = [part.path for track in result.session.tracks for part in parts_of(track)]
+    paths = dict.fromkeys([*used, *(aside.path for aside in result.session.set_aside)])
+    return [{"file": path.name, "bytes": path.stat().st_size, "sha256": _sha256(path)} for path in paths]
+
+
+def _sha256(path: Path) -> str:
+    """The fingerprint of a file."""
+    try:
+        with open(path, "rb") as file:
+            return hashlib.file_digest(file, "sha256").hexdigest()
+    except OSError as error:
+        raise InputError(f"{path}: cannot be read ({error.strerror})") from error
+
+
+def _number(value: float, decimals: int) -> str:
+    """A cell; empty for what is no number. No minus sign before zero."""
+    return f"{np.round(value, decimals) + 0.0:.{decimals}f}" if math.isfinite(value) else ""
+
+
+def _write(path: Path, columns: tuple[str, ...], rows: list[str]) -> None:
+    """A CSV file."""
+    with open(path, "w", encoding="utf-8", newline="") as file:
+        file.write(",".join(columns) + "\r\n")
+        file.writelines(rows)
