@@ -40,11 +40,11 @@ class ReadBack:
     """An automation file as it will be rendered."""
 
     plan: GainPlan
-    notes: tuple[str, ...]  # sentences for the user: what was rounded
-    edited_rows: int  # rows whose gain does not come from their parts
+    notes: tuple[str, ...]  # sentences for the user: what was edited and what was rounded
+    edited_rows: int  # rows of the cause `edit`: an editor's, of this file or of an earlier one
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, slots=True)
 class _Row:
     """One row of the file."""
 
@@ -109,7 +109,7 @@ def read_automation(path: Path, session: Session, *, hops: int, written: Ints) -
         out.append(_track_gain(own, written, tracks, path.name, track.name))
     edited = sum(int(np.count_nonzero(gain.cause == _EDIT)) for gain in out)
     ranges = tuple(max(0.0, -float(gain.parts_cdb[:, PARTS.index("expander")].min()) / 100) for gain in out)
-    return ReadBack(GainPlan(hops, tuple(out), ranges), _rounded(rows, path.name), edited)
+    return ReadBack(GainPlan(hops, tuple(out), ranges), _notes(rows, edited, path.name), edited)
 
 
 def text_cell(text: str) -> str:
@@ -224,9 +224,9 @@ def _key(hop: Ints, track: np.int64, gain_cdb: Ints, tracks: int) -> Ints:
     return (hop * tracks + track) * (high - low + 1) + (gain_cdb - low)
 
 
-def _rounded(rows: list[_Row], file: str) -> tuple[str, ...]:
-    """What was rounded, in words."""
-    notes = []
+def _notes(rows: list[_Row], edited: int, file: str) -> tuple[str, ...]:
+    """What was edited and what was rounded, in words."""
+    notes = [f"{file}: {edited} row{' has' if edited == 1 else 's have'} an editor's gain"] if edited else []
     for what, step, off in (("time_s", "the 10 ms grid", [row.line for row in rows if row.time_off]),
                             ("gain_db", "0.01 dB", [row.line for row in rows if row.gain_off])):
         if off:

@@ -14,15 +14,13 @@ import time
 from collections.abc import Callable, Iterable, Iterator, Mapping
 from typing import TYPE_CHECKING, Any, TextIO
 
-from leveller.units import clock
-
 if TYPE_CHECKING:
     from leveller.report.text import Line
 
 OnProgress = Callable[[str, float, float], None]
 
 WAIT_S = 2.0  # shorter work shows no progress
-PROCESS_SHARES = {"measure": 0.5, "render": 0.3, "mix": 0.2}  # of the wall time, roughly
+PROCESS_SHARES = {"measure": 0.45, "decide": 0.25, "render": 0.17, "mix": 0.13}  # of the wall time, measured
 FINISH_SHARES = {"render": 0.6, "mix": 0.4}
 READ_SHARES = {"read": 1.0}
 STYLES = {"head": "bold", "good": "green", "bad": "bold red", "dim": "dim", "plain": ""}
@@ -88,6 +86,7 @@ class Pace:
     def __init__(self, shares: Mapping[str, float], *, now: Callable[[], float] = time.monotonic) -> None:
         self._shares, self._now, self._started = shares, now, now()
         self.part = 0.0  # of the whole, never falling
+        self.stage = ""
 
     @property
     def elapsed_s(self) -> float:
@@ -100,13 +99,14 @@ class Pace:
         return self.elapsed_s * (1 - self.part) / self.part if self.part > 0 else None
 
     def update(self, stage: str, done: float, total: float) -> None:
-        """Take a report of a stage; a stage that is repeated does not go back."""
-        before = 0.0
-        for name, share in self._shares.items():
-            if name == stage:
-                self.part = max(self.part, min(1.0, before + share * done / max(total, 1e-9)))
-                return
-            before += share
+        """Take a report of a stage; a stage that is repeated does not go back, and one that is done gives way."""
+        names = list(self._shares)
+        if stage not in names:
+            return
+        at, done_part = names.index(stage), min(1.0, done / max(total, 1e-9))
+        before = sum(self._shares[name] for name in names[:at])
+        self.part = min(1.0, max(self.part, before + self._shares[stage] * done_part))
+        self.stage = names[min(at + 1, len(names) - 1)] if done_part == 1.0 else stage
 
 
 class _Bar:
@@ -123,9 +123,11 @@ class _Bar:
         if self._drawn is None and self._pace.elapsed_s >= WAIT_S:
             self._start()
         if self._drawn is not None:
+            from leveller.units import clock  # here, since it brings numpy, which help shall not wait for
+
             left_s = self._pace.left_s
             left = "" if left_s is None else f"{clock(left_s)} left"
-            self._drawn.update(self._task, completed=self._pace.part, stage=stage, left=left)
+            self._drawn.update(self._task, completed=self._pace.part, stage=self._pace.stage, left=left)
 
     def stop(self) -> None:
         """Take the line away."""

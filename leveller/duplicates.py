@@ -12,12 +12,11 @@ Least squares with gains held positive: C. L. Lawson, R. J. Hanson, Solving Leas
 from __future__ import annotations
 
 from collections.abc import Sequence
-from pathlib import Path
 
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import AudioSource, pieces, spread_starts
+from leveller.audio import AudioSource, Part, parts_of, pieces, spread_starts
 from leveller.units import db_to_power, power_to_db
 
 COPY_CORRELATION = 0.999
@@ -61,14 +60,14 @@ def find_duplicates(
 def _products(tracks: Sequence[AudioSource], rate_hz: int, frames: int) -> npt.NDArray[np.float64]:
     """Mean products of all pairs of tracks in the band, shape=(tracks, tracks)."""
     starts = spread_starts(frames, rate_hz)
-    groups: dict[tuple[Path, int], list[int]] = {}
+    groups: dict[tuple[tuple[Part, ...], int], list[int]] = {}
     for index, track in enumerate(tracks):
-        groups.setdefault((track.path, track.offset_frames), []).append(index)
+        groups.setdefault((parts_of(track), track.offset_frames), []).append(index)
     walks = []
-    for (path, offset), members in groups.items():
+    for (parts, offset), members in groups.items():
         source_hz = tracks[members[0]].source_rate_hz
         places = [round((start - offset) * source_hz / rate_hz) for start in starts]
-        walks.append((members, pieces(path, places, frames=source_hz)))
+        walks.append((members, pieces(parts, places, frames=source_hz)))
     total = np.zeros((len(tracks), len(tracks)))
     bins = BAND_HZ[1] - BAND_HZ[0]
     lines = np.empty((len(tracks), 2 * bins))

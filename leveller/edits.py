@@ -11,7 +11,9 @@ from __future__ import annotations
 import dataclasses
 import json
 import shutil
+from collections.abc import Mapping
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -76,6 +78,16 @@ def differences(folder: Path, session: Session) -> tuple[str, ...]:
              ("channels", f"{channels}", f"{session.mix_channels}"))
     return tuple(f"{what}: {before} in the report.json beside the automation, {after} by session and options now"
                  for what, before, after in pairs if before != after)
+
+
+def without_effect(settings: Mapping[str, Any] | None, corrections: Path | None) -> tuple[str, ...]:
+    """Sentences on options that cannot change gains which come from a file."""
+    notes = [f"--set {key}: no effect, the gains come from the automation file"
+             for key in settings or {} if not key.startswith("limiter.")]
+    if corrections is not None:
+        notes.append(f"{corrections.name}: changes the states in the tables only, the gains come from the automation "
+                     "file")
+    return tuple(notes)
 
 
 def keep_file(folder: OutputFolder, file: Path) -> None:

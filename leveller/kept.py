@@ -15,7 +15,6 @@ import contextlib
 import dataclasses
 import functools
 import hashlib
-import io
 import json
 import zipfile
 import zlib
@@ -160,6 +159,9 @@ def _read(path: Path) -> tuple[dict[str, Any], dict[str, npt.NDArray[Any]]]:
     """Record and arrays of such a zip; raises one of `_DAMAGE`."""
     with zipfile.ZipFile(path) as file:
         record = json.loads(file.read("record.json"))
-        arrays = {name.removesuffix(".npy"): np.lib.format.read_array(io.BytesIO(file.read(name)), allow_pickle=False)
-                  for name in file.namelist() if name.endswith(".npy")}
+        arrays = {}
+        for name in file.namelist():
+            if name.endswith(".npy"):
+                with file.open(name) as member:
+                    arrays[name.removesuffix(".npy")] = np.lib.format.read_array(member, allow_pickle=False)
     return record, arrays

@@ -12,24 +12,30 @@ from pathlib import Path
 from typing import Any
 
 from leveller.attribute import Activity, attribute
+from leveller.audio import parts_of
 from leveller.automation import NO_ROWS, read_automation, row_keys, write_automation
 from leveller.cut import Finished, finish
-from leveller.edits import differences, is_speech_table, keep_file, with_speech_table
+from leveller.edits import differences, is_speech_table, keep_file, with_speech_table, without_effect
 from leveller.errors import SettingsError
 from leveller.folder import OutputFolder
 from leveller.kept import MEASUREMENTS_FILE, ROWS_FILE, keep_measurements, keep_rows, kept_measurements, kept_rows
+from leveller.listen import Place, places_to_hear
+from leveller.marks import mark_files
 from leveller.measure import Measurements, OnProgress, measure, no_progress
 from leveller.names import safe_name
 from leveller.plan import GainPlan, make_plan
 from leveller.plan.corrections import check_corrections, overruled
 from leveller.render.mix import LEVELS, Mix, render
+from leveller.report.page import write_page
 from leveller.report.tables import write_tables
+from leveller.report.text import summary_blocks
 from leveller.session import Session, open_session
 from leveller.units import frames_to_hops
 
 __all__ = ["Finished", "Result", "finish", "process", "render_again"]
 
 DEFAULT_OUT = Path("levelled")
+KEPT_BYTES = 40  # of measurements, a hop and track
 MARGIN_BYTES = 64 << 20  # tables, page and what else is small
 
 
@@ -44,6 +50,7 @@ class Result:
     mix: Mix
     stems: str
     out: Path
+    places: tuple[Place, ...] = ()  # worth a listen, the most doubtful first
 
 
 def process(
@@ -90,7 +97,7 @@ def process(
     """
     session = _opened(sources, delivery, stems, settings, accept_short, corrections)
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
-                          sources=[track.path for track in session.tracks])
+                          sources=source_paths(session))
     with folder:
         measurements = kept_measurements(folder.path, session) or measure(session, on_progress=on_progress)
         activity = attribute(measurements, session)
@@ -131,8 +138,8 @@ def render_again(
     Returns
     -------
     Result
-        Its session's notes say what was rounded, how many rows were edited, and where delivery, rate or channels are
-        not those of the report.json beside the file.
+        Its session's notes say how many rows were edited, what was rounded, which options have no effect, and where
+        delivery, rate or channels are not those of the report.json beside the file.
 
     Raises
     ------
@@ -142,7 +149,7 @@ def render_again(
     automation = Path(automation)
     session = _opened(sources, delivery, stems, settings, accept_short, corrections)
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
-                          sources=[track.path for track in session.tracks])
+                          sources=source_paths(session))
     homes = (automation.parent, folder.path)
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
@@ -155,8 +162,8 @@ def render_again(
         if written is None:
             planned = make_plan(measurements, activity, session)
             read = read_automation(automation, session, hops=hops, written=row_keys(planned))
-        notes = (*session.notes, *differences(automation.parent, session), *read.notes)
-        session = dataclasses.replace(session, notes=notes)
+        notes = (*differences(automation.parent, session), *without_effect(settings, corrections), *read.notes)
+        session = dataclasses.replace(session, notes=(*session.notes, *notes))
         result = _delivered(folder, session, measurements, activity, read.plan, stems, on_progress)
         keep_file(folder, automation)
     return result
@@ -190,12 +197,21 @@ def _delivered(
 ) -> Result:
     """Render the plan and write all that belongs to it."""
     mix = render(session, plan, folder.work, stems=stems, on_progress=on_progress)
-    result = Result(session, measurements, overruled(activity, session), plan, mix, stems, folder.path)
+    activity = overruled(activity, session)
+    places = places_to_hear(activity, plan, session)
+    result = Result(session, measurements, activity, plan, mix, stems, folder.path, places)
+    mark_files(folder.work, session, mix, places)
     write_automation(folder.file("automation.csv"), plan, session)
-    write_tables(folder, result)
+    report = write_tables(folder, result)
+    write_page(folder.file("report.html"), result, places, summary_blocks(report))
     keep_rows(folder.file(ROWS_FILE), plan, session)
     keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
     return result
+
+
+def source_paths(session: Session) -> list[Path]:
+    """Every file the session reads."""
+    return [part.path for track in session.tracks for part in parts_of(track)] + [s.path for s in session.set_aside]
 
 
 def _out(out: Path | str | None, session: Session) -> Path:
@@ -204,6 +220,7 @@ def _out(out: Path | str | None, session: Session) -> Path:
 
 
 def _needed_bytes(session: Session) -> int:
-    """Room for float stems, the spilled sum and the mix."""
+    """Room for float stems, the spilled sum, the mix, and the measurements that are kept."""
     frame_bytes = session.mix_channels * (4 * len(session.tracks) + 4 + 3)
-    return session.frames * frame_bytes + MARGIN_BYTES
+    kept_bytes = KEPT_BYTES * len(session.tracks) * frames_to_hops(session.frames, session.rate_hz)
+    return session.frames * frame_bytes + kept_bytes + MARGIN_BYTES

@@ -16,7 +16,9 @@ SPEC = ConversationSpec(seed=5, seconds=20, rate_hz=RATE_HZ, people=2, room="rou
                         coughs_per_min=0, laughs_per_min=0)
 
 
-def written(folder: Path, spec: ConversationSpec = SPEC, names: tuple[str, ...] = ()) -> tuple[Conversation, list[Path]]:
+def written(
+    folder: Path, spec: ConversationSpec = SPEC, names: tuple[str, ...] = ()
+) -> tuple[Conversation, list[Path]]:
     """A conversation and its files, named as asked."""
     conversation = simulate(spec)
     paths = conversation.write(folder)

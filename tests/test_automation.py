@@ -152,7 +152,8 @@ def test_what_is_rounded_is_said(session: Session, tmp_path: Path) -> None:
     cells[at][0] = f"{float(cells[at][0]) + 0.0012:.4f}"
     cells[at + 1][4] = "1.2345"
     found = read(tmp_path / "a.csv", cells, session, plan)
-    assert found.notes == ("a.csv: time_s rounded to the 10 ms grid in 1 row (first on line 5)",
+    assert found.notes == ("a.csv: 1 row has an editor's gain",
+                           "a.csv: time_s rounded to the 10 ms grid in 1 row (first on line 5)",
                            "a.csv: gain_db rounded to 0.01 dB in 1 row (first on line 6)")
     assert 123 in np.concatenate([gain.gain_cdb for gain in found.plan.tracks])
 

@@ -11,7 +11,7 @@ import pytest
 
 from leveller import pipeline
 from leveller.errors import AutomationError, SettingsError
-from leveller.plan.corrections import expander_again_db, reopened, spliced_rows
+from leveller.plan.corrections import expander_again_db, reopened, spliced
 from leveller.plan.expander import expander_nodes_db
 from leveller.plan.thinning import kept_rows
 from leveller.render.gain import hop_gains_db
@@ -54,7 +54,7 @@ def test_own_opens_with_look_ahead_hold_and_ramps() -> None:
     """A stretch decided to be own is open from 0.18 s before to 0.24 s after, with ramps of 80 and 160 ms outside."""
     before, after = overruled(flags((0, 100)), flags((0, 100), (500, 600)), flags(), -7.0)
     depth = before[300]
-    assert depth == pytest.approx(-7.0, abs=1e-4)
+    assert -7.5 < depth < -6.5
     opening, closing = 500 - 18, 600 + 24
     assert np.all(after[opening : closing + 1] == 0)
     assert after[opening - 8 : opening + 1] == pytest.approx(np.linspace(depth, 0, 9), abs=1e-5)
@@ -98,26 +98,28 @@ def test_a_doubtful_closed_stretch_that_is_confirmed_closes_wholly() -> None:
 
 
 def test_rows_outside_a_change_are_kept_one_for_one() -> None:
-    """A change in the middle leaves every row before and after it, and is itself followed within the tolerance."""
+    """A change in the middle leaves every row and the line between rows before and after it, and is itself followed."""
     draw = np.random.default_rng(3)
     before = np.cumsum(draw.normal(0, 0.3, (HOPS + 1, 4)), axis=0)
     after = before.copy()
     after[450:520, 1] -= np.hanning(70) * 9
-    rows, touched = spliced_rows(before, after, 0.08)
+    curves, rows, touched = spliced(before, after, 0.08)
     old = kept_rows(np.column_stack([before, before.sum(axis=1)]), 0.08)
     first, last = rows[touched][0], rows[np.flatnonzero(touched)[-1] + 1]
-    assert 440 <= first <= 450
-    assert 519 <= last <= 530
-    outside = (rows <= first) | (rows >= last)
-    assert np.array_equal(rows[outside], old[(old <= first) | (old >= last)])
-    total = np.interp(np.arange(HOPS + 1), rows, after.sum(axis=1)[rows])
-    assert np.abs(total - after.sum(axis=1)).max() <= 0.08
+    assert (first, last) == (450, 519)  # a Hann window is 0 at its ends
+    assert np.array_equal(rows[(rows < first) | (rows > last)], old[(old < first) | (old > last)])
+    edge = np.arange(HOPS + 1)
+    heard, was = np.interp(edge, rows, curves.sum(axis=1)[rows]), np.interp(edge, old, before.sum(axis=1)[old])
+    away = (edge <= first) | (edge >= last)
+    assert np.allclose(heard[away], was[away], atol=1e-9)
+    assert np.abs(heard - after.sum(axis=1))[~away].max() <= 0.08 + 1e-9
 
 
 def test_without_a_change_the_rows_are_those_of_the_thinning() -> None:
     """No correction, no difference."""
     curves = np.cumsum(np.random.default_rng(4).normal(0, 0.3, (HOPS + 1, 4)), axis=0)
-    rows, touched = spliced_rows(curves, curves, 0.08)
+    same, rows, touched = spliced(curves, curves, 0.08)
+    assert same is curves
     assert np.array_equal(rows, kept_rows(np.column_stack([curves, curves.sum(axis=1)]), 0.08))
     assert not touched.any()
 
@@ -249,7 +251,8 @@ def test_an_edited_speech_table_is_a_set_of_corrections(place: Path, tmp_path: P
             row["state"] = "bleed"
     text = again.write_rows(tmp_path / "edit.csv", rows, delimiter=delimiter).read_text(encoding="utf-8")
     result = corrected(place, tmp_path, text, "speech.csv")
-    assert [(c.track, c.from_s, c.to_s, c.decide) for c in result.session.corrections] == [(track, from_s, to_s, "bleed")]
+    found = [(c.track, c.from_s, c.to_s, c.decide) for c in result.session.corrections]
+    assert found == [(track, from_s, to_s, "bleed")]
     table = (tmp_path / "out" / "automation.csv").read_bytes()
     corrected(place, tmp_path, f"track,from_s,to_s,decide\n{track},{from_s},{to_s},bleed\n")
     assert (tmp_path / "out" / "automation.csv").read_bytes() == table

@@ -111,6 +111,19 @@ def test_a_changed_delivery_is_said(place: Path, tmp_path: Path) -> None:
         "channels: 1 in the report.json beside the automation, 2 by session and options now")
 
 
+def test_options_without_effect_are_said(place: Path, tmp_path: Path) -> None:
+    """Settings of other stages than the limiter, and corrections, change no gain of a file: said, and so it is."""
+    file = tmp_path / "corrections.csv"
+    file.write_text("track,from_s,to_s,decide\nseat 1,1,2,own\n")
+    result = pipeline.render_again(
+        place / "in", place / "out" / "automation.csv", out=tmp_path / "b", corrections=file,
+        settings={"expander.range_db": 3, "limiter.release_s": 0.1})
+    assert result.session.notes == (
+        "--set expander.range_db: no effect, the gains come from the automation file",
+        "corrections.csv: changes the states in the tables only, the gains come from the automation file")
+    assert again.wavs(tmp_path / "b") == again.wavs(place / "out")
+
+
 def test_rendered_files_can_be_edited_again(place: Path, tmp_path: Path) -> None:
     """The automation written by a render holds the edit, its parts add up, and it renders to the same bytes."""
     rows = again.rows_of(place / "out" / "automation.csv")

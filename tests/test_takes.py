@@ -484,3 +484,12 @@ def test_file_of_a_take_that_changed_is_an_input_error(tmp_path: Path, number: i
     soundfile.write(tmp_path / f"rec_{number}.wav", sound(1, 0.5), RATE_HZ, "PCM_24")
     with pytest.raises(InputError, match=rf"rec_{number}\.wav: 8000 frames of 1 channels, but 16000 of 1 when it was "):
         heard(session)
+
+
+def test_copy_of_a_split_take_is_found(tmp_path: Path) -> None:
+    """A safety track in one piece is a copy of the take that another recorder split, behind its first file too."""
+    whole = series(tmp_path, [1, 5])
+    record(tmp_path / "safety.wav", 0.5 * whole, NOON)
+    session = open_session([tmp_path])
+    assert [track.name for track in session.tracks] == ["rec_1"]
+    assert [(aside.name, aside.why) for aside in session.set_aside] == [("safety", "a copy of rec_1")]

@@ -20,7 +20,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import pieces
+from leveller.audio import parts_of, pieces
 from leveller.session import Session, Track
 
 BAND_HZ = (100, 4000)
@@ -100,7 +100,7 @@ def _spectra(track: Track, rate_hz: int, starts_s: Sequence[float]) -> npt.NDArr
     places = [round((at - track.offset_frames / rate_hz) * source_hz) for at in starts_s]
     window = (np.hanning(source_hz + 1)[:-1] * track.polarity).astype(np.float32)
     out = np.zeros((len(places), BAND_HZ[1] - BAND_HZ[0]), np.complex64)
-    for row, block in enumerate(pieces(track.path, places, frames=source_hz)):
+    for row, block in enumerate(pieces(parts_of(track), places, frames=source_hz)):
         lines = np.fft.rfft(block[:, list(track.channels)].mean(axis=1) * window)[slice(*BAND_HZ)]
         out[row, : len(lines)] = lines
     return out

@@ -17,7 +17,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import AudioSource, pieces
+from leveller.audio import AudioSource, parts_of, pieces
 from leveller.units import power_to_db
 
 MAINS_HZ = (50, 60)
@@ -61,7 +61,7 @@ def read_hum(track: AudioSource, rate_hz: int, starts_s: Sequence[float]) -> Hum
     window = np.hanning(source_hz + 1)[:-1]
     scale = 2.0 / (source_hz * float(np.sum(window**2)))
     powers = []
-    for block in pieces(track.path, places, frames=source_hz):
+    for block in pieces(parts_of(track), places, frames=source_hz):
         one = block[:, list(track.channels)].mean(axis=1, dtype=np.float64)
         lines = np.fft.rfft((one - one.mean()) * window)[: HIGHEST_HZ + 2 * AROUND_HZ]
         powers.append((lines.real**2 + lines.imag**2) * scale)

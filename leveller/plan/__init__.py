@@ -19,7 +19,7 @@ from leveller.attribute import Activity
 from leveller.measure import Measurements
 from leveller.measure.levels import level_to_db
 from leveller.plan.compressor import compressor_nodes_db
-from leveller.plan.corrections import corrected_curves, overruled, spliced_rows
+from leveller.plan.corrections import corrected_curves, overruled, spliced
 from leveller.plan.expander import auto_range_db, expander_nodes_db, opened
 from leveller.plan.levels import k_power, level_lufs, own_speech
 from leveller.plan.ride import ride_nodes_db
@@ -132,10 +132,9 @@ def _thinned(curves: list[Nodes], corrected: list[Nodes], activity: Activity) ->
     """Corrected curves as rows; the tolerance widens only where a very long session would pass `MOST_ROWS`."""
     tolerance = TOLERANCE_DB * 0.8  # rounding to 0.01 dB, four parts, takes the rest
     while True:
-        rows = [spliced_rows(before, after, tolerance) for before, after in zip(curves, corrected, strict=True)]
-        if sum(len(kept) for kept, _ in rows) <= MOST_ROWS:
-            return tuple(_track_gain(curve, kept, touched, activity, i)
-                         for i, (curve, (kept, touched)) in enumerate(zip(corrected, rows, strict=True)))
+        found = [spliced(before, after, tolerance) for before, after in zip(curves, corrected, strict=True)]
+        if sum(len(rows) for _, rows, _ in found) <= MOST_ROWS:
+            return tuple(_track_gain(*kept, activity, i) for i, kept in enumerate(found))
         tolerance *= 1.5
 
 

@@ -7,7 +7,7 @@ what the tables say.) `gain_db` is added to the automatic trim, with ramps of 50
 corrections of one stretch the later counts.
 
 Levels, trims, ride, compressor and all other microphones stay as they were decided without the corrections, and so do
-the rows of the automation outside the reach of a correction: `spliced_rows` keeps them one for one.
+the rows of the automation outside the reach of a correction: `spliced` keeps them one for one.
 """
 
 from __future__ import annotations
@@ -30,7 +30,7 @@ from leveller.units import HOPS_PER_S, Bools, seconds_to_hops
 
 TRIM, EXPANDER = 0, 1  # places in `plan.PARTS`
 OFFSET_RAMP_HOPS = 5
-CERTAIN_NATS = 100.0  # the margin of a decision that the editor has made
+CERTAIN_NATS = 40.0  # the margin of a decision that the editor has made; its exponential still fits float32
 
 Nodes = npt.NDArray[np.float32]
 
@@ -107,15 +107,18 @@ def _own_of(session: Session, track: int, own: Bools) -> Bools:
 
 def offset_nodes_db(session: Session, track: int, hops: int) -> Nodes:
     """What the corrections add to the gain of one track at hop edges, shape=(hops + 1,)."""
-    out = np.zeros(hops + 1, np.float32)
-    edge = np.arange(hops + 1)
+    wanted, said = np.zeros(hops, np.float32), np.zeros(hops, np.bool_)
     for correction in session.corrections:
         if correction.gain_db is not None and _index(correction, session) == track:
-            place = _hops_of(correction)
-            away = np.maximum(np.maximum(place.start - edge, edge - place.stop), 0)
-            part = np.maximum(0, 1 - away / OFFSET_RAMP_HOPS).astype(np.float32)
-            out += part * (np.float32(correction.gain_db) - out)
-    return out
+            wanted[_hops_of(correction)], said[_hops_of(correction)] = correction.gain_db, True
+    drawn_out = wanted.copy()
+    before, after = OFFSET_RAMP_HOPS // 2, OFFSET_RAMP_HOPS - OFFSET_RAMP_HOPS // 2
+    for first, end in stretches(said):  # so that the mean over a ramp's length reaches the whole offset at either end
+        drawn_out[max(first - before, 0) : first] = wanted[first]
+        drawn_out[end : end + after] = wanted[end - 1]
+    drawn_out[said] = wanted[said]
+    padded = np.pad(drawn_out, (before, after), "edge")
+    return np.convolve(padded, np.full(OFFSET_RAMP_HOPS, 1 / OFFSET_RAMP_HOPS), "valid").astype(np.float32)
 
 
 def reopened(
@@ -169,8 +172,11 @@ def expander_again_db(
     return np.where(near, _ramped(wanted, attack, release), nodes_db).astype(np.float32)
 
 
-def spliced_rows(before: Nodes, after: Nodes, tolerance_db: float) -> tuple[npt.NDArray[np.int64], Bools]:
-    """Rows of a track's changed curves, those of the unchanged ones kept wherever nothing changes.
+def spliced(before: Nodes, after: Nodes, tolerance_db: float) -> tuple[Nodes, npt.NDArray[np.int64], Bools]:
+    """Changed curves of a track and their rows; what is heard stays the same wherever nothing changes.
+
+    The rows of the unchanged curves are kept outside the change. Where it begins and ends a row is set, on the line
+    that was heard without the change.
 
     Parameters
     ----------
@@ -179,21 +185,29 @@ def spliced_rows(before: Nodes, after: Nodes, tolerance_db: float) -> tuple[npt.
 
     Returns
     -------
+    curves : shape=(hops + 1, curves)
     rows : shape=(rows,)
     touched : shape=(rows,)
-        What follows the row, up to the next, is within the reach of a correction.
+        What follows the row, up to the next, is changed.
     """
-    before, after = (np.column_stack([curves, curves.sum(axis=1)]) for curves in (before, after))
-    rows = kept_rows(before, tolerance_db)
-    changed = stretches((before != after).any(axis=1))
-    first = np.maximum(np.searchsorted(rows, changed[:, 0], side="right") - 1, 0)
-    last = np.minimum(np.searchsorted(rows, changed[:, 1] - 1, side="left"), len(rows) - 1)
-    inside = flagged(np.stack([rows[first], rows[last] + 1], axis=1), len(before))
-    pieces = [rows[~inside[rows]]]
-    for begin, end in stretches(inside):
-        pieces.append(begin + kept_rows(after[begin:end], tolerance_db))
+    rows = kept_rows(_with_sum(before), tolerance_db)
+    changed = (before != after).any(axis=1)
+    if not changed.any():
+        return after, rows, np.zeros(len(rows), np.bool_)
+    reach = flagged(stretches(changed) + np.array([-1, 1]), len(before))
+    out = after.copy()
+    border = np.flatnonzero(reach & ~changed)
+    for curve in range(before.shape[1]):
+        out[border, curve] = np.interp(border, rows, before[rows, curve])
+    pieces = [rows[~reach[rows]], *(first + kept_rows(_with_sum(out[first:end]), tolerance_db)
+                                    for first, end in stretches(reach))]
     merged = np.sort(np.concatenate(pieces))
-    return merged, np.asarray(inside[merged] & np.append(inside[1:], False)[merged])
+    return out, merged, np.asarray(reach[merged] & np.append(reach[1:], False)[merged])
+
+
+def _with_sum(curves_db: Nodes) -> Nodes:
+    """The curves and their sum."""
+    return np.column_stack([curves_db, curves_db.sum(axis=1)])
 
 
 def _depths(nodes_db: Nodes, open_: Bools, range_db: float) -> Nodes:

@@ -63,7 +63,7 @@ def _smoothed(level: Grid, weight: Grid, window_s: float) -> Grid:
     sigma = window_s / CELL_S / 4
     reach = int(np.ceil(3 * sigma))
     kernel = np.exp(-0.5 * (np.arange(-reach, reach + 1) / sigma) ** 2)
-    usual = np.full(len(level), np.average(level, weights=weight))
+    usual: npt.NDArray[np.float64] = np.full(len(level), float(np.average(level, weights=weight)))
     for _ in range(2):
         heard = weight * (np.abs(level - usual) < UNUSUAL_DB) * 10 ** (np.minimum(level, 6) / 20)
         top = np.convolve(level * heard, kernel, "full")[reach : reach + len(level)]

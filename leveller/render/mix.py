@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -18,7 +19,7 @@ import numpy as np
 import numpy.typing as npt
 
 from leveller.audio import FloatSpill, TrackReader, WavWriter, file_blocks, open_readers, scale_float_wav
-from leveller.lanes import walk
+from leveller.lanes import thread_count, walk
 from leveller.measure.loudness import Loudness, LoudnessMeter, short_term_lufs
 from leveller.measure.peaks import TruePeakMeter
 from leveller.plan import GainPlan
@@ -87,7 +88,7 @@ def render(
         if stems == LEVELS[0]:
             scale_float_wav(path, float(db_to_gain(mix.make_up_db)))
         else:
-            _limit_stem(path, mix, session.rate_hz, frames)
+            _limit_stem(path, mix, session.rate_hz, session.frames, frames)
     return mix
 
 
@@ -130,13 +131,12 @@ class Bus:
         loudness, peaks = LoudnessMeter(self._rate_hz, self._channels), TruePeakMeter(self._rate_hz, self._channels)
         total = self._spill.frames / self._rate_hz
         at = 0
-        with WavWriter(path, self._rate_hz, self._channels, "pcm24", expected_frames=self._spill.frames) as writer:
+        with (ThreadPoolExecutor(thread_count()) as pool,
+              WavWriter(path, self._rate_hz, self._channels, "pcm24", expected_frames=self._spill.frames) as writer):
             for block in self._spill.blocks(frames):
                 out = apply_nodes(block, make_up.nodes_db, first_frame=at, cell_frames=peaks.cell_frames,
                                   make_up_db=make_up.make_up_db)
-                writer.write(out)
-                loudness.push(out)
-                peaks.push(out)
+                list(pool.map(lambda take, out=out: take(out), (writer.write, loudness.push, peaks.push)))
                 at += len(block)
                 on_progress("mix", at / self._rate_hz, total)
         reading = peaks.result()
@@ -200,11 +200,11 @@ def pan_gains(pan: float) -> Samples:
     return np.array([math.cos(angle), math.sin(angle)], np.float32)
 
 
-def _limit_stem(path: Path, mix: Mix, rate_hz: int, frames: int) -> None:
+def _limit_stem(path: Path, mix: Mix, rate_hz: int, frames_in_all: int, frames: int) -> None:
     """Replace a float stem by a 24-bit one that has make-up and the limiter's gain."""
     limited = path.with_suffix(".limited")
     at = 0
-    with WavWriter(limited, rate_hz, mix.channels, "pcm24") as writer:
+    with WavWriter(limited, rate_hz, mix.channels, "pcm24", expected_frames=frames_in_all) as writer:
         for block in file_blocks(path, frames):
             writer.write(apply_nodes(block, mix.limiter_db, first_frame=at, cell_frames=round(mix.cell_s * rate_hz),
                                      make_up_db=mix.make_up_db))

@@ -57,11 +57,11 @@ def _session_faults(result: Result) -> Iterator[Fault]:
     for skip in session.skips:
         marked[seconds_to_hops(skip.from_s) : seconds_to_hops(skip.to_s)] = True
         why = f" ({skip.why})" if skip.why else ""
-        yield Fault("skip", "", f"marked to be skipped{why}: left out of every figure", ((skip.from_s, skip.to_s),))
+        yield Fault("skip", "", f"marked to be skipped{why}, so levelling does not count it", ((skip.from_s, skip.to_s),))
     tone = stretches(~result.activity.programme & ~marked)
     if len(tone):
         places = tuple((int(a) / HOPS_PER_S, int(b) / HOPS_PER_S) for a, b in tone)
-        yield Fault("tone", "", "steady tone: left out of every figure", places)
+        yield Fault("tone", "", "steady tone, so levelling does not count it", places)
 
 
 def _track_faults(result: Result) -> Iterator[Fault]:
@@ -77,11 +77,12 @@ def _track_faults(result: Result) -> Iterator[Fault]:
         if track.role == "voice" and not result.activity.own[:, i].any():
             yield Fault("nobody", track.name, f"nobody speaks into {track.name}: it has no trim and stays closed "
                         "while others speak", ())
-        yield from _waveform_faults(track.name, peaks)
+        padded = result.session.frames / track.frames  # the mean was taken over the padding too
+        yield from _waveform_faults(track.name, peaks, padded)
         yield from _knob_faults(track.name, result.plan.tracks[i])
 
 
-def _waveform_faults(name: str, peaks: PeakReading) -> Iterator[Fault]:
+def _waveform_faults(name: str, peaks: PeakReading, padded: float) -> Iterator[Fault]:
     """Clipping, peaks over full scale, DC."""
     if peaks.clipped:
         yield Fault("clipped", name, f"{name}: clipped in {_count(len(peaks.clipped), 'place')}", peaks.clipped)
@@ -89,7 +90,7 @@ def _waveform_faults(name: str, peaks: PeakReading) -> Iterator[Fault]:
         at = peaks.sample_peak_s
         yield Fault("over full scale", name, f"{name}: peaks reach {peaks.sample_peak_dbfs:+.1f} dBFS; the file holds "
                     "floats, so nothing is lost", ((at, at),))
-    dc_dbfs = gain_to_db(max(map(abs, peaks.dc_offset)))
+    dc_dbfs = gain_to_db(max(map(abs, peaks.dc_offset)) * padded)
     if dc_dbfs > DC_DBFS:
         yield Fault("DC", name, f"{name}: DC offset of {dc_dbfs:.0f} dBFS, left as it is; high_pass_hz = 20 for this "
                     "track removes it", ())

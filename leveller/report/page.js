@@ -183,11 +183,11 @@ function countShort() {
 }
 
 function fill() {
-  const {delivery} = record, number = (value, text) => (value === null ? "silence" : `${plain(value)} ${text}`);
+  const {delivery} = record, silent = delivery.reads_lufs === null || delivery.peak_dbtp === null;
   byId("title").textContent = record.title;
   byId("facts").textContent = [clock(record.length_s, 0), `${record.tracks.length} ${record.tracks.length === 1 ? "track" : "tracks"}`,
     `${delivery.name}: wanted ${plain(delivery.target_lufs)} LUFS under ${plain(delivery.ceiling_dbtp)} dBTP`,
-    `reads ${number(delivery.reads_lufs, "LUFS")}, ${number(delivery.peak_dbtp, "dBTP")}`,
+    silent ? "reads silent" : `reads ${plain(delivery.reads_lufs)} LUFS, ${plain(delivery.peak_dbtp)} dBTP`,
     delivery.met ? "on target" : `not on target${delivery.reason ? `: ${delivery.reason}` : ""}`].join(" \u00b7 ");
   for (const id of ["track", "mend-track"])
     byId(id).append(...record.tracks.map((track) => make("option", {}, track.name)));

@@ -14,6 +14,7 @@ import hashlib
 import json
 import math
 from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
 from importlib import metadata
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -25,6 +26,8 @@ from leveller.audio import parts_of
 from leveller.automation import text_cell
 from leveller.errors import InputError
 from leveller.folder import OutputFolder
+from leveller.lanes import thread_count
+from leveller.listen import Place
 from leveller.measure.loudness import SHORT_TERM_CELLS
 from leveller.plan import STATES
 from leveller.report.figures import figures_of
@@ -38,6 +41,7 @@ if TYPE_CHECKING:
     from leveller.pipeline import Result
 
 SPEECH_COLUMNS = ("from_s", "to_s", "track", "state", "sure", "level_lufs")
+LISTEN_COLUMNS = ("from_s", "to_s", "track", "decided", "could_be", "reason", "doubt")
 MIX_COLUMNS = ("time_s", "make_up_db", "limiter_db", "short_term_lufs")
 STEPS_PER_S = 10  # rows of mix.csv
 LIBRARIES = ("numpy", "scipy", "soundfile", "soxr")
@@ -49,6 +53,7 @@ def write_tables(folder: OutputFolder, result: Result) -> Report:
     report = figures_of(result)
     write_speech(folder.file("speech.csv"), result)
     write_mix(folder.file("mix.csv"), result)
+    write_listen(folder.file("listen.csv"), result.places)
     write_report(folder.file("report.json"), report, result)
     return report
 
@@ -63,6 +68,13 @@ def write_speech(path: Path, result: Result) -> None:
             rows.append((first, i, f"{first / HOPS_PER_S:.2f},{end / HOPS_PER_S:.2f},{name},{STATES[state]},"
                                    f"{sure:.2f},{_number(level, 1)}\r\n"))
     _write(path, SPEECH_COLUMNS, [text for _, _, text in sorted(rows)])
+
+
+def write_listen(path: Path, places: Sequence[Place]) -> None:
+    """The places to hear, the most doubtful first."""
+    _write(path, LISTEN_COLUMNS, [
+        f"{place.from_s:.2f},{place.to_s:.2f},{text_cell(place.track)},{place.decided},{place.could_be},"
+        f"{text_cell(place.reason)},{place.doubt:.3f}\r\n" for place in places])
 
 
 def write_mix(path: Path, result: Run) -> None:
@@ -111,7 +123,10 @@ def sources_of(result: Run) -> list[dict[str, Any]]:
     """Name, size and SHA-256 of every file that was read, in session order, then those set aside."""
     used = [part.path for track in result.session.tracks for part in parts_of(track)]
     paths = dict.fromkeys([*used, *(aside.path for aside in result.session.set_aside)])
-    return [{"file": path.name, "bytes": path.stat().st_size, "sha256": _sha256(path)} for path in paths]
+    with ThreadPoolExecutor(thread_count()) as pool:  # hashing releases the interpreter lock
+        digests = list(pool.map(_sha256, paths))
+    return [{"file": path.name, "bytes": path.stat().st_size, "sha256": digest}
+            for path, digest in zip(paths, digests, strict=True)]
 
 
 def _sha256(path: Path) -> str:

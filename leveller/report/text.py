@@ -55,6 +55,15 @@ def format_summary(report: Report, *, out: str, width: int | None = None) -> lis
     return _joined(blocks)
 
 
+def summary_blocks(report: Report) -> list[tuple[str, list[str]]]:
+    """The summary as headings with their lines, for the page."""
+    blocks = [
+        ("Delivery", _delivery_lines(report, None)), ("Voices", _voice_lines(report, None) + _other_lines(report, None)),
+        ("Mix", _mix_lines(report.mix)), ("Sources", _list_lines("Sources", map(fault_text, report.faults), None)),
+        ("Left open", _list_lines("Left open", report.left_open, None))]
+    return [(heading, [line.text for line in lines if line.text != heading]) for heading, lines in blocks if lines]
+
+
 def format_readings(readings: Sequence[FileReading], *, width: int | None = None) -> list[Line]:
     """A row for each file that was measured."""
     columns = [Column("File"), Column("length"), Column("LUFS"), Column("range"), Column("most", "short-term"),
@@ -141,7 +150,7 @@ def _delivery_lines(report: Report, width: int | None) -> list[Line]:
     asked, mix = report.delivery, report.mix
     reads = f"{shown(mix, 'integrated_lufs', unit=True)}, true peak {shown(mix, 'true_peak_dbtp', unit=True)}"
     verdict = f"Delivery met: {reads}" if asked.met else f"Delivery NOT met: {visible(asked.why_not)}"
-    channels = "one channel" if mix.channels == 1 else f"{mix.channels} channels"
+    channels = {1: "one channel", 2: "two channels"}.get(mix.channels, f"{mix.channels} channels")
     wants = (f"{asked.name} asks for {shown(asked, 'target_lufs', unit=True)} and at most "
              f"{shown(asked, 'ceiling_dbtp', unit=True)}")
     about = f"{visible(report.title)}: {shown(mix, 'length_s')}, {channels} at {mix.rate_hz} Hz"

@@ -62,7 +62,7 @@ def _one_voice(result: Result, i: int, counted: Bools, pause: Bools) -> VoiceFig
     furthest = {part: _furthest(gain.parts_cdb[:, k]) for k, part in enumerate(PARTS)}
     return VoiceFigures(
         track=result.session.tracks[i].name,
-        speaks_s=np.count_nonzero(activity.own[:, i] & activity.programme) / HOPS_PER_S,
+        speaks_s=int(np.count_nonzero(activity.own[:, i] & activity.programme)) / HOPS_PER_S,
         before_lufs=own_before, after_lufs=own_after,
         noise_before_lufs=_median_lufs(before, quiet), noise_after_lufs=_median_lufs(after, quiet),
         bleed_before_db=_against(level_lufs(before, others), own_before),

@@ -396,8 +396,7 @@ def test_refused_input_gets_a_word(page: Page) -> None:
 def test_states_are_told_apart_without_colour(page: Page, result: Result) -> None:
     """In grey, own voice is an even area and bleed is striped: each as the record decided it."""
     page.keys("0")
-    own = page.script(GREY_ROWS, 0.30)
-    levels = np.array(own, float)  # one row of pixels just above the first track's base line
+    levels = np.array(page.script(GREY_ROW), float)  # one row of pixels just above the first track's base line
     hops = np.linspace(0, 100 * SECONDS, len(levels), endpoint=False).astype(int)
     loud = result.measurements.k_levels[:, 0] > np.percentile(result.measurements.k_levels[:, 0], 60)
     mine = result.activity.own[hops, 0] & loud[hops]
@@ -408,16 +407,15 @@ def test_states_are_told_apart_without_colour(page: Page, result: Result) -> Non
     assert np.std(levels[theirs]) > 25 > 2 * np.std(np.sort(levels[mine])[: int(0.8 * mine.sum())])
 
 
-GREY_ROWS = """
+GREY_ROW = """
 const seen = document.getElementById('lines'), canvas = document.createElement('canvas');
 [canvas.width, canvas.height] = [seen.width, seen.height];
 const pen = canvas.getContext('2d', {willReadFrequently: true});
 pen.drawImage(seen, 0, 0);
 const left = 116, width = canvas.width - left - 14;  // GUTTER and RIGHT of page_score.js
-const column = pen.getImageData(left + 2, 0, 1, canvas.height).data;
-let base = 24;  // the ribbon of the first track: its first dark row of the filled band, searched from the top
-while (base < canvas.height - 1 && !(column[4 * base + 3] > 200 && column[4 * (base + 4) + 3] > 200)) base++;
-const row = pen.getImageData(left, base - 6, width, 1).data, out = [];
+const bands = 24 + 36 + 20 + 3 * (38 + 12 + 20 + 9);  // BANDS of page_score.js: one line of three tracks
+const base = 24 + 38 * Math.min(2.2, document.getElementById('score').clientHeight / bands);
+const row = pen.getImageData(left, Math.round(base) - 6, width, 1).data, out = [];
 for (let x = 0; x < width; x++) {
   const a = row[4 * x + 3] / 255;
   out.push((row[4 * x] * 0.3 + row[4 * x + 1] * 0.59 + row[4 * x + 2] * 0.11) * a + 255 * (1 - a));
