@@ -160,13 +160,13 @@ def settings(
 ) -> None:
     """List every setting and where it came from."""
     with _reported(debug):
-        from leveller.report.origins import settings_in_force
+        from leveller.report.origins import delivery_in_force, settings_in_force
         from leveller.report.text import format_settings
         from leveller.settings import DELIVERIES, parse_assignments
 
         rows = settings_in_force(session, parse_assignments(assignments or []))
         lines = format_settings([row if why else (*row[:4], "") for row in rows], list(DELIVERIES.values()),
-                                width=console.terminal_width(sys.stdout))
+                                delivery_in_force(session), width=console.terminal_width(sys.stdout))
         console.print_lines(lines)
 
 

@@ -16,6 +16,7 @@ import dataclasses
 import functools
 import hashlib
 import json
+import typing
 import zipfile
 import zlib
 from pathlib import Path
@@ -28,15 +29,12 @@ from leveller import __version__
 from leveller.audio import parts_of
 from leveller.automation import row_keys
 from leveller.measure import Measurements
-from leveller.measure.arrival import Arrivals
-from leveller.measure.peaks import PeakReading
 from leveller.plan import GainPlan
 from leveller.session import Session
 
 MEASUREMENTS_FILE = ".measurements.npz"
 ROWS_FILE = ".automation.npz"
 END_BYTES = 1 << 20
-_RECORDS = {record.__name__: record for record in (Measurements, Arrivals, PeakReading)}
 _MEASURING = ("measure/*.py", "audio.py", "decoder.py", "samples.py", "lanes.py", "units.py")  # shape the numbers
 _DAMAGE = (OSError, EOFError, ValueError, KeyError, TypeError, IndexError, zipfile.BadZipFile, zlib.error,
            NotImplementedError, RuntimeError)
@@ -135,7 +133,18 @@ def _unpacked(value: Any, arrays: dict[str, npt.NDArray[Any]]) -> Any:
         return arrays[value["array"]]
     if "tuple" in value:
         return tuple(_unpacked(part, arrays) for part in value["tuple"])
-    return _RECORDS[value["of"]](**{name: _unpacked(part, arrays) for name, part in value["fields"].items()})
+    return _records(Measurements)[value["of"]](**{name: _unpacked(part, arrays) for name, part in value["fields"].items()})
+
+
+@functools.cache
+def _records(kind: type[Any]) -> dict[str, type[Any]]:
+    """The record and those that its fields hold, by name."""
+    found = {kind.__name__: kind}
+    for hint in typing.get_type_hints(kind).values():
+        for part in (hint, *typing.get_args(hint)):
+            if isinstance(part, type) and dataclasses.is_dataclass(part):
+                found |= _records(part)
+    return found
 
 
 def _write(path: Path, record: dict[str, Any], arrays: dict[str, npt.NDArray[Any]]) -> None:

@@ -27,7 +27,8 @@ from leveller.attribute.coupling import NONE_DB, Coupling, estimate_coupling
 from leveller.attribute.decode import margins
 from leveller.attribute.floor import noise_floor, quietest_db
 from leveller.attribute.knobs import Step, knob_steps
-from leveller.attribute.seeds import NOBODY, Labels, first_labels
+from leveller.attribute.lag import find_lags
+from leveller.attribute.seeds import NOBODY, Labels, first_labels, labels_by_level
 from leveller.attribute.tone import steady_tone
 from leveller.measure import Measurements
 from leveller.measure.levels import STEP_DB, level_to_db
@@ -77,9 +78,11 @@ def attribute(m: Measurements, session: Session) -> Activity:
 def _decided(m: Measurements, programme: Bools) -> Activity:
     """The story above, over voice tracks only."""
     floor_db = noise_floor(m.levels)
-    labels = first_labels(m, _audible(m, floor_db), programme)
+    audible_db = _audible(m, floor_db)
+    lags = find_lags(audible_db, labels_by_level(m, audible_db, programme))
+    labels = first_labels(m, audible_db, programme)
     for _ in range(ROUNDS):
-        coupling = estimate_coupling(m.levels, floor_db, labels)
+        coupling = estimate_coupling(m.levels, floor_db, labels, lags)
         evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=TAIL_DB_PER_HOP)
         labels = _relabelled(evidence, programme)
     margin = margins(np.where(programme[:, None], evidence.own, 0))

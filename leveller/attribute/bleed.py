@@ -10,7 +10,8 @@ Per block of 5 s and band:
 3. *Evidence.* In each band the level over predicted bleed plus noise is about 0 dB in bleed, with a scatter of some 4 to 5 dB, and
    anywhere up to 30 dB in own speech, which need not fill all bands. So the likelihood of bleed is a normal one and that of own
    speech a mixture of it with a uniform one; the mean over bands of the log ratio, times `INDEPENDENT` (neighbouring
-   bands and hops are not independent), is the evidence in nats.
+   bands and hops are not independent), is the evidence in nats. The lowest bands count by themselves as
+   well, since an "mm" fills no others.
 
 Published relatives: level differences between channels beat correlation features (K. Boakye, A. Stolcke, Interspeech 2006);
 sources from an interference matrix (E. Kokkinis et al., 2012; T. Praetzlich et al., ICASSP 2015).
@@ -24,6 +25,7 @@ import numpy as np
 import numpy.typing as npt
 
 from leveller.attribute.coupling import LEAST_EVER, STEP_HOPS, Coupling
+from leveller.attribute.lag import Lags
 from leveller.measure.levels import STEP_DB, Levels
 from leveller.units import HOPS_PER_S
 
@@ -38,6 +40,8 @@ INDEPENDENT = 3.0  # what 14 bands and three overlapping hops are worth together
 LEANING = 0.36  # nats: in doubt, open
 CLIP = 1.5  # nats a hop can say at most
 AUDIBLE_DB = 8.0  # a hop that stands less over the noise says proportionally less
+NARROW_BANDS = 4  # 180 to 650 Hz: an "mm" fills no others and drowns in the mean of all
+NARROW_WORTH = 6.0  # nats a nat of their mean (measured)
 RATIO_SPAN_DB = (-6.0, 20.0)
 _TABLE_STEP_DB = 1 / 16
 
@@ -50,6 +54,7 @@ class Evidence:
 
     own: Grid  # (hops, tracks) nats in favour of own voice, clipped, weighted by audibility
     score: Grid  # (hops, tracks) mean log-likelihood ratio of a band, unclipped
+    narrow: Grid  # (hops, tracks) the same of the lowest bands alone, one hop
     own_to_bleed_db: Grid  # (hops, tracks) mean over bands of level over predicted bleed plus noise
     bleed_db: Grid  # (hops, tracks) predicted bleed, power sum over bands
     audible_db: Grid  # (hops, tracks) mean over bands of level over noise, clipped to 0 .. 20
@@ -73,12 +78,16 @@ def evidence_of(levels: Levels, floor_db: Grid, coupling: Coupling, *, tail_db_p
         rows = slice(start, min(start + STEP_HOPS, hops))
         level_db = levels[rows].astype(np.float32) * np.float32(STEP_DB)
         noise_db = _per_hop(floor_db, rows)
-        bleed, tail = _held(_predicted(level_db, noise_db, coupling, block), tail, tail_db_per_hop)
+        predicted = (_predicted_late(levels, floor_db, coupling, block, rows) if coupling.lags.any()
+                     else _predicted(level_db, noise_db, coupling, block))
+        bleed, tail = _held(predicted, tail, tail_db_per_hop)
         _describe({name: grid[rows] for name, grid in out.items()}, level_db, noise_db, bleed, table)
     score = _three(out["score"])
     out["score"] = score
     weight = np.clip(out["audible_db"] / np.float32(AUDIBLE_DB), 0, 1)
-    own = np.clip(np.float32(INDEPENDENT) * score + np.float32(LEANING), -CLIP, CLIP) * weight
+    wide = np.float32(INDEPENDENT) * score + np.float32(LEANING)
+    narrow = np.float32(NARROW_WORTH) * _three(out["narrow"])
+    own = np.clip(np.maximum(wide, narrow), -CLIP, CLIP) * weight
     return Evidence(own=own, **out)
 
 
@@ -86,6 +95,15 @@ def _per_hop(floor_db: Grid, rows: slice) -> Grid:
     """The floor of each hop of a block."""
     seconds = np.minimum(np.arange(rows.start, rows.stop) // HOPS_PER_S, len(floor_db) - 1)
     return np.asarray(floor_db[seconds])
+
+
+def _predicted_late(levels: Levels, floor_db: Grid, coupling: Coupling, block: int, rows: slice) -> Grid:
+    """`_predicted` where some voices arrive late (or early) somewhere: worked out with a margin on either side."""
+    margin = ROUNDS * int(np.abs(coupling.lags).max())
+    wide = slice(max(rows.start - margin, 0), min(rows.stop + margin, len(levels)))
+    level_db = levels[wide].astype(np.float32) * np.float32(STEP_DB)
+    out = _predicted(level_db, _per_hop(floor_db, wide), coupling, block)
+    return out[rows.start - wide.start : rows.stop - wide.start]
 
 
 def _predicted(level_db: Grid, noise_db: Grid, coupling: Coupling, block: int) -> Grid:
@@ -97,8 +115,20 @@ def _predicted(level_db: Grid, noise_db: Grid, coupling: Coupling, block: int) -
     matrix[:, coupling.heard_hops < LEAST_EVER] = 0
     source = clean
     for _ in range(ROUNDS - 1):
-        source = np.maximum(clean - source @ matrix, 0)
-    return np.ascontiguousarray((source @ matrix).transpose(1, 2, 0))
+        source = np.maximum(clean - _bleed_of(source, matrix, coupling.lags), 0)
+    return np.ascontiguousarray(_bleed_of(source, matrix, coupling.lags).transpose(1, 2, 0))
+
+
+def _bleed_of(source: Grid, matrix: Grid, lags: Lags) -> Grid:
+    """Power at each microphone, shape=(bands, hops, tracks), each voice as late as it arrives there."""
+    if not lags.any():
+        return source @ matrix
+    out = source @ np.where(lags == 0, matrix, 0)
+    for k, m in np.argwhere(lags != 0):
+        moved = np.roll(source[:, :, k], lags[k, m], axis=1)
+        moved[:, slice(0, lags[k, m]) if lags[k, m] > 0 else slice(lags[k, m], None)] = 0
+        out[:, :, m] += moved * matrix[:, k, m][:, None]
+    return np.asarray(out, np.float32)
 
 
 def _held(bleed: Grid, before: Grid, decay_db: float) -> tuple[Grid, Grid]:
@@ -124,7 +154,9 @@ def _describe(out: dict[str, Grid], level_db: Grid, noise_db: Grid, bleed: Grid,
     ratio_db = level_db - expected_db
     np.clip(ratio_db, *RATIO_SPAN_DB, out=ratio_db)
     index = ((ratio_db - np.float32(RATIO_SPAN_DB[0])) * np.float32(1 / _TABLE_STEP_DB) + np.float32(0.5)).astype(np.int16)
-    out["score"][:] = table[index].mean(axis=2)
+    nats = table[index]
+    out["score"][:] = nats.mean(axis=2)
+    out["narrow"][:] = nats[:, :, :NARROW_BANDS].mean(axis=2)
     out["own_to_bleed_db"][:] = ratio_db.mean(axis=2)
     out["bleed_db"][:] = _db(bleed.sum(axis=2))
     out["audible_db"][:] = np.clip(level_db - noise_db, 0, 20).mean(axis=2)

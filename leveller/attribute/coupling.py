@@ -16,8 +16,9 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
+from leveller.attribute.lag import Lags
 from leveller.attribute.seeds import Labels
-from leveller.measure.levels import STEP_DB, Levels
+from leveller.measure.levels import SILENT, STEP_DB, Levels
 
 STEP_HOPS = 500
 QUANTILE = 0.6
@@ -34,9 +35,13 @@ NONE_DB = -60.0
 class Coupling:
     """Coupling in dB: `at(block)` is shape=(tracks, tracks, bands), [k, m] = voice k into microphone m."""
 
-    def __init__(self, local_db: npt.NDArray[np.float32], heard_hops: npt.NDArray[np.int64]) -> None:
+    def __init__(
+        self, local_db: npt.NDArray[np.float32], heard_hops: npt.NDArray[np.int64], lags: Lags | None = None
+    ) -> None:
         self.local_db = local_db  # (blocks, tracks, tracks, bands)
         self.heard_hops = heard_hops  # (tracks,) hops labelled with each person
+        tracks = len(heard_hops)
+        self.lags = lags if lags is not None else np.zeros((tracks, tracks), np.int16)  # [k, m] hops k is late at m
 
     def at(self, block: int) -> npt.NDArray[np.float32]:
         """The coupling during one block of `STEP_HOPS`."""
@@ -48,7 +53,9 @@ class Coupling:
         return np.asarray(np.median(self.local_db.mean(axis=3), axis=0))
 
 
-def estimate_coupling(levels: Levels, floor_db: npt.NDArray[np.float32], labels: Labels) -> Coupling:
+def estimate_coupling(
+    levels: Levels, floor_db: npt.NDArray[np.float32], labels: Labels, lags: Lags | None = None
+) -> Coupling:
     """Coupling of every labelled voice into every microphone.
 
     Parameters
@@ -56,6 +63,8 @@ def estimate_coupling(levels: Levels, floor_db: npt.NDArray[np.float32], labels:
     levels : shape=(hops, tracks, bands)
     floor_db : shape=(seconds, tracks, bands)
     labels : shape=(hops,)
+    lags : shape=(tracks, tracks), optional
+        How many hops late voice k is heard at microphone m.
     """
     hops, tracks, bands = levels.shape
     blocks = max(1, -(-hops // STEP_HOPS))
@@ -65,16 +74,17 @@ def estimate_coupling(levels: Levels, floor_db: npt.NDArray[np.float32], labels:
         at = np.flatnonzero(labels == person)
         heard[person] = len(at)
         if len(at) >= LEAST_EVER:
-            local[:, person] = _followed(levels, floor_db, at, person, blocks)
+            local[:, person] = _followed(levels, floor_db, at, person, blocks, lags)
         local[:, person, person] = 0.0
-    return Coupling(local, heard)
+    return Coupling(local, heard, lags)
 
 
 def _followed(
-    levels: Levels, floor_db: npt.NDArray[np.float32], at: npt.NDArray[np.int64], person: int, blocks: int
+    levels: Levels, floor_db: npt.NDArray[np.float32], at: npt.NDArray[np.int64], person: int, blocks: int,
+    lags: Lags | None,
 ) -> npt.NDArray[np.float32]:
     """Coupling of one person, shape=(blocks, tracks, bands)."""
-    overall = _quantile(_ratios(levels, floor_db, _spread(at, MOST_GLOBAL), person))
+    overall = _quantile(_ratios(levels, floor_db, _spread(at, MOST_GLOBAL), person, lags))
     overall = np.where(np.isfinite(overall), overall, np.float32(NONE_DB))
     out = np.empty((blocks, *overall.shape), np.float32)
     for block in range(blocks):
@@ -82,7 +92,7 @@ def _followed(
         if near is None:
             out[block] = overall
             continue
-        here = _quantile(_ratios(levels, floor_db, _spread(near, MOST_HOPS), person))
+        here = _quantile(_ratios(levels, floor_db, _spread(near, MOST_HOPS), person, lags))
         here = np.where(np.isfinite(here), here, overall)
         out[block] = np.clip(here, overall - STRAY_DB, overall + STRAY_DB)
     return out
@@ -103,10 +113,16 @@ def _spread(at: npt.NDArray[np.int64], most: int) -> npt.NDArray[np.int64]:
 
 
 def _ratios(
-    levels: Levels, floor_db: npt.NDArray[np.float32], at: npt.NDArray[np.int64], person: int
+    levels: Levels, floor_db: npt.NDArray[np.float32], at: npt.NDArray[np.int64], person: int,
+    lags: Lags | None,
 ) -> npt.NDArray[np.float32]:
-    """Level differences to the person's own microphone, nan where that is not clear of its noise."""
-    here = levels[at].astype(np.float32) * np.float32(STEP_DB)
+    """Level differences to the person's own microphone, nan where that is not clear of noise or the other is muted."""
+    if lags is None or not lags[person].any():
+        there = levels[at]
+    else:
+        late = np.clip(at[:, None] + lags[person], 0, len(levels) - 1)
+        there = levels[late, np.arange(levels.shape[1])]
+    here = np.where(there == SILENT, np.float32(np.nan), there.astype(np.float32) * np.float32(STEP_DB))
     own = here[:, person]
     clear = own > floor_db[np.minimum(at // 100, len(floor_db) - 1), person] + CLEAR_DB
     return np.where(clear[:, None, :], here - own[:, None, :], np.float32(np.nan))

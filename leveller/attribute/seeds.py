@@ -50,6 +50,11 @@ def first_labels(m: Measurements, audible_db: npt.NDArray[np.float32], programme
     return _by_level(level_db, audible_db, programme)
 
 
+def labels_by_level(m: Measurements, audible_db: npt.NDArray[np.float32], programme: Bools) -> Labels:
+    """The second source alone, shape=(hops,)."""
+    return _by_level(level_to_db(m.levels).mean(axis=2), audible_db, programme)
+
+
 def _by_arrival(
     m: Measurements, level_db: npt.NDArray[np.float32], audible_db: npt.NDArray[np.float32], programme: Bools
 ) -> Labels:

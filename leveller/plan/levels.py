@@ -40,4 +40,5 @@ def level_lufs(power: npt.NDArray[np.floating], counted: Bools) -> float | None:
     if len(own) < LEAST_HOPS:
         return None
     gate = own.mean(dtype=np.float64) * 10 ** (-QUIET_DB / 10)
-    return float(power_to_lufs(own[own > gate].mean(dtype=np.float64)))
+    heard = own[own > gate]  # none in digital silence that an editor calls own voice
+    return float(power_to_lufs(heard.mean(dtype=np.float64))) if len(heard) else None

@@ -57,7 +57,8 @@ def _session_faults(result: Result) -> Iterator[Fault]:
     for skip in session.skips:
         marked[seconds_to_hops(skip.from_s) : seconds_to_hops(skip.to_s)] = True
         why = f" ({skip.why})" if skip.why else ""
-        yield Fault("skip", "", f"marked to be skipped{why}, so levelling does not count it", ((skip.from_s, skip.to_s),))
+        yield Fault("skip", "", f"marked to be skipped{why}, so levelling does not count it",
+                    ((skip.from_s, skip.to_s),))
     tone = stretches(~result.activity.programme & ~marked)
     if len(tone):
         places = tuple((int(a) / HOPS_PER_S, int(b) / HOPS_PER_S) for a, b in tone)

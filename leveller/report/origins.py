@@ -9,7 +9,7 @@ from typing import Any
 from leveller.errors import InputError
 from leveller.session import SESSION_FILE
 from leveller.sessionfile import SessionFile, read_session_file
-from leveller.settings import Settings
+from leveller.settings import DEFAULT_DELIVERY, Settings, delivery_named
 
 DEFAULT = "default"
 SET = "--set"
@@ -33,6 +33,27 @@ def settings_in_force(session: Path | None, assignments: Mapping[str, Any]) -> l
         return SET if key in assignments else said.where if key in written else DEFAULT
 
     return [(key, value_text(value), unit, origin(key), why) for key, value, unit, why in settings.rows()]
+
+
+def delivery_in_force(session: Path | None) -> str:
+    """Name, target and ceiling that would count for a session, each with where it came from.
+
+    Raises
+    ------
+    InputError, SettingsError
+        as `settings_in_force`
+    """
+    said = _said(session)
+    chosen = delivery_named(said.delivery or DEFAULT_DELIVERY)
+
+    def part(text: str, given: object, otherwise: str) -> str:
+        return f"{text} ({otherwise if given is None else said.where})"
+
+    target = chosen.target_lufs if said.target_lufs is None else said.target_lufs
+    ceiling = chosen.ceiling_dbtp if said.ceiling_dbtp is None else said.ceiling_dbtp
+    return ", ".join((
+        part(chosen.name, said.delivery, DEFAULT), part(f"{target:.1f} LUFS", said.target_lufs, chosen.name),
+        part(f"{ceiling:.1f} dBTP", said.ceiling_dbtp, chosen.name)))
 
 
 def value_text(value: Any) -> str:

@@ -58,7 +58,8 @@ def format_summary(report: Report, *, out: str, width: int | None = None) -> lis
 def summary_blocks(report: Report) -> list[tuple[str, list[str]]]:
     """The summary as headings with their lines, for the page."""
     blocks = [
-        ("Delivery", _delivery_lines(report, None)), ("Voices", _voice_lines(report, None) + _other_lines(report, None)),
+        ("Delivery", _delivery_lines(report, None)),
+        ("Voices", _voice_lines(report, None) + _other_lines(report, None)),
         ("Mix", _mix_lines(report.mix)), ("Sources", _list_lines("Sources", map(fault_text, report.faults), None)),
         ("Left open", _list_lines("Left open", report.left_open, None))]
     return [(heading, [line.text for line in lines if line.text != heading]) for heading, lines in blocks if lines]
@@ -80,9 +81,9 @@ def format_readings(readings: Sequence[FileReading], *, width: int | None = None
 
 
 def format_settings(
-    rows: Sequence[Row], deliveries: Sequence[Delivery], *, width: int | None = None
+    rows: Sequence[Row], deliveries: Sequence[Delivery], in_force: str, *, width: int | None = None
 ) -> list[Line]:
-    """Every setting as (key, value, unit, where it came from, reason), then the deliveries."""
+    """Every setting as (key, value, unit, where it came from, reason), then the deliveries and the one that counts."""
     sizes = [max(len(row[i]) for row in rows) for i in range(3)]
     lines = [Line("Settings", HEAD)]
     for key, value, unit, origin, why in rows:
@@ -91,10 +92,10 @@ def format_settings(
         lines += [Line(part, DIM) for part in (folded(why, width, indent="      ") if why else [])]
     lines += [Line(""), Line("Deliveries", HEAD)]
     for d in deliveries:
-        channels = {1: "one channel", 2: "two channels", None: "as the session asks"}[d.channels]
-        lines.append(Line(f"  {d.name:<{sizes[0]}}  {d.target_lufs:5.1f} LUFS  {d.ceiling_dbtp:4.1f} dBTP  "
-                          f"{channels:<19}  {d.source}"))
-    return lines
+        channels = {1: "1 channel", 2: "2 channels", None: "1 or 2"}[d.channels]
+        text = f"{d.name:<14}  {d.target_lufs:5.1f} LUFS  {d.ceiling_dbtp:4.1f} dBTP  {channels:<10}  {d.source}"
+        lines += map(Line, folded(text, width))
+    return lines + [Line(text) for text in folded(f"in force: {in_force}", width)]
 
 
 def fault_text(fault: Fault) -> str:
