@@ -133,7 +133,8 @@ def _unpacked(value: Any, arrays: dict[str, npt.NDArray[Any]]) -> Any:
         return arrays[value["array"]]
     if "tuple" in value:
         return tuple(_unpacked(part, arrays) for part in value["tuple"])
-    return _records(Measurements)[value["of"]](**{name: _unpacked(part, arrays) for name, part in value["fields"].items()})
+    fields = {name: _unpacked(part, arrays) for name, part in value["fields"].items()}
+    return _records(Measurements)[value["of"]](**fields)
 
 
 @functools.cache

@@ -125,8 +125,8 @@ def render_again(
     """Render a session from an automation file, edited or not; the delivery is met again.
 
     The gains are those of the file and nothing else; without an edit the stems and the mix have the same bytes as those
-    of `process`. Measurements are taken from the folder of the file or from `out`, where they are kept. Corrections
-    change what the tables say of the states, not the gains.
+    of `process`. Measurements are taken from where they are kept: beside the file, in `out` or in the default folder.
+    Corrections change what the tables say of the states, not the gains.
 
     Parameters
     ----------
@@ -150,7 +150,7 @@ def render_again(
     session = _opened(sources, delivery, stems, settings, accept_short, corrections)
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
-    homes = (automation.parent, folder.path)
+    homes = dict.fromkeys((automation.parent, folder.path, _out(None, session)))
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
     read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)

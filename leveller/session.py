@@ -19,6 +19,7 @@ from pathlib import Path
 from typing import Any
 
 from leveller import audio
+from leveller.defaults import season_file_of, with_defaults
 from leveller.drafts import Draft, SourceFile, drafts_of
 from leveller.duplicates import find_duplicates
 from leveller.errors import AutomationError, InputError, LevellerError, SettingsError, nearest
@@ -95,6 +96,7 @@ def open_session(
     assignments: Mapping[str, Any] | None = None,
     accept_short: bool = False,
     corrections: Path | None = None,
+    season: Path | None = None,
 ) -> Session:
     """Open and check a session.
 
@@ -110,15 +112,17 @@ def open_session(
         take what is there of a file that is shorter than its header says
     corrections : Path, optional
         a corrections.csv, after those of session.toml
+    season : Path, optional
+        the season.toml whose defaults count; by default the one beside the session (`defaults`)
 
     Raises
     ------
     InputError, SettingsError, AutomationError
     """
-    title, said, files, notes = _located([Path(source) for source in sources])
+    title, said, files, notes = located(sources, season)
     settings = Settings().changed(dict(said.settings), where=f"{said.where}: ").changed(
         assignments or {}, where="--set ")
-    chosen = _delivery(delivery, said)
+    chosen = chosen_delivery(delivery, said)
     drafts = drafts_of(files, accept_short, notes)
     rate_hz = said.sample_rate or _common_rate(drafts)
     tracks, set_aside = _without_duplicates(_tracks(drafts, rate_hz), rate_hz)
@@ -132,6 +136,15 @@ def open_session(
         delivery=chosen, mix_channels=mix_channels, settings=settings, notes=tuple(notes),
         time_reference=session_reference([(d.take, _offset_frames(d, rate_hz)) for d in drafts], rate_hz),
         origination=_origination(drafts))
+
+
+def located(
+    sources: Sequence[Path | str], season: Path | None = None
+) -> tuple[str, SessionFile, list[SourceFile], list[str]]:
+    """Title, what session.toml says over season.toml, the files, and notes so far; no audio is opened."""
+    paths = [Path(source) for source in sources]
+    title, said, files, notes = _located(paths)
+    return title, with_defaults(said, season or season_file_of(paths)), files, notes
 
 
 def _located(sources: list[Path]) -> tuple[str, SessionFile, list[SourceFile], list[str]]:
@@ -194,7 +207,7 @@ def _all_of(folder: Path) -> list[SourceFile]:
     return [SourceFile(path, TrackEntry(path.name)) for path in files]
 
 
-def _delivery(name: str | None, said: SessionFile) -> Delivery:
+def chosen_delivery(name: str | None, said: SessionFile) -> Delivery:
     """The delivery that counts: the option's, else session.toml's with its own target and ceiling."""
     if name is not None:
         return delivery_named(name)
@@ -204,7 +217,7 @@ def _delivery(name: str | None, said: SessionFile) -> Delivery:
         raise SettingsError(f"{said.where}: {error}") from None
     changes = {"target_lufs": said.target_lufs, "ceiling_dbtp": said.ceiling_dbtp}
     given: dict[str, Any] = {key: value for key, value in changes.items() if value is not None}
-    return dataclasses.replace(base, **given, source=said.where) if given else base
+    return dataclasses.replace(base, **given, source=said.where_of(next(iter(given)))) if given else base
 
 
 def _common_rate(drafts: list[Draft]) -> int:
@@ -267,7 +280,7 @@ def _mix_channels(said: SessionFile, delivery: Delivery, tracks: tuple[Track, ..
     wide = [track.name for track in tracks if track.pan or track.width == 2]
     asked = 2 if wide or delivery.channels == 2 else 1
     if said.mix_channels is not None and said.mix_channels < asked:
-        notes.append(f"mix_channels = 1 in {said.where}: pans and stereo are not heard in the mix")
+        notes.append(f"mix_channels = 1 in {said.where_of('mix_channels')}: pans and stereo are not heard in the mix")
     elif said.mix_channels is None and asked == 2 and delivery.channels == 1:
         notes.append(f"the mix has two channels, since {wide[0]} is panned or stereo; {delivery.name} is for one")
     return said.mix_channels or asked

@@ -100,10 +100,15 @@ class SessionFile:
     skips: tuple[Skip, ...] = ()
     corrections: tuple[Correction, ...] = ()
     settings: tuple[tuple[str, Any], ...] = ()  # ("expander.range_db", 18)
+    origins: tuple[tuple[str, str], ...] = ()  # of keys that another file said: ("delivery", "season.toml")
+
+    def where_of(self, key: str) -> str:
+        """The file that said a key."""
+        return dict(self.origins).get(key, self.where)
 
 
-def read_session_file(path: Path) -> SessionFile:
-    """Read and check a session.toml.
+def read_session_file(path: Path, *, known: tuple[str, ...] = SESSION_KEYS) -> SessionFile:
+    """Read and check a session.toml, or another file with some of its keys.
 
     Raises
     ------
@@ -117,7 +122,7 @@ def read_session_file(path: Path) -> SessionFile:
         data = tomllib.loads(_text(path, SettingsError))
     except tomllib.TOMLDecodeError as error:
         raise SettingsError(f"{where}: not valid TOML: {error}") from None
-    _known(data, SESSION_KEYS, where)
+    _known(data, known, where)
     settings = tuple(
         (f"{stage}.{key}", value) for stage in STAGES if stage in data
         for key, value in _table(data[stage], f"{where}: [{stage}]").items())

@@ -107,13 +107,16 @@ def test_measure_reads_files(tmp_path: Path, capsys: pytest.CaptureFixture[str])
 
 def test_settings_say_where_they_come_from(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     """Each setting is named as default, session.toml or --set; all deliveries are listed."""
-    (tmp_path / "session.toml").write_text("[ride]\nrange_db = 4\n[trim]\nenabled = false\n", encoding="utf-8")
+    (tmp_path / "session.toml").write_text(
+        "target_lufs = -20\n[ride]\nrange_db = 4\n[trim]\nenabled = false\n", encoding="utf-8")
     assert run("settings", tmp_path, "--set", "ride.rate_db_s=0.5") == 0
-    rows = {line.split()[0]: line.split()[1:] for line in capsys.readouterr().out.splitlines() if line.startswith("  ")}
+    said = capsys.readouterr().out.splitlines()
+    rows = {line.split()[0]: line.split()[1:] for line in said if line.startswith("  ")}
     assert rows["ride.range_db"] == ["4", "dB", "session.toml"]
     assert rows["trim.enabled"] == ["false", "on/off", "session.toml"]
     assert rows["ride.rate_db_s"] == ["0.5", "dB/s", "--set"]
     assert rows["expander.range_db"] == ["auto", "dB", "default"]
+    assert "  in force: podcast-mono (default), -20.0 LUFS (session.toml), -1.0 dBTP (podcast-mono)" in said
     assert {row[0] for row in leveller.Settings().rows()} | set(leveller.DELIVERIES) <= set(rows)
 
 

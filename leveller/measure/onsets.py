@@ -76,7 +76,7 @@ def common_line(first: Onsets, second: Onsets, *, reach: int = REACH_HOPS) -> Li
     Its score is 0 where a track is silent; below `ENOUGH_SCORE` it is chance.
     """
     hops = min(len(first), len(second))
-    reach = min(reach, max(hops - STRETCH_HOPS // 4, 1))
+    reach = min(reach, max(hops - STRETCH_HOPS // 8, 1))
     starts = list(range(0, max(hops - STRETCH_HOPS // 2, 1), STRETCH_HOPS))
     evidence = np.stack([_evidence(first, second, start, reach) for start in starts])
     middles = np.array([(start + min(start + STRETCH_HOPS, hops)) / 2 for start in starts])
