@@ -8,8 +8,11 @@ The story, each step a module:
 4. `coupling`  from the hops labelled so far: how much of every voice each microphone hears;
 5. `bleed`     from the coupling: what the others explain at each microphone, and the evidence for own voice;
 6. back to 4 with the hops in which one microphone clearly has its own voice and no other has, `ROUNDS` times;
-7. `decode`    evidence into states over time;
-8. `knobs`     recording gains that were turned in the middle.
+7. `knocks`    sounds too short for a voice say nothing;
+8. `decode`    evidence into states over time;
+9. `knobs`     recording gains that were turned in the middle.
+
+`lag` looks for voices that arrive late somewhere (a call, a clock of its own) before the first round.
 
 Nothing here depends on how the recording gains were set, and voice activity is evidence, never a veto.
 """
@@ -27,6 +30,7 @@ from leveller.attribute.coupling import NONE_DB, Coupling, estimate_coupling
 from leveller.attribute.decode import margins
 from leveller.attribute.floor import noise_floor, quietest_db
 from leveller.attribute.knobs import Step, knob_steps
+from leveller.attribute.knocks import without_knocks
 from leveller.attribute.lag import find_lags
 from leveller.attribute.seeds import NOBODY, Labels, first_labels, labels_by_level
 from leveller.attribute.tone import steady_tone
@@ -85,7 +89,8 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
         evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=TAIL_DB_PER_HOP)
         labels = _relabelled(evidence, programme)
-    margin = margins(np.where(programme[:, None], evidence.own, 0))
+    voice = without_knocks(evidence.own, m.levels)
+    margin = margins(np.where(programme[:, None], voice, 0))
     own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)
     return Activity(
         own=own, bleed=_bleed(own, evidence), margin=margin, own_to_bleed_db=evidence.own_to_bleed_db,
