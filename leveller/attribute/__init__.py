@@ -8,7 +8,7 @@ The story, each step a module:
 4. `coupling`  from the hops labelled so far: how much of every voice each microphone hears;
 5. `bleed`     from the coupling: what the others explain at each microphone, and the evidence for own voice;
 6. back to 4 with the hops in which one microphone clearly has its own voice and no other has, `ROUNDS` times;
-7. `knocks`    sounds too short for a voice say nothing;
+7. `leads`     a microphone that clearly hears first has its own voice; `knocks`: sounds too short for a voice say nothing;
 8. `decode`    evidence into states over time;
 9. `knobs`     recording gains that were turned in the middle.
 
@@ -32,6 +32,7 @@ from leveller.attribute.floor import noise_floor, quietest_db
 from leveller.attribute.knobs import Step, knob_steps
 from leveller.attribute.knocks import without_knocks
 from leveller.attribute.lag import find_lags
+from leveller.attribute.leads import with_leads
 from leveller.attribute.seeds import NOBODY, Labels, first_labels, labels_by_level
 from leveller.attribute.tone import steady_tone
 from leveller.measure import Measurements
@@ -43,6 +44,7 @@ ROUNDS = 3
 CLEARLY_OWN = 0.6  # mean nats a band: this microphone has its own voice
 CLEARLY_NOT = 0.2  # ... and this one has not
 CLEARLY_AUDIBLE_DB = 6.0
+KEPT_SEEDS = 0.5
 TAIL_DB_PER_HOP = 0.8
 HEARD_DB = 3.0  # mean over bands, over the noise: something sounds
 NEAR_HOPS = 10
@@ -84,12 +86,12 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
     floor_db = noise_floor(m.levels)
     audible_db = _audible(m, floor_db)
     lags = find_lags(audible_db, labels_by_level(m, audible_db, programme))
-    labels = first_labels(m, audible_db, programme)
+    labels = seeds = first_labels(m, audible_db, programme)
     for _ in range(ROUNDS):
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
         evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=TAIL_DB_PER_HOP)
-        labels = _relabelled(evidence, programme)
-    voice = without_knocks(evidence.own, m.levels)
+        labels = _relabelled(evidence, programme, seeds)
+    voice = without_knocks(with_leads(evidence.own, m.arrivals, audible_db, coupling), m.levels)
     margin = margins(np.where(programme[:, None], voice, 0))
     own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)
     return Activity(
@@ -152,14 +154,22 @@ def _audible(m: Measurements, floor_db: Grid) -> Grid:
     return out
 
 
-def _relabelled(evidence: Evidence, programme: Bools) -> Labels:
-    """Hops in which one microphone clearly has its own voice and all others clearly have not."""
+def _relabelled(evidence: Evidence, programme: Bools, seeds: Labels) -> Labels:
+    """Hops in which one microphone clearly has its own voice and all others clearly have not.
+
+    A person of whom this finds less than the seeds did keeps the seeds: microphones that hear everybody almost alike
+    have no clear hops.
+    """
     best = evidence.score.argmax(axis=1)
     rows = np.arange(len(best))
     clear = (evidence.score[rows, best] > CLEARLY_OWN) & (evidence.audible_db[rows, best] > CLEARLY_AUDIBLE_DB)
     if evidence.score.shape[1] > 1:
         clear &= np.partition(evidence.score, -2, axis=1)[:, -2] < CLEARLY_NOT
-    return np.where(clear & programme, best, NOBODY).astype(np.int16)
+    labels = np.where(clear & programme, best, NOBODY).astype(np.int16)
+    for person in range(evidence.score.shape[1]):
+        if np.count_nonzero(labels == person) < KEPT_SEEDS * np.count_nonzero(seeds == person):
+            labels[(seeds == person) & (labels == NOBODY)] = person
+    return labels
 
 
 def _bleed(own: Bools, evidence: Evidence) -> Bools:

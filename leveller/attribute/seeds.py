@@ -61,11 +61,11 @@ def _by_arrival(
     """Windows in which one microphone hears first and stands out in level."""
     labels = np.full(len(level_db), NOBODY, np.int16)
     inside = m.arrivals.hop < len(level_db)
-    hop, lead = m.arrivals.hop[inside], _three(m.arrivals.lead[inside])
+    hop, lead = m.arrivals.hop[inside], three(m.arrivals.lead[inside])
     if len(hop) < LEAST_WINDOWS:
         return labels
     first = lead.argmax(axis=1)
-    elevation = _elevation(_three(level_db)[hop])
+    elevation = _elevation(three(level_db)[hop])
     for track in range(level_db.shape[1]):
         leads = (first == track) & (lead.max(axis=1) > LEAD) & (audible_db[hop, track] > AUDIBLE_DB) & programme[hop]
         if np.count_nonzero(leads) < LEAST_WINDOWS:
@@ -102,7 +102,7 @@ def _elevation(level_db: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
     return np.asarray(level_db - others, np.float32)
 
 
-def _three(values: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
+def three(values: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
     """Mean of three neighbours along the first axis, the edges repeated."""
     padded = np.concatenate([values[:1], values, values[-1:]])
     return np.asarray((padded[:-2] + padded[1:-1] + padded[2:]) / np.float32(3), np.float32)
