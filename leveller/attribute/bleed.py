@@ -29,7 +29,8 @@ from leveller.attribute.lag import Lags
 from leveller.measure.levels import STEP_DB, Levels
 from leveller.units import HOPS_PER_S
 
-ROUNDS = 3
+ROUNDS = 4
+DAMPING = 0.75  # of each round's change; undamped, strong coupling makes the rounds swing
 SAFETY_DB = 1.0  # predicted bleed is taken this much higher
 SCATTER_DB = 4.5  # of band level in bleed round its prediction, measured
 OWN_SHARE = 0.2  # of bands in which own speech stands out, at least
@@ -115,7 +116,8 @@ def _predicted(level_db: Grid, noise_db: Grid, coupling: Coupling, block: int) -
     matrix[:, coupling.heard_hops < LEAST_EVER] = 0
     source = clean
     for _ in range(ROUNDS - 1):
-        source = np.maximum(clean - _bleed_of(source, matrix, coupling.lags), 0)
+        rest = np.maximum(clean - _bleed_of(source, matrix, coupling.lags), 0)
+        source = source + np.float32(DAMPING) * (rest - source)
     return np.ascontiguousarray(_bleed_of(source, matrix, coupling.lags).transpose(1, 2, 0))
 
 

@@ -65,9 +65,10 @@ def test_no_evidence_is_not_own() -> None:
 
 
 def test_sure_of_is_a_probability() -> None:
-    """A coin at no margin, growing with its size, the same for both signs, under 1."""
-    found = sure_of(np.float32([0, 0.5, 2, 8]))
-    assert found[0] == 0.5
-    assert (np.diff(found) > 0).all()
-    assert found[-1] <= 1
-    assert np.array_equal(sure_of(np.float32([-0.5, -2])), found[1:3])
+    """More than a coin at no margin, never falling with its size, under 1."""
+    for sign in (-1, 1):
+        found = sure_of(np.float32([1e-6, 0.5, 2, 4, 5, 8]) * np.float32(sign))
+        assert found[0] > 0.5
+        assert (np.diff(found) >= 0).all()
+        assert found[-1] < 1
+

@@ -17,7 +17,6 @@ import pytest
 import runs
 import soundfile
 
-from leveller.attribute.decode import sure_of
 from leveller.measure.loudness import LoudnessMeter, short_term_lufs
 from leveller.pipeline import Result
 from leveller.plan import STATES
@@ -155,12 +154,3 @@ def test_silence_is_no_number(tmp_path: Path) -> None:
     table = rows(result.out / "speech.csv", SPEECH_COLUMNS)
     assert [(row["from_s"], row["to_s"], row["state"]) for row in table] == [("0.00", "4.00", "silence")]
 
-
-def test_sure_grows_with_the_margin() -> None:
-    """A margin of 0 is a coin's 0.5; sureness grows with its size, on either side alike, and ends at 1."""
-    margin = np.array([0.0, 0.5, 2.0, 8.0, 100.0], np.float32)
-    sure = sure_of(margin)
-    assert sure[0] == 0.5
-    assert (np.diff(sure) > 0).all()
-    assert sure[-1] == 1.0
-    assert (sure_of(-margin) == sure).all()
