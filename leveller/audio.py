@@ -42,6 +42,7 @@ from leveller.samples import (
     Quantiser,
     Samples,
     SourceList,
+    clock_rate_hz,
     parts_of,
     repair,
 )
@@ -49,8 +50,8 @@ from leveller.units import HOPS_PER_S
 
 __all__ = [
     "AudioSource", "FileFacts", "FloatSpill", "Part", "Preview", "Resampler", "TrackReader", "WavWriter",
-    "append_chunks", "open_readers", "parts_of", "pieces", "preview", "probe", "read_chunks", "scale_float_wav",
-    "spread_starts",
+    "append_chunks", "clock_rate_hz", "open_readers", "parts_of", "pieces", "preview", "probe", "read_chunks",
+    "scale_float_wav", "spread_starts",
 ]
 
 Kind = Literal["float32", "pcm24", "pcm16"]
@@ -140,13 +141,13 @@ class Resampler:
 
     Parameters
     ----------
-    from_hz, to_hz : int
+    from_hz, to_hz : float
     channels : int
     quality : str
         of soxr: 'LQ', 'MQ' (enough for analysis), 'HQ', 'VHQ'
     """
 
-    def __init__(self, from_hz: int, to_hz: int, *, channels: int = 1, quality: str = "MQ") -> None:
+    def __init__(self, from_hz: float, to_hz: float, *, channels: int = 1, quality: str = "MQ") -> None:
         self._stream = None if from_hz == to_hz else soxr.ResampleStream(
             from_hz, to_hz, channels, dtype="float32", quality=quality)
 
@@ -174,7 +175,7 @@ class TrackReader:
         self.repaired_frames = 0
         self._decoder = decoder or Decoder(_open_parts(parts_of(track)), track, 1)
         self._user = user
-        self._resampler = Resampler(track.source_rate_hz, rate_hz, channels=track.width, quality=READ_QUALITY)
+        self._resampler = Resampler(clock_rate_hz(track), rate_hz, channels=track.width, quality=READ_QUALITY)
         self._pick_buffer = np.empty((CHUNK_FRAMES,), np.float32)
         self._position = 0  # in session frames
         self._chunk = 0

@@ -46,6 +46,8 @@ Assignments = Annotated[list[str] | None, typer.Option(
 Corrections = Annotated[Path | None, typer.Option(metavar="FILE", help="A corrections.csv, or an edited speech.csv.")]
 AcceptShort = Annotated[bool, typer.Option(
     "--accept-short", help="Take what is there of a file that is shorter than its header says.")]
+Align = Annotated[bool, typer.Option(
+    "--align", help="Line up tracks of separate recorders: start, clock and polarity.")]
 Quiet = Annotated[bool, typer.Option("--quiet", "-q", help="Print nothing but errors and a delivery that is not met.")]
 Debug = Annotated[bool, typer.Option("--debug", help="Show where in the program an error arose.")]
 
@@ -70,7 +72,7 @@ def _root(
 def process(
     sources: Sources, out: Out = None, replace: Replace = False, delivery: DeliveryName = None,
     stems: Stems = "before-limiter", assignments: Assignments = None, corrections: Corrections = None,
-    accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
+    accept_short: AcceptShort = False, align: Align = False, quiet: Quiet = False, debug: Debug = False,
 ) -> None:
     """Level a conversation: write stems, mix, automation and reports."""
     with _reported(debug):
@@ -81,7 +83,7 @@ def process(
             result = pipeline.process(
                 sources, out=out, replace=replace, delivery=delivery, stems=stems,
                 settings=parse_assignments(assignments or []), corrections=corrections, accept_short=accept_short,
-                on_progress=on_progress)
+                align=align, on_progress=on_progress)
         _print_summary(result, quiet)
 
 
@@ -93,7 +95,7 @@ def render(
         show_default=False)],
     out: Out = None, replace: Replace = False, delivery: DeliveryName = None, stems: Stems = "before-limiter",
     assignments: Assignments = None, corrections: Corrections = None, accept_short: AcceptShort = False,
-    quiet: Quiet = False, debug: Debug = False,
+    align: Align = False, quiet: Quiet = False, debug: Debug = False,
 ) -> None:
     """Render a session again, from edited automation; the delivery is met again."""
     with _reported(debug):
@@ -104,7 +106,7 @@ def render(
             result = pipeline.render_again(
                 sources, automation, out=out, replace=replace, delivery=delivery, stems=stems,
                 settings=parse_assignments(assignments or []), corrections=corrections, accept_short=accept_short,
-                on_progress=on_progress)
+                align=align, on_progress=on_progress)
         _print_summary(result, quiet)
 
 
@@ -148,6 +150,45 @@ def measure(
             _print_json(readings)
         else:
             console.print_lines(format_readings(readings, width=console.terminal_width(sys.stdout)))
+
+
+@app.command()
+def batch(
+    season: Annotated[Path, typer.Argument(
+        metavar="SEASON", help="A folder of sessions or polyphonic files, or a list of them (.csv, .toml).",
+        show_default=False)],
+    out: Annotated[Path, typer.Option(
+        metavar="DIR", help="Folder to write, one folder in it for each episode.", show_default=False)],
+    jobs: Annotated[int | None, typer.Option(
+        metavar="N", help="Episodes at once; by default by the processors and the memory there are.",
+        show_default=False)] = None,
+    again: Annotated[bool, typer.Option("--again", help="Process unchanged and edited episodes too.")] = False,
+    delivery: DeliveryName = None,
+    stems: Annotated[str | None, typer.Option(
+        metavar="LEVEL", help="before-limiter (default) or limited, for all episodes.", show_default=False)] = None,
+    assignments: Assignments = None, accept_short: AcceptShort = False,
+    cluster: Annotated[str | None, typer.Option(
+        metavar="ADDRESS", help="Hand the episodes to a Dask scheduler, such as tcp://10.0.0.5:8786.",
+        show_default=False)] = None,
+    quiet: Quiet = False, debug: Debug = False,
+) -> None:
+    """Process a season: every episode, one failure stopping nothing, and a report on all."""
+    with _reported(debug):
+        from leveller.batch import batch as run_batch
+        from leveller.report.season_text import format_season, last_lines
+        from leveller.settings import parse_assignments
+
+        with console.season_progress(quiet=quiet) as on_season:
+            report = run_batch(
+                season, out=out, jobs=jobs, again=again, delivery=delivery, stems=stems,
+                settings=parse_assignments(assignments or []), accept_short=accept_short, cluster=cluster,
+                on_season=on_season)
+        width = console.terminal_width(sys.stdout)
+        if not quiet:
+            console.print_lines(format_season(report, out=_near(Path(os.path.abspath(out))), width=width))
+        elif report.exit_code:
+            console.print_lines(last_lines(report), sys.stderr)
+        raise typer.Exit(report.exit_code)
 
 
 @app.command()

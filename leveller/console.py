@@ -15,10 +15,13 @@ from collections.abc import Callable, Iterable, Iterator, Mapping
 from typing import TYPE_CHECKING, Any, TextIO
 
 if TYPE_CHECKING:
+    from leveller.batch import Standing
     from leveller.report.text import Line
 
 OnProgress = Callable[[str, float, float], None]
+OnSeason = Callable[["Standing"], None]
 
+MOST_NAME = 28  # characters of an episode in the display
 WAIT_S = 2.0  # shorter work shows no progress
 PROCESS_SHARES = {"measure": 0.45, "decide": 0.25, "render": 0.17, "mix": 0.13}  # of the wall time, measured
 FINISH_SHARES = {"render": 0.6, "mix": 0.4}
@@ -78,6 +81,19 @@ def progress(shares: Mapping[str, float], *, quiet: bool = False) -> Iterator[On
         yield bar.update
     finally:
         bar.stop()
+
+
+@contextlib.contextmanager
+def season_progress(*, quiet: bool = False) -> Iterator[OnSeason | None]:
+    """How far a season and each of its running episodes are; yields what to call with a `batch.Standing`."""
+    if quiet or not is_terminal(sys.stderr):
+        yield None
+        return
+    board = _Board()
+    try:
+        yield board.update
+    finally:
+        board.stop()
 
 
 class Pace:
@@ -143,6 +159,63 @@ class _Bar:
             console=_console(sys.stderr), transient=True)
         self._task = self._drawn.add_task("", total=1.0, stage="", left="")
         self._drawn.start()
+
+
+class _Board:
+    """A line for the season, and one for each episode that is at work; all gone at the end."""
+
+    def __init__(self) -> None:
+        self._drawn: Any = None
+        self._season: Any = None
+        self._lines: dict[str, tuple[Any, Pace]] = {}
+        self._started = time.monotonic()
+
+    def update(self, standing: Standing) -> None:
+        """Take how things stand."""
+        if self._drawn is None:
+            self._start(standing)
+        running = {name for name, *_ in standing.running}
+        for name in [name for name in self._lines if name not in running]:
+            self._drawn.remove_task(self._lines.pop(name)[0])
+        for name, stage, done, total in standing.running:
+            self._update_episode(name, stage, done, total)
+        part = standing.ended + sum(pace.part for _, pace in self._lines.values())
+        from leveller.units import clock
+
+        elapsed_s = time.monotonic() - self._started
+        left = f"{clock(elapsed_s * (standing.episodes - part) / part)} left" if part > 0 else ""
+        failed = f", {standing.failed} failed" if standing.failed else ""
+        note = f"{standing.ended} of {standing.episodes}{failed}  {left}"
+        self._drawn.update(self._season, completed=part, note=note)
+
+    def stop(self) -> None:
+        """Take the lines away."""
+        if self._drawn is not None:
+            self._drawn.stop()
+
+    def _update_episode(self, name: str, stage: str, done: float, total: float) -> None:
+        """One episode's line."""
+        if name not in self._lines:
+            self._lines[name] = (self._drawn.add_task(_shortened(name), total=1.0, note=""), Pace(PROCESS_SHARES))
+        task, pace = self._lines[name]
+        pace.update(stage, done, total)
+        self._drawn.update(task, completed=pace.part, note=stage)
+
+    def _start(self, standing: Standing) -> None:
+        from rich.progress import BarColumn, Progress, TextColumn
+
+        self._drawn = Progress(
+            TextColumn("{task.description}", markup=False), BarColumn(bar_width=30),
+            TextColumn("{task.percentage:>3.0f} %  {task.fields[note]}", markup=False),
+            console=_console(sys.stderr), transient=True)
+        self._season = self._drawn.add_task("season", total=standing.episodes, note="")
+        self._drawn.start()
+
+
+def _shortened(name: str) -> str:
+    """A name for the display: nothing in it that moves the cursor, and not too long."""
+    text = "".join(c if c.isprintable() else "?" for c in name)
+    return text if len(text) <= MOST_NAME else text[: MOST_NAME - 1] + "…"
 
 
 def _console(stream: TextIO) -> Any:

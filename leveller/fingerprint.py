@@ -2,12 +2,13 @@
 
 `fingerprint` covers the versions at work, what session.toml, season.toml and the options come to, the corrections, and
 which files are read. What is in the files stands beside it in report.json: name, size and SHA-256 of each source.
-`unchanged` holds both against an earlier report.json. Sources are read whole for that only where their size and time of
-change are not those of the kept measurements (`kept`), as after a copy to another disk.
+`SOURCES_FILE` in an output folder notes each source's size and time of change, so that unchanged files need not be read
+again; where these differ, as after a copy to another disk, the contents decide.
 """
 
 from __future__ import annotations
 
+import contextlib
 import dataclasses
 import functools
 import hashlib
@@ -22,6 +23,7 @@ from leveller.errors import InputError
 from leveller.session import chosen_delivery, located
 from leveller.settings import Settings
 
+SOURCES_FILE = ".sources.json"
 LIBRARIES = ("numpy", "scipy", "soundfile", "soxr")  # shape the bytes
 
 
@@ -69,15 +71,36 @@ def source_files(sources: Sequence[Path | str], season: Path | None = None) -> l
     return list(dict.fromkeys(file.path for file in located(sources, season)[2]))
 
 
-def same_sources(files: Sequence[Path], written: Sequence[Mapping[str, Any]]) -> bool:
-    """Whether the files are those that a report.json lists as its `sources`: names, sizes, contents."""
+def same_sources(files: Sequence[Path], folder: Path, written: Sequence[Mapping[str, Any]]) -> bool:
+    """Whether the files are those that the report.json of a folder lists as its `sources`."""
     try:
         sizes = sorted((file.name, file.stat().st_size) for file in files)
         if sizes != sorted((entry["file"], entry["bytes"]) for entry in written):
             return False
+        if _noted(folder) == _marks(files):
+            return True
         return sorted(map(sha256, files)) == sorted(entry["sha256"] for entry in written)
     except (OSError, KeyError, TypeError):
         return False
+
+
+def note_sources(files: Sequence[Path], folder: Path) -> None:
+    """Write down size and time of change of the files, for `same_sources`; where that cannot be, nothing is lost."""
+    with contextlib.suppress(OSError):
+        (folder / SOURCES_FILE).write_text(json.dumps(_marks(files)), encoding="utf-8")
+
+
+def _noted(folder: Path) -> Any:
+    """What `note_sources` wrote, or None."""
+    try:
+        return json.loads((folder / SOURCES_FILE).read_text(encoding="utf-8"))
+    except (OSError, ValueError):
+        return None
+
+
+def _marks(files: Sequence[Path]) -> list[list[Any]]:
+    """Name, size and time of change of each file."""
+    return [[file.name, file.stat().st_size, file.stat().st_mtime_ns] for file in files]
 
 
 def sha256(path: Path) -> str:

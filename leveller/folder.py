@@ -184,11 +184,30 @@ class OutputFolder:
 
     def _rests(self, mark: str) -> Iterator[Path]:
         """Siblings of that kind whose process is gone."""
-        start = f".{self.path.name}{mark}"
-        for rest in sorted(self.path.parent.iterdir()):
-            pid = rest.name.removeprefix(start)
-            if rest.name.startswith(start) and pid.isdecimal() and rest not in _active and not _alive(int(pid)):
+        for rest, pid in _siblings(self.path, mark):
+            if rest not in _active and not _alive(pid):
                 yield rest
+
+
+def clean_up(path: Path) -> None:
+    """Remove what processes that died have left of work on a folder of that name."""
+    for rest, pid in _siblings(path, ".part-"):
+        if rest not in _active and not _alive(pid):
+            shutil.rmtree(rest, ignore_errors=True)
+
+
+def running_beside(path: Path) -> list[int]:
+    """Other processes of this computer that work on a folder of that name."""
+    return [pid for _, pid in _siblings(path, ".part-") if _alive(pid)]
+
+
+def _siblings(path: Path, mark: str) -> Iterator[tuple[Path, int]]:
+    """Work folders of that kind beside a path, each with its process's number."""
+    start = f".{path.name}{mark}"
+    for rest in sorted(path.parent.iterdir()):
+        pid = rest.name.removeprefix(start)
+        if rest.name.startswith(start) and pid.isdecimal():
+            yield rest, int(pid)
 
 
 def _alive(pid: int) -> bool:

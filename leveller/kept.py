@@ -83,7 +83,7 @@ def _fingerprint(session: Session) -> str:
     tracks = [
         [[[*_file_mark(part.path), part.frames] for part in parts_of(track)], list(track.channels), track.width,
          track.offset_frames, track.frames, track.source_rate_hz, track.source_frames, track.is_float, track.polarity,
-         track.high_pass_hz, track.loud_dbfs]
+         track.high_pass_hz, track.loud_dbfs, *([track.clock_ppm] if track.clock_ppm else [])]
         for track in session.tracks
     ]
     text = json.dumps([__version__, _code_mark(), session.rate_hz, session.frames, tracks])

@@ -6,17 +6,19 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from leveller.align import aligned, alignment_notes, find_alignment
 from leveller.attribute import Activity, attribute
 from leveller.audio import parts_of
 from leveller.automation import NO_ROWS, read_automation, row_keys, write_automation
 from leveller.cut import Finished, finish
 from leveller.edits import differences, is_speech_table, keep_file, with_speech_table, without_effect
 from leveller.errors import SettingsError
+from leveller.fingerprint import fingerprint
 from leveller.folder import OutputFolder
 from leveller.kept import MEASUREMENTS_FILE, ROWS_FILE, keep_measurements, keep_rows, kept_measurements, kept_rows
 from leveller.listen import Place, places_to_hear
@@ -51,6 +53,7 @@ class Result:
     stems: str
     out: Path
     places: tuple[Place, ...] = ()  # worth a listen, the most doubtful first
+    fingerprint: str = ""  # of what the run depends on; empty after an edit by hand
 
 
 def process(
@@ -63,6 +66,8 @@ def process(
     settings: Mapping[str, Any] | None = None,
     corrections: Path | None = None,
     accept_short: bool = False,
+    season: Path | None = None,
+    align: bool = False,
     on_progress: OnProgress = no_progress,
 ) -> Result:
     """Level a conversation: write stems, mix, automation and reports.
@@ -84,6 +89,10 @@ def process(
         A corrections.csv, or an edited speech.csv.
     accept_short : bool
         Take what is there of a file that is shorter than its header says.
+    season : path, optional
+        The season.toml whose defaults count; by default the one beside the session.
+    align : bool
+        Line up tracks that start or run differently, or are upside down; without it they are only warned of.
     on_progress : callable (stage, done, total), optional
 
     Returns
@@ -95,15 +104,18 @@ def process(
     LevellerError
         With one line that says what, where and the way out; nothing is written then.
     """
-    session = _opened(sources, delivery, stems, settings, accept_short, corrections)
+    session = _opened(sources, delivery, stems, settings, accept_short, corrections, season)
+    mark = _mark(sources, delivery, stems, settings, accept_short, corrections, season)
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
     with folder:
-        measurements = kept_measurements(folder.path, session) or measure(session, on_progress=on_progress)
+        as_opened = session
+        session, measurements = _measured([folder.path], session, align, on_progress)
+        mark = mark if session.tracks == as_opened.tracks else f"{mark} aligned"
         activity = attribute(measurements, session)
         session = _with_table(session, activity, corrections)
         plan = make_plan(measurements, activity, session)
-        result = _delivered(folder, session, measurements, activity, plan, stems, on_progress)
+        result = _delivered(folder, session, measurements, activity, plan, stems, mark, on_progress)
         if corrections is not None:
             keep_file(folder, Path(corrections))
     return result
@@ -120,6 +132,7 @@ def render_again(
     settings: Mapping[str, Any] | None = None,
     corrections: Path | None = None,
     accept_short: bool = False,
+    align: bool = False,
     on_progress: OnProgress = no_progress,
 ) -> Result:
     """Render a session from an automation file, edited or not; the delivery is met again.
@@ -130,7 +143,7 @@ def render_again(
 
     Parameters
     ----------
-    sources, out, replace, delivery, stems, settings, corrections, accept_short, on_progress
+    sources, out, replace, delivery, stems, settings, corrections, accept_short, align, on_progress
         As for `process`.
     automation : path
         An automation.csv as `process` writes it, or as a spreadsheet saves it.
@@ -151,12 +164,15 @@ def render_again(
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
     homes = dict.fromkeys((automation.parent, folder.path, _out(None, session)))
+    as_opened, measurements = session, None
+    if align:  # the rows of the file belong to the session as it was lined up
+        session, measurements = _measured(homes, session, align, on_progress)
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
     read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)
     with folder:
-        kept = next((m for home in homes if (m := kept_measurements(home, session)) is not None), None)
-        measurements = kept or measure(session, on_progress=on_progress)
+        if measurements is None:
+            session, measurements = _measured(homes, session, align, on_progress)
         activity = attribute(measurements, session)
         session = _with_table(session, activity, corrections)
         if written is None:
@@ -164,24 +180,58 @@ def render_again(
             read = read_automation(automation, session, hops=hops, written=row_keys(planned))
         notes = (*differences(automation.parent, session), *without_effect(settings, corrections), *read.notes)
         session = dataclasses.replace(session, notes=(*session.notes, *notes))
-        result = _delivered(folder, session, measurements, activity, read.plan, stems, on_progress)
+        by_hand = notes or session.tracks != as_opened.tracks
+        mark = "" if by_hand else _mark(sources, delivery, stems, settings, accept_short, corrections)
+        result = _delivered(folder, session, measurements, activity, read.plan, stems, mark, on_progress)
         keep_file(folder, automation)
     return result
 
 
 def _opened(
     sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
-    accept_short: bool, corrections: Path | None,
+    accept_short: bool, corrections: Path | None, season: Path | None = None,
 ) -> Session:
     """The session, with its options checked."""
     if stems not in LEVELS:
         raise SettingsError(f"stems {stems!r}: expected {' or '.join(LEVELS)}")
-    paths = [sources] if isinstance(sources, str | Path) else list(sources)
+    paths = _listed(sources)
     table = corrections is not None and is_speech_table(Path(corrections))
     session = open_session(paths, delivery=delivery, assignments=settings, accept_short=accept_short,
-                           corrections=None if table else corrections)
+                           corrections=None if table else corrections, season=season)
     check_corrections(session)
     return session
+
+
+def _measured(
+    homes: Iterable[Path], session: Session, align: bool, on_progress: OnProgress
+) -> tuple[Session, Measurements]:
+    """The session and its measurements, kept ones where there are any; its tracks lined up, or the warning."""
+    homes = list(homes)
+
+    def measurements_of(one: Session) -> Measurements:
+        kept = next((m for home in homes if (m := kept_measurements(home, one)) is not None), None)
+        return kept or measure(one, on_progress=on_progress)
+
+    measurements = measurements_of(session)
+    if not align:
+        notes = alignment_notes(session, measurements)
+        return dataclasses.replace(session, notes=(*session.notes, *notes)), measurements
+    lined_up = aligned(session, find_alignment(session, measurements))
+    return lined_up, measurements if lined_up.tracks == session.tracks else measurements_of(lined_up)
+
+
+def _listed(sources: Sequence[Path | str] | Path | str) -> list[Path | str]:
+    """One source or several, as a list."""
+    return [sources] if isinstance(sources, str | Path) else list(sources)
+
+
+def _mark(
+    sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
+    accept_short: bool, corrections: Path | None, season: Path | None = None,
+) -> str:
+    """The fingerprint of the run, for report.json."""
+    return fingerprint(_listed(sources), delivery=delivery, stems=stems, settings=settings,
+                       corrections=corrections, accept_short=accept_short, season=season)
 
 
 def _with_table(session: Session, activity: Activity, corrections: Path | None) -> Session:
@@ -193,13 +243,13 @@ def _with_table(session: Session, activity: Activity, corrections: Path | None) 
 
 def _delivered(
     folder: OutputFolder, session: Session, measurements: Measurements, activity: Activity, plan: GainPlan, stems: str,
-    on_progress: OnProgress,
+    mark: str, on_progress: OnProgress,
 ) -> Result:
     """Render the plan and write all that belongs to it."""
     mix = render(session, plan, folder.work, stems=stems, on_progress=on_progress)
     activity = overruled(activity, session)
     places = places_to_hear(activity, plan, session)
-    result = Result(session, measurements, activity, plan, mix, stems, folder.path, places)
+    result = Result(session, measurements, activity, plan, mix, stems, folder.path, places, mark)
     mark_files(folder.work, session, mix, places)
     write_automation(folder.file("automation.csv"), plan, session)
     report = write_tables(folder, result)

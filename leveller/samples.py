@@ -52,7 +52,7 @@ class Part:
 
 
 class AudioSource(Protocol):
-    """What a reader must know of a track; `session.Track` is one. It may have `parts`, see `parts_of`."""
+    """What a reader must know of a track; `session.Track` is one. It may have `parts` and `clock_ppm` (see below)."""
 
     @property
     def name(self) -> str: ...
@@ -91,6 +91,12 @@ def parts_of(source: AudioSource) -> tuple[Part, ...]:
     """The files that a track is read from, in order; one unless its take was split (then it has `parts`)."""
     parts: tuple[Part, ...] = getattr(source, "parts", ())
     return parts or (Part(source.path, source.source_frames),)
+
+
+def clock_rate_hz(source: AudioSource) -> float:
+    """The rate at which a track's frames really came, where its recorder's clock was fast or slow (`clock_ppm`)."""
+    ppm: float = getattr(source, "clock_ppm", 0.0)
+    return source.source_rate_hz * (1 + ppm * 1e-6) if ppm else source.source_rate_hz
 
 
 class Quantiser:

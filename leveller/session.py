@@ -59,6 +59,7 @@ class Track:
     loud_dbfs: float  # 95th percentile of 10 ms RMS in the preview; -inf where silent
     time_reference: int | None = None  # frames of the file since midnight at its start, where the recorder says so
     parts: tuple[audio.Part, ...] = ()  # the files of a split take in order, `path` the first; empty for one file
+    clock_ppm: float = 0.0  # how much too fast its recorder's clock ran, as `align` found it; read at that rate
 
 
 @dataclass(frozen=True)

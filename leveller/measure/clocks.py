@@ -17,13 +17,14 @@ Conventions: seconds of session time of the first track; a delay is positive whe
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import functools
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import parts_of, pieces
+from leveller.audio import clock_rate_hz, parts_of, pieces
 from leveller.measure.onsets import Line, Onsets
 from leveller.session import Track
 from leveller.units import HOP_S, HOPS_PER_S
@@ -34,12 +35,20 @@ BAND_HZ = (150, 4000)
 REACH_S = 0.06
 AIR_S = 0.03  # the longest way, ten metres; an echo comes up to so much after the direct sound
 EARLY_SHARE = 0.45  # of the highest peak, that the direct sound reaches (as in `alignment`)
-CLEAR = 0.09  # height of a peak that counts; without a common sound few reach it (measured, see tests)
-OWN_DB, AHEAD_DB = -14.0, 3.0  # own speech against the track's loud hops, and against the other track
+MANY, EARLY_SHARES_OF_MANY = 3, (0.20, 0.27, 0.45)  # places laid over each other: softer, in the null of a cardioid,
+OVER_NOISE = 6.0  # if it stands so many standard deviations over what comes before any direct sound
+SIDE_LOBES_S, SIDE_LOBE = 0.00035, 1 / 3
+CLEAR = 0.075  # height of a peak that counts; without a common sound few reach it (measured, see tests)
+LOUD_WITHIN_DB = 20.0
+OWN_DB, AHEAD_DB = -12.0, 1.5  # own speech against the track's loud hops, and against the other track
 NEAR_S = 0.0008  # from the line: people move their heads
 STEEPEST = 500e-6
+WORTH_A_SLOPE = 1.15  # a drift must explain so much more than none
+LEAST_FOR_SIGN, AGREED = 4, 0.8
+LEAST_WAY_S, MOST_WAY_S = -0.0003, 0.015  # through the air, five metres
 READ_AGAIN = 20e-6  # a slope this far from what was assumed blurs the windows
-_LAGS = round(WINDOW_S * 65536)  # values in a window: 15 microseconds apart
+LAG_S = 1 / 65536  # 15 microseconds
+_LAGS = round(WINDOW_S / LAG_S)
 
 Floats = npt.NDArray[np.float64]
 
@@ -49,13 +58,26 @@ class Lags:
     """Delays at some places."""
 
     at_s: Floats  # (places,) session time of the first track
-    delay_s: Floats
-    height: Floats  # signed: negative where one is upside down
+    base_s: Floats  # delay in the middle of `around`
+    around: npt.NDArray[np.float32]  # (places, lags `LAG_S` apart), signed: negative where one is upside down
     side: npt.NDArray[np.int8]  # +1: the voice of the first track, -1: of the second, 0: neither's or unknown
+
+    @property
+    def height(self) -> Floats:
+        """Of the highest peak."""
+        height: Floats = np.abs(self.around).max(axis=1, initial=0.0).astype(np.float64)
+        return height
+
+    @property
+    def delay_s(self) -> Floats:
+        """By the highest peak, which may be a strong echo's."""
+        at = np.abs(self.around).argmax(axis=1) if len(self.around) else np.zeros(0, np.int64)
+        delay: Floats = self.base_s + (at - self.around.shape[1] // 2) * LAG_S
+        return delay
 
     def chosen(self, which: npt.NDArray[np.bool_]) -> Lags:
         """Some of them."""
-        return Lags(self.at_s[which], self.delay_s[which], self.height[which], self.side[which])
+        return Lags(self.at_s[which], self.base_s[which], self.around[which], self.side[which])
 
 
 @dataclass(frozen=True)
@@ -68,18 +90,12 @@ class Fit:
     sides: frozenset[int]  # that have a line
     near: Lags  # the places on the line
     clear: int  # places with a clear peak
+    sign: int | None  # the polarity, where both sides agree on it
 
     @property
-    def span_s(self) -> float:
-        """Time from the first place on the line to the last."""
-        return float(np.ptp(self.near.at_s)) if len(self.near.at_s) else 0.0
-
-    @property
-    def jitter_s(self) -> float:
-        """Scatter round the line."""
-        way = 0.0 if self.way_s is None else self.way_s
-        rest = self.near.delay_s - self.offset_s - self.drift * self.near.at_s - way * self.near.side
-        return float(np.std(rest)) if len(rest) > 2 else NEAR_S
+    def share(self) -> float:
+        """Of the clear places, how many lie on the line."""
+        return len(self.near.at_s) / self.clear
 
 
 @dataclass(frozen=True)
@@ -89,10 +105,29 @@ class Heard:
     track: Track
     onsets: Onsets  # (hops, columns)
     level_db: npt.NDArray[np.float32]  # (hops,) speech level
+    offset_s: float = 0.0  # of its clock, as far as it is known
+    drift: float = 0.0
+
+    @functools.cached_property
+    def loud_db(self) -> float:
+        """The middle of the hops that are near the loudest, however little is said."""
+        near = self.level_db[self.level_db > np.percentile(self.level_db, 99.5) - LOUD_WITHIN_DB]
+        return float(np.median(near)) if len(near) else -200.0
+
+    def over_db(self, at_s: float) -> float:
+        """The loudest hop of a place that begins at a time of its own, against the loud hops of the track."""
+        begin = max(round(at_s * HOPS_PER_S), 0)
+        return float(self.level_db[begin : begin + round(PLACE_S * HOPS_PER_S)].max(initial=-200.0)) - self.loud_db
+
+    def own_time(self, other: Heard, at_s: float) -> float:
+        """The time here when it is at_s at another one."""
+        return self.offset_s + (1 + self.drift) * (at_s - other.offset_s) / (1 + other.drift)
 
 
-def clock_of(first: Heard, second: Heard, line: Line, rate_hz: int) -> Fit | None:
+def clock_of(first: Heard, second: Heard, line: Line, rate_hz: int, *, others: Sequence[Heard] = ()) -> Fit | None:
     """The line of the second track against the first, near the one that their onsets share; None without clear places.
+
+    The others tell whose voice a place does not hold.
 
     Raises
     ------
@@ -103,8 +138,9 @@ def clock_of(first: Heard, second: Heard, line: Line, rate_hz: int) -> Fit | Non
     fit = None
     drift, offset_s = line.drift, line.offset_hops * HOP_S
     for _ in range(2):
-        lags = _read(first, second, places, offset_s, drift, rate_hz)
-        fit = fitted(lags.chosen(np.abs(lags.height) > CLEAR))
+        sides = [_side(first, second, others, at * HOP_S, line) for at in places]
+        lags = _read(first, second, places, offset_s, drift, rate_hz, sides)
+        fit = fitted(lags.chosen(lags.height > CLEAR))
         if fit is None or abs(fit.drift - drift) < READ_AGAIN:
             return fit
         drift, offset_s = fit.drift, fit.offset_s
@@ -118,22 +154,24 @@ def spread_places(first: Onsets, second: Onsets, line: Line) -> list[int]:
     inside = (there >= 1) & (there < len(second) - 1)
     shared = np.zeros(len(first))
     for by in (-1, 0, 1):  # an onset falls into one hop or the next
-        shared[inside] += np.maximum(first[inside] * second[there[inside] + by], 0).sum(axis=1)
+        shared[inside] += (np.maximum(first[inside], 0) * np.maximum(second[there[inside] + by], 0)).sum(axis=1)
     length = round(PLACE_S * HOPS_PER_S)
     sums = np.concatenate([[0.0], np.cumsum(shared)])
     worth = sums[length:] - sums[:-length] if len(sums) > length else np.zeros(0)
+    count = max(1, min(STRETCHES, len(worth) // (2 * length)))
     chosen: list[int] = []
-    for stretch in np.array_split(np.arange(len(worth)), max(1, min(STRETCHES, len(worth) // (2 * length)))):
-        left = worth[stretch]
-        for _ in range(EACH):
-            at = int(left.argmax()) if len(left) else 0
-            if not len(left) or left[at] <= 0:
-                break
-            begin = int(stretch[at])
-            left[max(at - length, 0) : at + length] = 0
-            if not chosen or begin - chosen[-1] >= length or all(abs(begin - c) >= length for c in chosen):
-                chosen.append(begin)
-    return sorted(chosen)
+    for stretch in np.array_split(np.arange(len(worth)), count):
+        chosen += _best(worth, stretch, EACH, length)
+    return sorted(chosen + _best(worth, np.arange(len(worth)), STRETCHES * EACH - len(chosen), length))
+
+
+def _best(worth: Floats, among: npt.NDArray[np.int64], most: int, length: int) -> list[int]:
+    """Beginnings of the best places that do not overlap; their worth and that of all near them becomes 0 in place."""
+    chosen: list[int] = []
+    while len(among) and len(chosen) < most and worth[begin := int(among[worth[among].argmax()])] > 0:
+        chosen.append(begin)
+        worth[max(begin - length + 1, 0) : begin + length] = 0
+    return chosen
 
 
 def fitted(lags: Lags) -> Fit | None:
@@ -143,29 +181,66 @@ def fitted(lags: Lags) -> Fit | None:
     slope, near = _most_inliers(lags)
     kept = lags.chosen(near)
     sides = sorted({int(s) for s in kept.side})
-    columns = [kept.at_s, *((kept.side == s).astype(float) for s in sides)]
     if np.ptp(kept.at_s) > 0 and len(kept.at_s) > len(sides):
-        solved = np.linalg.lstsq(np.stack(columns, axis=1), kept.delay_s, rcond=None)[0]
-        slope, heads = float(solved[0]), dict(zip(sides, solved[1:], strict=True))
-    else:
-        heads = {s: float(np.median(kept.delay_s[kept.side == s] - slope * kept.at_s[kept.side == s])) for s in sides}
-    if 1 in heads and -1 in heads:
-        offset_s, way_s = (heads[1] + heads[-1]) / 2, (heads[1] - heads[-1]) / 2
-    else:
-        most = max(sides, key=lambda s: (np.count_nonzero(kept.side == s), s))
-        offset_s, way_s = heads[most], None
-    return Fit(float(offset_s), slope, None if way_s is None else float(way_s), frozenset(sides), kept, len(lags.at_s))
+        columns = [kept.at_s, *((kept.side == s).astype(float) for s in sides)]
+        slope = float(np.linalg.lstsq(np.stack(columns, axis=1), kept.delay_s, rcond=None)[0][0])
+    offset_s, way_s, sign = _middle(kept, slope)
+    return Fit(offset_s, slope, way_s, frozenset(sides), kept, len(lags.at_s), sign)
+
+
+def _middle(kept: Lags, slope: float) -> tuple[float, float | None, int | None]:
+    """Offset, way and sign from the delays of the sides at 0; what belongs to neither counts only without any.
+
+    A softer sound is taken for the direct one only as long as the way that follows is one.
+    """
+    counts = {side: int(np.count_nonzero(kept.side == side)) for side in (1, -1) if side in kept.side} or {0: len(kept.side)}
+    totals = {side: _laid_over(kept.chosen(kept.side == side), slope) for side in counts}
+    for share in EARLY_SHARES_OF_MANY:
+        heads = {side: _head(total, start_s, side, share if counts[side] >= MANY else EARLY_SHARE)
+                 for side, (total, start_s) in totals.items()}
+        if len(heads) < 2 or LEAST_WAY_S < (heads[1] - heads[-1]) / 2 < MOST_WAY_S:
+            break
+    sign = _sign(kept)
+    if len(heads) == 2 and LEAST_WAY_S < (heads[1] - heads[-1]) / 2 < MOST_WAY_S:
+        return (heads[1] + heads[-1]) / 2, (heads[1] - heads[-1]) / 2, sign
+    most = max(heads, key=lambda side: (counts[side], side))
+    return heads[most], None, sign
+
+
+def _sign(kept: Lags) -> int | None:
+    """The polarity by the highest peaks, echo or not (a wall does not turn a sound over), where nearly all agree."""
+    at = np.abs(kept.around).argmax(axis=1)
+    height = np.take_along_axis(kept.around, at[:, None], axis=1).sum(axis=1, dtype=np.float64)
+    agreed = float(height.sum() / np.abs(height).sum())
+    return int(np.sign(agreed)) if len(height) >= LEAST_FOR_SIGN and abs(agreed) > AGREED else None
+
+
+def _laid_over(lags: Lags, slope: float) -> tuple[Floats, float]:
+    """The mean correlation of some places of one side, and the delay at 0 of its middle.
+
+    Echoes stay, being the same at every place; noise does not.
+    """
+    starts = lags.base_s - slope * lags.at_s
+    total = np.zeros(lags.around.shape[1])
+    for row, start in zip(lags.around, starts, strict=True):
+        total += np.roll(row, round((start - starts[0]) / LAG_S))
+    return total / len(starts), float(starts[0])
+
+
+def _head(total: Floats, start_s: float, side: int, share: float) -> float:
+    """Delay at 0 of the direct sound of one side."""
+    return start_s + (_direct(np.abs(total), side, share) - len(total) // 2) * LAG_S
 
 
 def _most_inliers(lags: Lags) -> tuple[float, npt.NDArray[np.bool_]]:
     """Slope and the places near a line of each side, by trying the line through every pair of one side."""
-    best_slope, best, most = 0.0, np.zeros(len(lags.at_s), np.bool_), -1.0
-    slopes = [0.0]
+    best_slope, best, most = 0.0, np.zeros(len(lags.at_s), np.bool_), 0.0
+    slopes, height, delay_s = [0.0], lags.height, lags.delay_s
     for side in np.unique(lags.side):
         own = np.flatnonzero(lags.side == side)
         i, j = np.triu_indices(len(own), 1)
         run = lags.at_s[own[j]] - lags.at_s[own[i]]
-        rise = lags.delay_s[own[j]] - lags.delay_s[own[i]]
+        rise = delay_s[own[j]] - delay_s[own[i]]
         far = run > 0.3 * np.ptp(lags.at_s[own])
         found = rise[far] / np.maximum(run[far], 1e-9)
         slopes += list(found[np.abs(found) < STEEPEST])
@@ -173,9 +248,9 @@ def _most_inliers(lags: Lags) -> tuple[float, npt.NDArray[np.bool_]]:
         near = np.zeros(len(lags.at_s), np.bool_)
         for side in np.unique(lags.side):
             own = np.flatnonzero(lags.side == side)
-            near[own[_densest(lags.delay_s[own] - slope * lags.at_s[own])]] = True
-        got = float(np.abs(lags.height[near]).sum())
-        if got > most + 1e-9:
+            near[own[_densest(delay_s[own] - slope * lags.at_s[own])]] = True
+        got = float(height[near].sum())
+        if got > most * (WORTH_A_SLOPE if best_slope == 0 else 1):
             best_slope, best, most = float(slope), near, got
     return best_slope, best
 
@@ -187,33 +262,31 @@ def _densest(values: Floats) -> npt.NDArray[np.bool_]:
     return np.asarray(np.abs(values - order[int(counts.argmax())]) <= NEAR_S)
 
 
-def _read(first: Heard, second: Heard, places: list[int], offset_s: float, drift: float, rate_hz: int) -> Lags:
-    """Delay, height and side of every place."""
+def _read(
+    first: Heard, second: Heard, places: list[int], offset_s: float, drift: float, rate_hz: int, sides: list[int]
+) -> Lags:
+    """The correlation of every place."""
     at_s = np.array(places, dtype=np.float64) * HOP_S
     there_s = at_s + offset_s + drift * at_s
-    delay, height = np.zeros(len(places)), np.zeros(len(places))
-    sides = np.array([_side(first, second, a, b) for a, b in zip(at_s, there_s, strict=True)], np.int8)
+    middle_s = at_s + PLACE_S / 2
     near, far = _spectra(first.track, rate_hz, at_s, 0.0), _spectra(second.track, rate_hz, there_s, drift)
-    for i, (a, b) in enumerate(zip(near, far, strict=True)):
-        height[i], lag_s = _peak(a, b, int(sides[i]))
-        middle_s = at_s[i] + PLACE_S / 2
-        delay[i] = lag_s + offset_s + drift * middle_s
-    return Lags(at_s + PLACE_S / 2, delay, height, sides)
+    rows = [_correlation(a, b) for a, b in zip(near, far, strict=True)]
+    around = np.stack(rows) if rows else np.zeros((0, 1), np.float32)
+    return Lags(middle_s, offset_s + drift * middle_s, around, np.array(sides, np.int8))
 
 
-def _side(first: Heard, second: Heard, at_s: float, there_s: float) -> int:
-    """Whose own voice a place holds."""
-    over = [float(level[max(round(t * HOPS_PER_S), 0) :][: round(PLACE_S * HOPS_PER_S)].max(initial=-200.0))
-            - float(np.percentile(level[:: max(1, len(level) // 20000)], 95))
-            for level, t in ((first.level_db, at_s), (second.level_db, there_s))]
-    if max(over) < OWN_DB or abs(over[0] - over[1]) < AHEAD_DB:
+def _side(first: Heard, second: Heard, others: Sequence[Heard], at_s: float, line: Line) -> int:
+    """Whose own voice a place holds: +1 or -1, 0 for neither's."""
+    over = first.over_db(at_s), second.over_db(at_s + line.offset_hops * HOP_S + line.drift * at_s)
+    rival = max((other.over_db(other.own_time(first, at_s)) for other in others), default=-200.0)
+    if max(over) < max(OWN_DB, rival) or abs(over[0] - over[1]) < AHEAD_DB:
         return 0
     return 1 if over[0] > over[1] else -1
 
 
 def _spectra(track: Track, rate_hz: int, at_s: Floats, drift: float) -> Iterator[npt.NDArray[np.complex128]]:
     """Spectra of the windows of each place, shape=(windows, lines) in `BAND_HZ`, moved to exactly where they belong."""
-    source_hz, frames = track.source_rate_hz, round(WINDOW_S * track.source_rate_hz)
+    source_hz, frames = clock_rate_hz(track), round(WINDOW_S * track.source_rate_hz)
     steps = np.arange(round((PLACE_S - WINDOW_S) / STEP_S) + 1) * STEP_S * (1 + drift)
     taper = (np.hanning(frames + 1)[:-1] * track.polarity).astype(np.float32)
     lines = slice(round(BAND_HZ[0] * WINDOW_S), round(BAND_HZ[1] * WINDOW_S))
@@ -233,29 +306,33 @@ def _spectra(track: Track, rate_hz: int, at_s: Floats, drift: float) -> Iterator
         yield out
 
 
-def _peak(near: npt.NDArray[np.complex128], far: npt.NDArray[np.complex128], side: int) -> tuple[float, float]:
-    """Signed height and lag in seconds of the direct sound."""
+def _correlation(near: npt.NDArray[np.complex128], far: npt.NDArray[np.complex128]) -> npt.NDArray[np.float32]:
+    """Smoothed coherence transform at lags within `REACH_S`, 1 for a pure delay."""
     cross = np.sum(far * near.conj(), axis=0)
     power = np.sum(np.abs(near) ** 2, axis=0) * np.sum(np.abs(far) ** 2, axis=0)
     lines = np.zeros(_LAGS // 2 + 1, np.complex128)
     first = round(BAND_HZ[0] * WINDOW_S)
     lines[first : first + len(cross)] = cross / np.sqrt(np.maximum(power, 1e-30))
     around = np.fft.irfft(lines) * (_LAGS / (2 * len(cross)))
-    reach = round(REACH_S * _LAGS / WINDOW_S)
-    lags = np.concatenate([around[-reach:], around[: reach + 1]])
-    at = _direct(np.abs(lags), side)
-    return float(lags[at]), (at - reach) * WINDOW_S / _LAGS
+    reach = round(REACH_S / LAG_S)
+    return np.concatenate([around[-reach:], around[: reach + 1]]).astype(np.float32)
 
 
-def _direct(height: Floats, side: int) -> int:
+def _direct(height: Floats, side: int, share: float) -> int:
     """The peak of the direct sound: the first of the high ones, the last where the second track is the nearer one."""
     if side < 0:
-        return len(height) - 1 - _direct(height[::-1], 1)
+        return len(height) - 1 - _direct(height[::-1], 1, share)
     highest = int(height.argmax())
     if side == 0:
         return highest
-    begin = max(highest - round(AIR_S * _LAGS / WINDOW_S), 1)
+    begin = max(highest - round(AIR_S / LAG_S), 1)
+    before = height[:begin]
+    noise = OVER_NOISE * 1.4826 * float(np.median(before)) if len(before) > AIR_S / LAG_S / 4 else 0.0
+    least = max(share * float(height[highest]), min(noise, EARLY_SHARE * float(height[highest])))
     part = height[begin - 1 : highest + 2]
-    tops = np.flatnonzero((part[1:-1] > part[:-2]) & (part[1:-1] >= part[2:])
-                          & (part[1:-1] > EARLY_SHARE * height[highest]))
-    return begin + int(tops[0]) if len(tops) else highest
+    tops = np.flatnonzero((part[1:-1] > part[:-2]) & (part[1:-1] >= part[2:]) & (part[1:-1] > least))
+    near = round(SIDE_LOBES_S / LAG_S)
+    for top in begin + tops:
+        if height[top] >= SIDE_LOBE * height[max(top - near, 0) : top + near].max():
+            return int(top)
+    return highest

@@ -67,7 +67,8 @@ def onsets(levels: Levels) -> Onsets:
     for group, bands in enumerate(np.array_split(np.arange(db.shape[1]), GROUPS)):
         out[:, group] = np.clip(rise[:, bands].mean(axis=1), 0, MOST_RISE_DB)
     out[:, GROUPS] = np.maximum(rise.min(axis=1) - CLAP_DB, 0) * CLAP_WEIGHT
-    return out - out.mean(axis=0)
+    out -= out.mean(axis=0)
+    return out
 
 
 def common_line(first: Onsets, second: Onsets, *, reach: int = REACH_HOPS) -> Line:

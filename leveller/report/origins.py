@@ -1,4 +1,4 @@
-"""Every setting with its value and where that came from: the default, session.toml or the command line."""
+"""Every setting with its value and where that came from: the default, season.toml, session.toml or the command line."""
 
 from __future__ import annotations
 
@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
+from leveller.defaults import season_file_of, with_defaults
 from leveller.errors import InputError
 from leveller.session import SESSION_FILE
 from leveller.sessionfile import SessionFile, read_session_file
@@ -30,7 +31,7 @@ def settings_in_force(session: Path | None, assignments: Mapping[str, Any]) -> l
     settings = Settings().changed(written, where=f"{said.where}: ").changed(assignments, where="--set ")
 
     def origin(key: str) -> str:
-        return SET if key in assignments else said.where if key in written else DEFAULT
+        return SET if key in assignments else said.where_of(key) if key in written else DEFAULT
 
     return [(key, value_text(value), unit, origin(key), why) for key, value, unit, why in settings.rows()]
 
@@ -46,14 +47,15 @@ def delivery_in_force(session: Path | None) -> str:
     said = _said(session)
     chosen = delivery_named(said.delivery or DEFAULT_DELIVERY)
 
-    def part(text: str, given: object, otherwise: str) -> str:
-        return f"{text} ({otherwise if given is None else said.where})"
+    def part(text: str, key: str, otherwise: str) -> str:
+        given = getattr(said, key)
+        return f"{text} ({otherwise if given is None else said.where_of(key)})"
 
     target = chosen.target_lufs if said.target_lufs is None else said.target_lufs
     ceiling = chosen.ceiling_dbtp if said.ceiling_dbtp is None else said.ceiling_dbtp
     return ", ".join((
-        part(chosen.name, said.delivery, DEFAULT), part(f"{target:.1f} LUFS", said.target_lufs, chosen.name),
-        part(f"{ceiling:.1f} dBTP", said.ceiling_dbtp, chosen.name)))
+        part(chosen.name, "delivery", DEFAULT), part(f"{target:.1f} LUFS", "target_lufs", chosen.name),
+        part(f"{ceiling:.1f} dBTP", "ceiling_dbtp", chosen.name)))
 
 
 def value_text(value: Any) -> str:
@@ -70,4 +72,5 @@ def _said(session: Path | None) -> SessionFile:
     file = session / SESSION_FILE if session.is_dir() else session
     if file.suffix.lower() != ".toml":
         raise InputError(f"{session}: expected a folder or a session.toml")
-    return read_session_file(file) if file.exists() else SessionFile()
+    said = read_session_file(file) if file.exists() else SessionFile()
+    return with_defaults(said, season_file_of([session]))

@@ -29,9 +29,12 @@ class Quantity:
     signed: bool = False  # shown with its plus
 
 
-def quantity(label: str, unit: str, decimals: int, meaning: str, *, signed: bool = False) -> Any:
+def quantity(
+    label: str, unit: str, decimals: int, meaning: str, *, signed: bool = False, default: Any = dataclasses.MISSING
+) -> Any:
     """A dataclass field that holds a reported quantity."""
-    return dataclasses.field(metadata={"quantity": Quantity(label, unit, decimals, meaning, signed)})
+    what = {"quantity": Quantity(label, unit, decimals, meaning, signed)}
+    return dataclasses.field(metadata=what, default=default)
 
 
 def quantities(record: Any) -> dict[str, Quantity]:

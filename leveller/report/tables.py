@@ -10,21 +10,18 @@ sources' fingerprints; no clock time, no folder name, so that two runs give the 
 from __future__ import annotations
 
 import dataclasses
-import hashlib
 import json
 import math
 from collections.abc import Sequence
 from concurrent.futures import ThreadPoolExecutor
-from importlib import metadata
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-import leveller
 from leveller.audio import parts_of
 from leveller.automation import text_cell
-from leveller.errors import InputError
+from leveller.fingerprint import made_by, sha256
 from leveller.folder import OutputFolder
 from leveller.lanes import thread_count
 from leveller.listen import Place
@@ -44,7 +41,6 @@ SPEECH_COLUMNS = ("from_s", "to_s", "track", "state", "sure", "level_lufs")
 LISTEN_COLUMNS = ("from_s", "to_s", "track", "decided", "could_be", "reason", "doubt")
 MIX_COLUMNS = ("time_s", "make_up_db", "limiter_db", "short_term_lufs")
 STEPS_PER_S = 10  # rows of mix.csv
-LIBRARIES = ("numpy", "scipy", "soundfile", "soxr")
 JSON_FORM = 1  # raised when a key of report.json changes its meaning
 
 
@@ -98,9 +94,11 @@ def write_report(path: Path, report: Report, result: Run, *, stages: Sequence[st
     """The whole report, with what made it and the settings of the stages that were at work."""
     content = {
         "form": JSON_FORM,
-        "made_by": {"leveller": leveller.__version__, **{name: metadata.version(name) for name in LIBRARIES}},
+        "made_by": made_by(),
+        "fingerprint": getattr(result, "fingerprint", ""),
         **as_json(report),
         "stems": result.stems,
+        "trims_asked_db": {track.name: track.trim_db for track in result.session.tracks if track.trim_db},
         "settings": {key: value for key, value, _, _ in result.session.settings.rows()
                      if key.split(".")[0] in stages},
         "sources": sources_of(result),
@@ -124,18 +122,9 @@ def sources_of(result: Run) -> list[dict[str, Any]]:
     used = [part.path for track in result.session.tracks for part in parts_of(track)]
     paths = dict.fromkeys([*used, *(aside.path for aside in result.session.set_aside)])
     with ThreadPoolExecutor(thread_count()) as pool:  # hashing releases the interpreter lock
-        digests = list(pool.map(_sha256, paths))
+        digests = list(pool.map(sha256, paths))
     return [{"file": path.name, "bytes": path.stat().st_size, "sha256": digest}
             for path, digest in zip(paths, digests, strict=True)]
-
-
-def _sha256(path: Path) -> str:
-    """The fingerprint of a file."""
-    try:
-        with open(path, "rb") as file:
-            return hashlib.file_digest(file, "sha256").hexdigest()
-    except OSError as error:
-        raise InputError(f"{path}: cannot be read ({error.strerror})") from error
 
 
 def _number(value: float, decimals: int) -> str:

@@ -5,10 +5,10 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import sounds
+from loudness_reference import speech
 
 from leveller.attribute.tone import steady_tone
 from leveller.measure.bands import ANALYSIS_HZ, BANDS, BandMeter
-from loudness_reference import speech
 
 
 def levels_of(*signals: np.ndarray) -> np.ndarray:
@@ -52,6 +52,13 @@ def test_speech_noise_and_laughter_are_no_tone() -> None:
     laugh = np.tile(sounds.laugh(rng, 180.0), 20)[: len(voices)]
     laugh = np.pad(laugh, (0, len(voices) - len(laugh)))
     assert not steady_tone(levels_of(voices, noise, laugh)).any()
+
+
+def test_a_steady_buzz_is_no_tone() -> None:
+    """Forty harmonics of 150 Hz stand as still as a tone, but no band of them stands alone."""
+    at = np.arange(8 * ANALYSIS_HZ) / ANALYSIS_HZ
+    buzz = sum(0.01 * np.sin(2 * np.pi * 150 * k * at + k * k) for k in range(1, 41))
+    assert not steady_tone(levels_of(buzz)).any()
 
 
 def test_silence_is_no_tone() -> None:

@@ -5,12 +5,12 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import rooms
+from loudness_reference import speech
 from parity import assert_same_bits
 from scipy.signal import oaconvolve
 
 from leveller.measure.arrival import LAG_S, WINDOW, ArrivalMeter, Arrivals
 from leveller.measure.bands import ANALYSIS_HZ, HOP
-from loudness_reference import speech
 
 SPEED_M_S = 343.0  # of sound in air at 20 degrees C, as the simulated rooms have it
 ONE_STEP_S = LAG_S  # the grid on which lags are found

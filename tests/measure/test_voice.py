@@ -7,10 +7,10 @@ import math
 import numpy as np
 import pytest
 import sounds
+from loudness_reference import speech
 from parity import assert_block_parity
 
 from leveller.measure.voice import VoiceMeter
-from loudness_reference import speech
 
 RATE_HZ = 16_000
 LOUD_DBFS = -12.0  # about the 95th percentile of 10 ms RMS in `speech`, whose peak is at 0.5

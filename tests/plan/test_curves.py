@@ -86,7 +86,7 @@ def test_a_limiter_is_the_limit_of_growing_ratios(x: float, t: float, w: float) 
 
 @given(x=LEVEL, t=THRESHOLD, r=RATIO, w=KNEE, most=st.floats(0, 60))
 @settings(max_examples=300, deadline=None, derandomize=True)
-def test_the_expander_is_the_mirror_image_down_to_its_range(x: float, t: float, r: float, w: float, most: float) -> None:
+def test_the_expander_is_mirrored_down_to_its_range(x: float, t: float, r: float, w: float, most: float) -> None:
     """Input plus gain is the mirrored curve, and the gain ends at -range."""
     gain = expander_gain_db(np.array([x]), threshold_db=t, ratio=r, knee_db=w, range_db=most)[0]
     assert gain == pytest.approx(max(mirrored_expander(x, t, r, w) - x, -most), abs=1e-7)

@@ -1,0 +1,153 @@
+"""Worker processes on this computer, each a concurrent.futures executor of its own.
+
+One process a pool: a process that is killed breaks its pool and no other, so it is known which episode was with it, and
+only that pool is made anew. Processes are started afresh (spawn), import everything once, and serve many episodes. They
+ignore Ctrl-C (the batch decides), clean up on SIGTERM, and end when their batch is gone.
+
+`default_jobs` counts what there is: processors this process may use, and free memory by what an episode takes at most.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import multiprocessing
+import os
+import signal
+import sys
+import threading
+from collections.abc import Callable, Iterator
+from concurrent.futures import BrokenExecutor, Future, ProcessPoolExecutor
+from types import FrameType, TracebackType
+from typing import Any
+
+from leveller.worker import busy
+
+JOB_BYTES = 600 << 20  # DESIGN: three hours of eight tracks stay under it
+THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")  # read when numpy is imported
+PATIENCE_S = 10.0  # for a worker to clean up
+ENDED_EXIT = 143
+
+
+class LocalWorkers:
+    """So many processes; a context manager. `submit` needs a place that is free (`places`)."""
+
+    lost: tuple[type[BaseException], ...] = (BrokenExecutor,)
+
+    def __init__(self, jobs: int) -> None:
+        self._pools: list[ProcessPoolExecutor | None] = [None] * jobs
+        self._last: list[Future[Any] | None] = [None] * jobs
+        self._others = set(multiprocessing.active_children())
+
+    @property
+    def places(self) -> int:
+        """How many episodes can be at work at once."""
+        return len(self._pools)
+
+    def submit(self, function: Callable[..., Any], *arguments: Any) -> Future[Any]:
+        """Run a function in a process that is free, a new one where that has died."""
+        place = next(i for i, last in enumerate(self._last) if last is None or last.done())
+        for _ in range(2):
+            pool = self._pools[place] = self._pools[place] or _new_pool()
+            try:
+                with _no_interrupt():  # the process that may start now inherits this
+                    future = pool.submit(_served, function, *arguments)
+            except BrokenExecutor:  # its process has died, at work or idle
+                self._pools[place] = None
+                continue
+            self._last[place] = future
+            return future
+        raise BrokenExecutor("no worker process can be started")
+
+    def stop(self) -> None:
+        """End all work now; workers remove what they have begun."""
+        ours = [process for process in multiprocessing.active_children() if process not in self._others]
+        for process in ours:
+            process.terminate()
+        for pool in self._pools:
+            if pool is not None:
+                pool.shutdown(wait=False, cancel_futures=True)
+        for process in ours:
+            process.join(PATIENCE_S)
+            if process.is_alive():
+                with contextlib.suppress(OSError):
+                    process.kill()
+
+    def __enter__(self) -> LocalWorkers:
+        return self
+
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+                 ) -> None:
+        if kind is not None:
+            self.stop()
+        for pool in self._pools:
+            if pool is not None:
+                pool.shutdown(wait=True, cancel_futures=True)
+
+
+def default_jobs() -> int:
+    """As many processes as there are processors, unless the free memory is short of that."""
+    cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+    free = _free_bytes()
+    return max(1, cores if free is None else min(cores, free // JOB_BYTES))
+
+
+def _free_bytes() -> int | None:
+    """Memory that programs can still take, None where the system does not say."""
+    try:
+        with open("/proc/meminfo", encoding="ascii") as file:
+            facts = dict(line.split(":", 1) for line in file)
+        return int(facts["MemAvailable"].split()[0]) * 1024
+    except (OSError, KeyError, ValueError):
+        return None
+
+
+def _new_pool() -> ProcessPoolExecutor:
+    """A pool of one process, which starts with its first work."""
+    for name in THREAD_LIMITS:
+        os.environ.setdefault(name, "1")
+    return ProcessPoolExecutor(1, mp_context=multiprocessing.get_context("spawn"), initializer=_settle)
+
+
+@contextlib.contextmanager
+def _no_interrupt() -> Iterator[None]:
+    """Hold Ctrl-C back for a moment; it comes after it."""
+    if not hasattr(signal, "pthread_sigmask"):
+        yield
+        return
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+
+
+def _settle() -> None:
+    """What a worker process does first."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    signal.signal(signal.SIGTERM, _leave)
+    threading.Thread(target=_watch_batch, name="watch", daemon=True).start()
+
+
+def _served(function: Callable[..., Any], *arguments: Any) -> Any:
+    """Run a function; once its work is unwound after SIGTERM, end the process."""
+    try:
+        return function(*arguments)
+    except SystemExit:
+        os._exit(ENDED_EXIT)
+
+
+def _leave(number: int, frame: FrameType | None) -> None:
+    """Unwind, so that what is half-written is removed; a second signal does not disturb that."""
+    signal.signal(signal.SIGTERM, signal.SIG_IGN)
+    sys.exit(ENDED_EXIT)
+
+
+def _watch_batch() -> None:
+    """Clean up and end when the batch has died: nobody would end this process otherwise."""
+    batch = multiprocessing.parent_process()
+    if batch is None:
+        return
+    batch.join()
+    os.kill(os.getpid(), signal.SIGTERM)
+    busy.acquire(timeout=PATIENCE_S)
+    os._exit(ENDED_EXIT)

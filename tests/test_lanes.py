@@ -1,0 +1,84 @@
+"""leveller.lanes: tracks side by side, each strictly in order."""
+
+from __future__ import annotations
+
+import threading
+import time
+
+import pytest
+
+from leveller.lanes import AHEAD, thread_count, walk
+
+
+@pytest.mark.parametrize("threads", [1, 2, 4, 16])
+@pytest.mark.parametrize(("lanes", "blocks"), [(1, 1), (1, 9), (3, 5), (12, 4)])
+def test_results_come_in_order(threads: int, lanes: int, blocks: int) -> None:
+    """Block by block, in lane order, on any number of threads."""
+    found = list(walk(lambda lane, block: (block, lane), lanes=lanes, blocks=blocks, threads=threads))
+    assert found == [[(block, lane) for lane in range(lanes)] for block in range(blocks)]
+
+
+def test_a_lane_is_never_in_two_places() -> None:
+    """One lane's steps run one after the other and in order, though lanes run side by side."""
+    inside, seen, wrong = [0] * 3, [[], [], []], []
+    lock = threading.Lock()
+
+    def step(lane: int, block: int) -> None:
+        with lock:
+            inside[lane] += 1
+            wrong.append(inside[lane] > 1)
+            seen[lane].append(block)
+        time.sleep(0.001 * (lane + 1))
+        with lock:
+            inside[lane] -= 1
+
+    list(walk(step, lanes=3, blocks=8, threads=4))
+    assert len(wrong) == 24
+    assert not any(wrong)
+    assert seen == [list(range(8))] * 3
+
+
+def test_no_more_than_a_few_blocks_are_in_flight() -> None:
+    """While the reader dawdles, no lane gets further ahead than AHEAD blocks: memory stays bounded."""
+    begun = []
+    for block, _ in enumerate(walk(lambda _, block: begun.append(block), lanes=2, blocks=20, threads=2)):
+        time.sleep(0.002)
+        assert max(begun) <= block + AHEAD
+
+
+@pytest.mark.parametrize("threads", [1, 4])
+def test_the_first_error_ends_the_walk(threads: int) -> None:
+    """A step that fails is raised here, at its block; later blocks are dropped, and no thread is left behind."""
+    begun = []
+
+    def step(lane: int, block: int) -> int:
+        begun.append(block)
+        if (lane, block) == (1, 2):
+            raise OSError("gone")
+        return block
+
+    found = []
+    with pytest.raises(OSError, match="gone"):
+        found.extend(walk(step, lanes=3, blocks=100, threads=threads))
+    assert found == [[0, 0, 0], [1, 1, 1]]
+    assert max(begun) <= 2 + AHEAD
+    assert not [thread for thread in threading.enumerate() if thread.name.startswith("lane")]
+
+
+def test_a_reader_that_leaves_ends_the_walk() -> None:
+    """Leaving after the first block drops the rest."""
+    begun = []
+    rows = walk(lambda _, block: begun.append(block), lanes=1, blocks=1000, threads=2)
+    next(rows)
+    rows.close()
+    assert len(begun) <= 1 + AHEAD
+
+
+def test_no_blocks_no_rows() -> None:
+    """Nothing to walk."""
+    assert list(walk(lambda *_: None, lanes=2, blocks=0)) == []
+
+
+def test_threads_worth_having() -> None:
+    """At least one, at most four."""
+    assert 1 <= thread_count() <= 4
