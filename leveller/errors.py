@@ -8,8 +8,8 @@
     ├── OutputError          5   the output folder: exists, read-only, no room
     └── AutomationError      6   a CSV that shall be rendered: order, range, unknown track
 
-Exit code 2 is a wrong command line, 7 a batch in which some episodes failed, 130 an interruption. A message says what, where, found against
-expected, and the way out, in one line.
+Exit code 2 is a wrong command line, 7 a batch in which some episodes failed, 130 an interruption. A message says
+what, where, found against expected, and the way out, in one line.
 """
 
 from __future__ import annotations

@@ -1,7 +1,8 @@
 """What stems and mix carry besides sound: the recorder's clock, the loudness, and the places to hear as markers.
 
-`bext` version 2 (EBU Tech 3285): description, TimeReference of session zero (so that stems and mix drop back on the timeline), date and
-time of the source; in the mix its loudness too. `cue ` with `LIST adtl` (RIFF): the doubtful places, each stem its own, the mix all of them.
+`bext` version 2 (EBU Tech 3285): description, TimeReference of session zero (so that stems and mix drop back on the
+timeline), date and time of the source; in the mix its loudness too. `cue ` with `LIST adtl` (RIFF): the doubtful
+places, each stem its own, the mix all of them.
 """
 
 from __future__ import annotations

@@ -111,7 +111,8 @@ class Settings:
     def rows(self) -> list[tuple[str, Any, str, str]]:
         """Every setting as (key, value, unit, reason)."""
         return [
-            (f"{stage.name}.{f.name}", getattr(getattr(self, stage.name), f.name), f.metadata["unit"], f.metadata["why"])
+            (f"{stage.name}.{f.name}", getattr(getattr(self, stage.name), f.name), f.metadata["unit"],
+             f.metadata["why"])
             for stage in dataclasses.fields(self)
             for f in dataclasses.fields(getattr(self, stage.name))
         ]
@@ -143,7 +144,8 @@ def _checked(key: str, value: Any, spec: dataclasses.Field[Any], where: str) -> 
         raise SettingsError(f"{where}{key} = {value!r}: expected true or false")
     if meta["auto"] and value == AUTO:
         return AUTO
-    expected = f"expected {'auto or ' if meta['auto'] else ''}a number from {meta['low']:g} to {meta['high']:g} ({meta['unit']})"
+    expected = (f"expected {'auto or ' if meta['auto'] else ''}a number from {meta['low']:g} to {meta['high']:g} "
+                f"({meta['unit']})")
     try:
         number = float(value)
     except (TypeError, ValueError):

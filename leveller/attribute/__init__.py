@@ -8,7 +8,8 @@ The story, each step a module:
 4. `coupling`  from the hops labelled so far: how much of every voice each microphone hears;
 5. `bleed`     from the coupling: what the others explain at each microphone, and the evidence for own voice;
 6. back to 4 with the hops in which one microphone clearly has its own voice and no other has, `ROUNDS` times;
-7. `leads`     a microphone that clearly hears first has its own voice; `knocks`: sounds too short for a voice say nothing;
+7. `leads`     a microphone that clearly hears first has its own voice; `knocks`: sounds too short for a voice say
+   nothing;
 8. `decode`    evidence into states over time;
 9. `knobs`     recording gains that were turned in the middle.
 

@@ -2,19 +2,20 @@
 
 Per block of 5 s and band:
 
-1. *Sources.* The power of each voice at its own microphone is the power there, less noise, less the bleed of the other
-   voices; solved by a few rounds over the interference matrix (`coupling`), so that two people who talk at once do not
-   take each other for bleed of bleed.
-2. *Prediction.* The bleed at m is the sum over the other voices of coupling times source power, held up by the room's
-   decaying tail: what was loud a moment ago still sounds.
-3. *Evidence.* In each band the level over predicted bleed plus noise is about 0 dB in bleed, with a scatter of some 4 to 5 dB, and
-   anywhere up to 30 dB in own speech, which need not fill all bands. So the likelihood of bleed is a normal one and that of own
-   speech a mixture of it with a uniform one; the mean over bands of the log ratio, times `INDEPENDENT` (neighbouring
-   bands and hops are not independent), is the evidence in nats. The lowest bands count by themselves as
-   well, since an "mm" fills no others.
+1. *Sources.* The power of each voice at its own microphone is the power there, less noise, less the bleed of the
+   other voices; solved by a few rounds over the interference matrix (`coupling`), so that two people who talk at
+   once do not take each other for bleed of bleed.
+2. *Prediction.* The bleed at m is the sum over the other voices of coupling times source power, held up by the
+   room's decaying tail: what was loud a moment ago still sounds.
+3. *Evidence.* In each band the level over predicted bleed plus noise is about 0 dB in bleed, with a scatter of some
+   4 to 5 dB, and anywhere up to 30 dB in own speech, which need not fill all bands. So the likelihood of bleed is a
+   normal one and that of own speech a mixture of it with a uniform one; the mean over bands of the log ratio, times
+   `INDEPENDENT` (neighbouring bands and hops are not independent), is the evidence in nats. The lowest bands count
+   by themselves as well, since an "mm" fills no others.
 
-Published relatives: level differences between channels beat correlation features (K. Boakye, A. Stolcke, Interspeech 2006);
-sources from an interference matrix (E. Kokkinis et al., 2012; T. Praetzlich et al., ICASSP 2015).
+Published relatives: level differences between channels beat correlation features (K. Boakye, A. Stolcke,
+Interspeech 2006); sources from an interference matrix (E. Kokkinis et al., 2012; T. Praetzlich et al., ICASSP
+2015).
 """
 
 from __future__ import annotations
@@ -155,8 +156,8 @@ def _describe(out: dict[str, Grid], level_db: Grid, noise_db: Grid, bleed: Grid,
     expected_db = _db(bleed * np.float32(10 ** (SAFETY_DB / 10)) + noise)
     ratio_db = level_db - expected_db
     np.clip(ratio_db, *RATIO_SPAN_DB, out=ratio_db)
-    index = ((ratio_db - np.float32(RATIO_SPAN_DB[0])) * np.float32(1 / _TABLE_STEP_DB) + np.float32(0.5)).astype(np.int16)
-    nats = table[index]
+    steps = (ratio_db - np.float32(RATIO_SPAN_DB[0])) * np.float32(1 / _TABLE_STEP_DB)
+    nats = table[np.rint(steps).astype(np.int16)]
     out["score"][:] = nats.mean(axis=2)
     out["narrow"][:] = nats[:, :, :NARROW_BANDS].mean(axis=2)
     out["own_to_bleed_db"][:] = ratio_db.mean(axis=2)

@@ -1,14 +1,15 @@
 """How much of each voice every microphone hears: the coupling, per band, followed through time.
 
 While only person k speaks, the level at microphone m less the level at k's own microphone is the same from word to
-word, whatever the gains are. Its quantile over the hops labelled k is the coupling of k into m. It is taken locally,
-over half a minute of k's own speech or wider where there is little, because a knob that is turned shifts one microphone for everybody and a
-person who changes seat shifts one voice for all microphones; both are followed, forwards and backwards in time, and a
-person who says nothing for ten minutes is not forgotten. A little over the median is taken (our choice, measured):
-bleed under-predicted opens microphones, bleed over-predicted by a decibel or two costs nothing.
+word, whatever the gains are. Its quantile over the hops labelled k is the coupling of k into m. It is taken
+locally, over half a minute of k's own speech or wider where there is little, because a knob that is turned shifts
+one microphone for everybody and a person who changes seat shifts one voice for all microphones; both are followed,
+forwards and backwards in time, and a person who says nothing for ten minutes is not forgotten. A little over the
+median is taken (our choice, measured): bleed under-predicted opens microphones, bleed over-predicted by a decibel
+or two costs nothing.
 
-The interference matrix this builds is the one of leakage reduction (E. Kokkinis, J. Reiss, J. Mourjopoulos, IEEE TASL 20(3),
-2012).
+The interference matrix this builds is the one of leakage reduction (E. Kokkinis, J. Reiss, J. Mourjopoulos, IEEE
+TASL 20(3), 2012).
 """
 
 from __future__ import annotations

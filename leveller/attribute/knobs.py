@@ -1,12 +1,14 @@
 """Recording gains that were turned in the middle: when, on which track, by how much.
 
-A knob moves everything on its track for good: the room's noise, the bleed and the voice. The noise floor shows it best,
-since it is steady: between two quiet moments it steps by the same number of dB in every band. A fan or an air conditioner that
-starts moves floors too, but on all tracks at once, and leaves the speech where it was. So a step of the floor is a
-knob's when no other track's floor steps likewise at the same moment and the track's own speech steps with it.
+A knob moves everything on its track for good: the room's noise, the bleed and the voice. The noise floor shows it
+best, since it is steady: between two quiet moments it steps by the same number of dB in every band. A fan or an air
+conditioner that starts moves floors too, but on all tracks at once, and leaves the speech where it was. So a step
+of the floor is a knob's when no other track's floor steps likewise at the same moment and the track's own speech
+steps with it.
 
-Method: change points of the quietest 90 ms of each second, median over bands, by least squares with binary segmentation (A. J.
-Scott, M. Knott, Biometrics 30, 1974). A person who leans away or changes seat moves no floor and is left to the ride.
+Method: change points of the quietest 90 ms of each second, median over bands, by least squares with binary
+segmentation (A. J. Scott, M. Knott, Biometrics 30, 1974). A person who leans away or changes seat moves no floor
+and is left to the ride.
 """
 
 from __future__ import annotations

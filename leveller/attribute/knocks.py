@@ -1,8 +1,9 @@
 """Sounds too short for a voice: thumps, clicks, keys. They open nothing and close nothing.
 
-A knock stands out of its surroundings on both sides: 50 ms before and 50 ms after, the microphone is much softer. The
-shortest syllable is longer. A stop consonant can be as short, but a vowel follows or goes before it, so a knock counts only where there is no lasting
-evidence for own voice on either side. Round it, evidence for own voice is left out; evidence against stays.
+A knock stands out of its surroundings on both sides: 50 ms before and 50 ms after, the microphone is much softer.
+The shortest syllable is longer. A stop consonant can be as short, but a vowel follows or goes before it, so a knock
+counts only where there is no lasting evidence for own voice on either side. Round it, evidence for own voice is
+left out; evidence against stays.
 """
 
 from __future__ import annotations

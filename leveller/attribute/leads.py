@@ -1,8 +1,9 @@
 """Arrival times as evidence: a microphone that clearly hears first has its own voice.
 
 Where microphones hear everybody almost alike (far from the mouths, or all on lapels), levels say little and arrival
-times still tell who speaks. A clear lead (`measure.arrival`) opens its microphone; that a microphone does not lead closes nothing, since of
-two people who talk at once only one can. Where levels separate well, the lead must be clearer to count: there it can only add errors.
+times still tell who speaks. A clear lead (`measure.arrival`) opens its microphone; that a microphone does not lead
+closes nothing, since of two people who talk at once only one can. Where levels separate well, the lead must be
+clearer to count: there it can only add errors.
 """
 
 from __future__ import annotations

@@ -3,11 +3,11 @@
 Two sources, in this order:
 
 * *Arrival*: the window's sound reaches one microphone clearly before all others (`measure.arrival`), and that
-  microphone stands out in level against the others by more than in most such windows. This needs no knowledge of gains, nor of how
-  much anybody speaks, and never names a microphone that nobody sits at.
+  microphone stands out in level against the others by more than in most such windows. This needs no knowledge of
+  gains, nor of how much anybody speaks, and never names a microphone that nobody sits at.
 * *Level*, for sessions without usable arrivals (microphones far apart, or not on one clock): each loud hop goes to
-  the microphone that is loudest against its own loud speech (normalising each channel by itself: T. Pfau, D. P. W. Ellis,
-  A. Stolcke, ASRU 2001).
+  the microphone that is loudest against its own loud speech (normalising each channel by itself: T. Pfau, D. P. W.
+  Ellis, A. Stolcke, ASRU 2001).
 
 A microphone that gets no seed may still have a voice: whatever sounds there and is not explained by the others' bleed
 is labelled in the rounds that follow.

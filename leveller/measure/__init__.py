@@ -1,8 +1,8 @@
 """Blocks of audio in, numbers per hop out: the only pass over the sources before anything is decided.
 
-Each meter is one module with `push(block)` and `result()`, gives the same answer at any block size, and knows nothing of
-the others. `measure` walks all tracks block by block and hands each block to the meters; what it returns is small (about
-12 MB a track-hour) and everything after it is pure.
+Each meter is one module with `push(block)` and `result()`, gives the same answer at any block size, and knows
+nothing of the others. `measure` walks all tracks block by block and hands each block to the meters; what it returns
+is small (about 12 MB a track-hour) and everything after it is pure.
 
 ================  ==========================================================
 `bands`           power in speech bands, K-weighted power, rumble, per hop
@@ -126,5 +126,6 @@ def _collected(session: Session, meters: list[_TrackMeters], arrival: ArrivalMet
         others[:, : len(found), i] = found[:, BANDS:].T
         voiced[: len(flags), i] = flags
     return Measurements(
-        levels=levels, k_levels=others[0], voice_levels=others[1], rumble=others[2], voiced=voiced, arrivals=arrival.result(),
+        levels=levels, k_levels=others[0], voice_levels=others[1], rumble=others[2], voiced=voiced,
+        arrivals=arrival.result(),
         peaks=tuple(m.peak.result() for m in meters), repaired_frames=tuple(m.reader.repaired_frames for m in meters))

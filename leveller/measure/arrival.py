@@ -1,16 +1,17 @@
 """Which microphone hears a sound first: delays between microphones, whatever their gains.
 
 A voice reaches its own microphone before all others, by 3 ms a metre. The generalised cross-correlation with phase
-transform (GCC-PHAT; C. H. Knapp, G. C. Carter, IEEE Trans. ASSP 24(4), 1976) of a 128 ms window shows the delay as a
-peak that does not depend on level, gain or spectrum, and still stands in a live room. That makes it a seed for
-knowing who speaks into which microphone before anything about levels is known; a knob turned in the middle or a person
-who hardly speaks do not disturb it. Measured on simulated rooms (RT60 0.3 to 0.8 s): of the windows that `attribute` takes as seeds 999 in a
-thousand named the right microphone.
+transform (GCC-PHAT; C. H. Knapp, G. C. Carter, IEEE Trans. ASSP 24(4), 1976) of a 128 ms window shows the delay as
+a peak that does not depend on level, gain or spectrum, and still stands in a live room. That makes it a seed for
+knowing who speaks into which microphone before anything about levels is known; a knob turned in the middle or a
+person who hardly speaks do not disturb it. Measured on simulated rooms (RT60 0.3 to 0.8 s): of the windows that
+`attribute` takes as seeds 999 in a thousand named the right microphone.
 
 Method: windows of 2048 samples at 16 kHz; only 200 to 3700 Hz is kept, so the correlation comes back at 8 kHz; each
-spectrum is set to unit modulus once, then one inverse transform a pair. Lags up to 12 ms count (4 m). The *lead* of a microphone is
-the mean over the others of the peak's height, positive where it hears first and negative where it hears later.
-The number of windows is bounded by the number of pairs, so that twelve microphones do not cost thirty times three.
+spectrum is set to unit modulus once, then one inverse transform a pair. Lags up to 12 ms count (4 m). The *lead* of
+a microphone is the mean over the others of the peak's height, positive where it hears first and negative where it
+hears later. The number of windows is bounded by the number of pairs, so that twelve microphones do not cost thirty
+times three.
 """
 
 from __future__ import annotations

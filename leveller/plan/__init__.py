@@ -1,9 +1,9 @@
 """Measurements and activity in, gain breakpoints out: all decisions, no samples.
 
-For each voice, in this order: a static `trim` that brings it to `VOICE_LUFS`, the `expander`, the slow `ride`, the gentle
-`compressor`. Every part is a curve in dB at hop edges; their sum is the track's gain. `thinning` takes the curves to the
-fewest rows, rounded to 0.01 dB, and from then on the rows *are* the plan: the automation file holds them and the
-renderer reads nothing else.
+For each voice, in this order: a static `trim` that brings it to `VOICE_LUFS`, the `expander`, the slow `ride`, the
+gentle `compressor`. Every part is a curve in dB at hop edges; their sum is the track's gain. `thinning` takes the
+curves to the fewest rows, rounded to 0.01 dB, and from then on the rows *are* the plan: the automation file holds
+them and the renderer reads nothing else.
 
 Roles: `room` keeps its trim from the session file and is never expanded; `bed` likewise.
 """

@@ -1,7 +1,8 @@
 """The gentle compressor within a phrase: soft knee, feed-forward, smoothed in the log domain after the gain computer.
 
-D. Giannoulis, M. Massberg, J. D. Reiss, JAES 60(6), 2012. The level detector is the 10 ms speech level without rumble, so
-neither thumps nor plosives drive it; only own speech does, so neither bleed nor pauses do. Because nothing here is live, it looks ahead by one hop.
+D. Giannoulis, M. Massberg, J. D. Reiss, JAES 60(6), 2012. The level detector is the 10 ms speech level without
+rumble, so neither thumps nor plosives drive it; only own speech does, so neither bleed nor pauses do. Because
+nothing here is live, it looks ahead by one hop.
 """
 
 from __future__ import annotations

@@ -1,8 +1,8 @@
 """Static curves of the dynamics processors, gain in dB over level in dB.
 
-D. Giannoulis, M. Massberg, J. D. Reiss, "Digital Dynamic Range Compressor Design - A Tutorial and Analysis", JAES 60(6), 2012: input
-x, output y, threshold T, knee W, ratio R, all in dB; the expander is the mirror image, with a range D at which it ends. A
-limiter is a compressor with an infinite ratio.
+D. Giannoulis, M. Massberg, J. D. Reiss, "Digital Dynamic Range Compressor Design - A Tutorial and Analysis", JAES
+60(6), 2012: input x, output y, threshold T, knee W, ratio R, all in dB; the expander is the mirror image, with a
+range D at which it ends. A limiter is a compressor with an infinite ratio.
 """
 
 from __future__ import annotations

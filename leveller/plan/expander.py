@@ -1,13 +1,13 @@
 """The downward expander of each microphone: when it opens and closes, and how deep.
 
-*When.* A microphone is open round its own voice: from `lookahead_s` before to `hold_s` after. In a pause in which nobody
-speaks the last microphone stays open, so that the room tone stays, and closes as the next voice starts; that voice's own
-microphone opens up to `EARLY_S` early through the silence, so that the breath before the words is whole. Gaps too
-short to be worth a move stay open.
+*When.* A microphone is open round its own voice: from `lookahead_s` before to `hold_s` after. In a pause in which
+nobody speaks the last microphone stays open, so that the room tone stays, and closes as the next voice starts; that
+voice's own microphone opens up to `EARLY_S` early through the silence, so that the breath before the words is
+whole. Gaps too short to be worth a move stay open.
 
 *How deep.* The static curve of `curves.expander_gain_db` at the own-to-bleed ratio of the closed stretch (its upper
-quartile): bleed that lies where it was predicted gets the whole range, a doubtful stretch, in which more is heard than
-the others explain, is closed by a part. One depth a stretch: what is closed does not flutter.
+quartile): bleed that lies where it was predicted gets the whole range, a doubtful stretch, in which more is heard
+than the others explain, is closed by a part. One depth a stretch: what is closed does not flutter.
 
 *Range.* `auto` brings the bleed of the loudest neighbour 24 dB under the voice that speaks (both after their trims),
 between 6 and 18 dB: a microphone that is clean already needs 6, and deep gates make the room tone breathe.

@@ -1,10 +1,10 @@
 """The slow ride: one hand on one fader, following a voice that leans back and comes forward.
 
-Method: own speech in pieces of `CELL_S`; the level of a moment is the mean of the pieces round it under a Gaussian window, both
-ways in time, drawn towards the voice's overall level where there is little speech. Pieces far from the voice's usual
-level (laughter, whispers) do not count: a whisper stays a whisper. Only a part of the deviation is taken out, so
-that phrases keep their weight. The gain then moves within `rate_db_s`, and stands still in pauses in which the
-microphone is open: there only room tone would be heard to move.
+Method: own speech in pieces of `CELL_S`; the level of a moment is the mean of the pieces round it under a Gaussian
+window, both ways in time, drawn towards the voice's overall level where there is little speech. Pieces far from the
+voice's usual level (laughter, whispers) do not count: a whisper stays a whisper. Only a part of the deviation is
+taken out, so that phrases keep their weight. The gain then moves within `rate_db_s`, and stands still in pauses in
+which the microphone is open: there only room tone would be heard to move.
 """
 
 from __future__ import annotations

@@ -1,8 +1,8 @@
 """Fewest breakpoints: dense curves at hop edges into rows that a person can read and edit.
 
-Method: Ramer-Douglas-Peucker (U. Ramer, 1972; D. Douglas, T. Peucker, 1973), all stretches at once: between kept rows every curve
-is a line; the row furthest from its line, over all curves together, is kept next, until none is further than the
-tolerance.
+Method: Ramer-Douglas-Peucker (U. Ramer, 1972; D. Douglas, T. Peucker, 1973), all stretches at once: between kept
+rows every curve is a line; the row furthest from its line, over all curves together, is kept next, until none is
+further than the tolerance.
 """
 
 from __future__ import annotations

@@ -3,8 +3,8 @@
 Level: K-weighted over own speech (ITU-R BS.1770 weighting; the gate is our own: what lies 25 dB under the mean of own
 speech is not speech). Every voice lies at the same level after it; the make-up gain of the mix does the rest.
 
-A knob that was turned (`attribute.knobs`) is turned back by as much at the same moment, so that the voice, its room tone
-and the bleed keep their level. Somebody who leans back or changes seat is the ride's business.
+A knob that was turned (`attribute.knobs`) is turned back by as much at the same moment, so that the voice, its room
+tone and the bleed keep their level. Somebody who leans back or changes seat is the ride's business.
 """
 
 from __future__ import annotations

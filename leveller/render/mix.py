@@ -1,10 +1,11 @@
 """Stems and their sum, then make-up gain and limiter: no decisions about microphones, only what the plan says.
 
-Pass over the sources: each track is read, gets its gain and its place, and is written as a stem; the sum goes to a temporary
-float file while its loudness and true peak are measured. From these two readings the make-up gain is found without touching audio
-again (`limiter.find_make_up`). One pass over the sum then writes the mix and measures it as written; should its
-loudness or true peak miss by more than the reading can tell, make-up or ceiling are corrected and the pass repeated.
-Last, the stems take the make-up gain in place, so that they add up to the mix before the limiter.
+Pass over the sources: each track is read, gets its gain and its place, and is written as a stem; the sum goes to a
+temporary float file while its loudness and true peak are measured. From these two readings the make-up gain is
+found without touching audio again (`limiter.find_make_up`). One pass over the sum then writes the mix and measures
+it as written; should its loudness or true peak miss by more than the reading can tell, make-up or ceiling are
+corrected and the pass repeated. Last, the stems take the make-up gain in place, so that they add up to the mix
+before the limiter.
 """
 
 from __future__ import annotations
