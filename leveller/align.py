@@ -25,6 +25,7 @@ import numpy as np
 from leveller.audio import parts_of
 from leveller.measure import Measurements
 from leveller.measure.arrival import LAG_S, Arrivals
+from leveller.measure.claps import CLAP_HEIGHT, common_clap
 from leveller.measure.clocks import Fit, Heard, clock_of
 from leveller.measure.levels import level_to_db
 from leveller.measure.onsets import ENOUGH_SCORE, Line, common_line, onsets
@@ -35,7 +36,6 @@ LONGEST_WAY_S = 0.015  # five metres
 USUAL_WAY_S = 0.003
 LEAST_DRIFT_S = 0.0015  # by the session's end; less is no drift
 LEAST_PLACES = 3
-CLAP_HEIGHT = 0.3  # of a peak that alone is enough
 LEAST_SHARE = 0.4  # of the clear places
 DRIFT_SPAN_S = 20.0  # over less time the slope means nothing
 STEADY_LAGS = 4  # arrivals this near to the commonest lag agree with it
@@ -186,14 +186,17 @@ def _compared(
     session: Session, heard: dict[int, Heard], base: _Clock, k: int, i: int, same_file: bool
 ) -> _Clock | None:
     """Track i against the reference by way of track k, or None where they share no sound."""
-    line = Line(0.0, 0.0, ENOUGH_SCORE) if same_file else common_line(heard[k].onsets, heard[i].onsets)
+    line: Line | None = Line(0.0, 0.0, ENOUGH_SCORE)
+    if not same_file:
+        line = common_line(heard[k].onsets, heard[i].onsets)
+        line = line if line.score >= ENOUGH_SCORE else common_clap(heard[k], heard[i], session.rate_hz)
     others = [heard[j] for j in heard if j not in (i, k)]
-    fit = clock_of(heard[k], heard[i], line, session.rate_hz, others=others) if line.score >= ENOUGH_SCORE else None
+    fit = None if line is None else clock_of(heard[k], heard[i], line, session.rate_hz, others=others)
     sure = fit is not None and _sure(fit)
     polarity = fit.sign * base.polarity if fit is not None and sure and fit.sign and base.polarity else None
     if same_file:
         return dataclasses.replace(base, polarity=polarity)
-    if fit is None or not sure:
+    if line is None or fit is None or not sure:
         return None
     offset_s, drift = _without_way(fit), fit.drift
     if abs(drift) * session.frames / session.rate_hz < LEAST_DRIFT_S or np.ptp(fit.near.at_s) < DRIFT_SPAN_S:
@@ -211,8 +214,8 @@ def _sure(fit: Fit) -> bool:
 
 
 def _without_way(fit: Fit) -> float:
-    """The offset; where only one track hears the other, the usual way is taken off what it hears late."""
-    if fit.way_s is not None or 0 in fit.sides:
+    """The offset; where only one track hears the other's voice, the usual way is taken off what it hears late."""
+    if fit.way_s is not None or 0 in fit.sides or len(fit.near.at_s) < LEAST_PLACES:  # a clap is nobody's voice
         return fit.offset_s
     side = max(fit.sides)
     return fit.offset_s - side * min(USUAL_WAY_S, max(side * fit.offset_s, 0.0))

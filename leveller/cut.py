@@ -24,11 +24,11 @@ from leveller.audio import FloatSpill, TrackReader, open_readers, probe
 from leveller.errors import InputError, SettingsError
 from leveller.folder import OutputFolder
 from leveller.lanes import walk
-from leveller.measure import OnProgress, no_progress
+from leveller.measure import OnProgress
 from leveller.names import safe_name, unique_names
 from leveller.render.mix import BLOCK_S, Bus, Mix
 from leveller.samples import FileFacts
-from leveller.session import AUDIO_SUFFIXES, Session, Track
+from leveller.session import Session, Track, audio_files
 from leveller.settings import Settings, delivery_named
 
 DEFAULT_OUT = Path("levelled")
@@ -79,54 +79,8 @@ def open_cut(
         delivery=chosen, mix_channels=channels, settings=_settings(settings), notes=tuple(notes))
 
 
-def finish(
-    paths: Sequence[Path | str] | Path | str,
-    *,
-    out: Path | str | None = None,
-    replace: bool = False,
-    delivery: str | None = None,
-    settings: Mapping[str, Any] | None = None,
-    accept_short: bool = False,
-    on_progress: OnProgress = no_progress,
-) -> Finished:
-    """Bring a cut to its delivery: write mix.wav, mix.csv and report.json.
-
-    Parameters
-    ----------
-    paths : path or sequence of paths
-        One file, several that are summed, or a folder whose audio files are summed.
-    out : path, optional
-        Folder to write, `./levelled/<title> finished` by default; it appears whole or not at all.
-    replace : bool
-        Allow an existing folder to be replaced.
-    delivery : str, optional
-        Name of a delivery; by default `podcast-stereo` or `podcast-mono`, after the files' channels.
-    settings : mapping, optional
-        Settings of the limiter, such as `{"limiter.release_s": 0.2}`.
-    accept_short : bool
-        Take what is there of a file that is shorter than its header says.
-    on_progress : callable (stage, done, total), optional
-
-    Raises
-    ------
-    LevellerError
-        With one line that says what, where and the way out; nothing is written then.
-    """
-    from leveller.report.finished import write_finished
-
-    given = [paths] if isinstance(paths, str | Path) else paths
-    session = open_cut([Path(path) for path in given], delivery=delivery, settings=settings, accept_short=accept_short)
-    wanted = Path(out) if out is not None else DEFAULT_OUT / f"{safe_name(session.title)} finished"
-    needed = session.frames * session.mix_channels * (4 + 3) + MARGIN_BYTES
-    folder = OutputFolder(wanted, replace, needed_bytes=needed, sources=[track.path for track in session.tracks])
-    with folder:
-        finished = _delivered(session, folder, on_progress)
-        write_finished(folder, finished)
-    return finished
-
-
-def _delivered(session: Session, folder: OutputFolder, on_progress: OnProgress) -> Finished:
-    """Sum the files and deliver the sum."""
+def deliver_cut(session: Session, folder: OutputFolder, on_progress: OnProgress) -> Finished:
+    """Sum the files of a cut and deliver the sum as mix.wav of the folder."""
     frames = round(BLOCK_S * session.rate_hz)
     length_s = session.frames / session.rate_hz
     with (FloatSpill(folder.work / ".sum", session.mix_channels) as spill, open_readers(session) as readers):
@@ -163,8 +117,7 @@ def _files(paths: Sequence[Path]) -> list[Path]:
         if not path.is_dir():
             out.append(path)
             continue
-        found = sorted(file for file in path.iterdir()
-                       if file.is_file() and not file.name.startswith(".") and file.suffix.lower() in AUDIO_SUFFIXES)
+        found = audio_files(path)
         if not found:
             raise InputError(f"{path}: no audio files directly in this folder")
         out += found

@@ -41,12 +41,12 @@ def safe_name(text: str) -> str:
 
 
 def unique_names(names: Sequence[str]) -> list[str]:
-    """The names in order; the second of equal ones gets ' 2'. Case and accents' encoding make no difference."""
+    """The names in order; the second of equal ones gets ' 2'. Case, accents' encoding and outer blanks make no difference."""
     taken: set[str] = set()
     out = []
     for name in names:
         candidate, count = name, 1
-        while (key := unicodedata.normalize("NFC", candidate).casefold()) in taken:
+        while (key := unicodedata.normalize("NFC", candidate).casefold().strip()) in taken:
             count += 1
             candidate = f"{name} {count}"
         taken.add(key)

@@ -15,7 +15,7 @@ from leveller.align import aligned, alignment_notes, find_alignment
 from leveller.attribute import Activity, attribute
 from leveller.audio import parts_of
 from leveller.automation import NO_ROWS, read_automation, row_keys, write_automation
-from leveller.cut import Finished, finish
+from leveller.cut import Finished, deliver_cut, open_cut
 from leveller.edits import differences, is_speech_table, keep_file, with_speech_table, without_effect
 from leveller.errors import SettingsError
 from leveller.fingerprint import fingerprint
@@ -28,6 +28,7 @@ from leveller.names import safe_name
 from leveller.plan import GainPlan, make_plan
 from leveller.plan.corrections import check_corrections, overruled
 from leveller.render.mix import LEVELS, Mix, render
+from leveller.report.finished import write_finished
 from leveller.report.page import write_page
 from leveller.report.tables import write_tables
 from leveller.report.text import summary_blocks
@@ -185,6 +186,50 @@ def render_again(
         result = _delivered(folder, session, measurements, activity, read.plan, stems, mark, on_progress)
         keep_file(folder, automation)
     return result
+
+
+def finish(
+    paths: Sequence[Path | str] | Path | str,
+    *,
+    out: Path | str | None = None,
+    replace: bool = False,
+    delivery: str | None = None,
+    settings: Mapping[str, Any] | None = None,
+    accept_short: bool = False,
+    on_progress: OnProgress = no_progress,
+) -> Finished:
+    """Bring a cut to its delivery: write mix.wav, mix.csv and report.json.
+
+    Parameters
+    ----------
+    paths : path or sequence of paths
+        One file, several that are summed, or a folder whose audio files are summed.
+    out : path, optional
+        Folder to write, `./levelled/<title> finished` by default; it appears whole or not at all.
+    replace : bool
+        Allow an existing folder to be replaced.
+    delivery : str, optional
+        Name of a delivery; by default `podcast-stereo` or `podcast-mono`, after the files' channels.
+    settings : mapping, optional
+        Settings of the limiter, such as `{"limiter.release_s": 0.2}`.
+    accept_short : bool
+        Take what is there of a file that is shorter than its header says.
+    on_progress : callable (stage, done, total), optional
+
+    Raises
+    ------
+    LevellerError
+        With one line that says what, where and the way out; nothing is written then.
+    """
+    given = [paths] if isinstance(paths, str | Path) else paths
+    session = open_cut([Path(path) for path in given], delivery=delivery, settings=settings, accept_short=accept_short)
+    wanted = Path(out) if out is not None else DEFAULT_OUT / f"{safe_name(session.title)} finished"
+    needed = session.frames * session.mix_channels * (4 + 3) + MARGIN_BYTES
+    folder = OutputFolder(wanted, replace, needed_bytes=needed, sources=source_paths(session))
+    with folder:
+        finished = deliver_cut(session, folder, on_progress)
+        write_finished(folder, finished)
+    return finished
 
 
 def _opened(

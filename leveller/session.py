@@ -31,6 +31,7 @@ from leveller.takes import session_reference
 __all__ = ["AUDIO_SUFFIXES", "Correction", "Session", "SetAside", "Skip", "Track", "open_session", "safe_name"]
 
 SESSION_FILE = "session.toml"
+LONGEST_S = 24 * 3600  # our choice: memory grows by about 0.5 MB a minute and track; no conversation lasts a day
 AUDIO_SUFFIXES = frozenset({
     ".wav", ".wave", ".bwf", ".rf64", ".w64", ".aif", ".aiff", ".aifc", ".caf", ".au", ".snd", ".flac", ".ogg", ".oga",
     ".opus", ".mp3",
@@ -125,6 +126,7 @@ def open_session(
         assignments or {}, where="--set ")
     chosen = chosen_delivery(delivery, said)
     drafts = drafts_of(files, accept_short, notes)
+    _check_length(drafts)
     rate_hz = said.sample_rate or _common_rate(drafts)
     tracks, set_aside = _without_duplicates(_tracks(drafts, rate_hz), rate_hz)
     frames = max(track.offset_frames + track.frames for track in tracks)
@@ -172,7 +174,7 @@ def _from_session_file(path: Path) -> tuple[str, SessionFile, list[SourceFile], 
     folder = path.parent
     if not said.tracks:
         return _folder_title(folder), said, _all_of(folder), []
-    beside = _audio_files(folder)
+    beside = audio_files(folder)
     sources = []
     for entry in said.tracks:
         file = folder / entry.file
@@ -190,7 +192,7 @@ def _folder_title(folder: Path) -> str:
     return folder.resolve().name or "session"
 
 
-def _audio_files(folder: Path) -> list[Path]:
+def audio_files(folder: Path) -> list[Path]:
     """The audio files directly in a folder, by name."""
     try:
         names = [path for path in folder.iterdir() if path.is_file()]
@@ -202,7 +204,7 @@ def _audio_files(folder: Path) -> list[Path]:
 
 def _all_of(folder: Path) -> list[SourceFile]:
     """Every audio file of a folder, or InputError where there is none."""
-    files = _audio_files(folder)
+    files = audio_files(folder)
     if not files:
         raise InputError(f"{folder}: no audio files directly in this folder (expected .wav, .flac, .mp3 and the like)")
     return [SourceFile(path, TrackEntry(path.name)) for path in files]
@@ -219,6 +221,15 @@ def chosen_delivery(name: str | None, said: SessionFile) -> Delivery:
     changes = {"target_lufs": said.target_lufs, "ceiling_dbtp": said.ceiling_dbtp}
     given: dict[str, Any] = {key: value for key, value in changes.items() if value is not None}
     return dataclasses.replace(base, **given, source=said.where_of(next(iter(given)))) if given else base
+
+
+def _check_length(drafts: list[Draft]) -> None:
+    """Refuse a session that no memory was meant for, before any of it is worked on."""
+    for draft in drafts:
+        end_s = float(draft.take.offset_s) + draft.take.facts.frames / draft.take.facts.rate_hz
+        if end_s > LONGEST_S:
+            raise InputError(f"{draft.take.path}: ends {end_s / 3600:.1f} h after the session's start, expected at most "
+                             f"{LONGEST_S // 3600} h. Cut the recording into sessions, or check its offset_s")
 
 
 def _common_rate(drafts: list[Draft]) -> int:

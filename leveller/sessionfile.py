@@ -12,7 +12,7 @@ from __future__ import annotations
 import csv
 import io
 import tomllib
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, TypeVar
@@ -122,6 +122,8 @@ def read_session_file(path: Path, *, known: tuple[str, ...] = SESSION_KEYS) -> S
         data = tomllib.loads(_text(path, SettingsError))
     except tomllib.TOMLDecodeError as error:
         raise SettingsError(f"{where}: not valid TOML: {error}") from None
+    except (ValueError, RecursionError) as error:  # a number of thousands of digits; lists within lists
+        raise SettingsError(f"{where}: cannot be understood: {error}") from None
     _known(data, known, where)
     settings = tuple(
         (f"{stage}.{key}", value) for stage in STAGES if stage in data
@@ -150,10 +152,10 @@ def read_corrections(path: Path) -> tuple[Correction, ...]:
     header = text.split("\n", 1)[0]
     delimiter = max(";\t,", key=header.count)
     rows = csv.reader(io.StringIO(text, newline=""), delimiter=delimiter)
-    names = [cell.strip() for cell in next(rows, [])]
+    names = [cell.strip() for cell in next(_csv_rows(rows, path), [])]
     _check_header(names, path)
     out = []
-    for row in rows:
+    for row in _csv_rows(rows, path):
         where = f"{path.name}, line {rows.line_num}"
         if not any(cell.strip() for cell in row):
             continue
@@ -161,6 +163,14 @@ def read_corrections(path: Path) -> tuple[Correction, ...]:
             raise AutomationError(f"{where}: {len(row)} cells, but the header has {len(names)}")
         out.append(_csv_correction(dict(zip(names, row, strict=True)), delimiter, where))
     return tuple(out)
+
+
+def _csv_rows(rows: Any, path: Path) -> Iterator[list[str]]:
+    """The rows of a csv.reader; what it cannot read is an AutomationError."""
+    try:
+        yield from rows
+    except csv.Error as error:
+        raise AutomationError(f"{path.name}, line {rows.line_num}: not readable as CSV ({error})") from None
 
 
 def _text(path: Path, kind: type[LevellerError]) -> str:

@@ -148,7 +148,7 @@ def _checked(key: str, value: Any, spec: dataclasses.Field[Any], where: str) -> 
                 f"({meta['unit']})")
     try:
         number = float(value)
-    except (TypeError, ValueError):
+    except (TypeError, ValueError, OverflowError):
         raise SettingsError(f"{where}{key} = {value!r}: {expected}") from None
     if isinstance(value, bool) or not meta["low"] <= number <= meta["high"]:
         raise SettingsError(f"{where}{key} = {value!r}: {expected}")

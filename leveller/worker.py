@@ -25,6 +25,7 @@ from leveller.season import Episode
 
 MOST_TRIES = 2  # a worker that is lost takes its episode along once, not twice
 EDITED_S = 2.0  # a table this much younger than the report was saved by somebody
+ALIGNED = " aligned"  # what `process --align` adds to a fingerprint: more than was asked for here, not less
 TABLES = ("automation.csv", "speech.csv", "corrections.csv")
 LOST = (f"its worker was lost {MOST_TRIES} times (killed, or out of memory). Try it alone with --jobs 1, or on a "
         "computer with more memory")
@@ -124,7 +125,7 @@ def _kept(task: Task, folder: Path, said: Mapping[str, Any]) -> str:
     if not said.get("fingerprint") or _edited(folder):
         return EDITED
     sources = task.episode.sources
-    if said["fingerprint"] != fingerprint(sources, **task.options):
+    if said["fingerprint"].removesuffix(ALIGNED) != fingerprint(sources, **task.options):
         return ""
     files = source_files(sources)
     if not same_sources(files, folder, said.get("sources", ())):

@@ -205,7 +205,8 @@ def test_unchanged_episodes_are_left_alone(season: Path, tmp_path: Path, in_proc
     report = batch(season, out=out, jobs=1)
     assert outcomes(report) == {"ep 1": "unchanged", "ep 2": "unchanged"}
     assert report.exit_code == 0
-    assert {e.episode: e.took_s for e in report.episodes} == {"ep 1": took["ep 1"], "ep 2": took["ep 2"]}
+    assert {e.episode: e.took_s for e in report.episodes} == pytest.approx(
+        {"ep 1": took["ep 1"], "ep 2": took["ep 2"]}, abs=0.051)  # as season.json rounds it
     assert took["ep 1"] is not None
     (season / "ep 1" / "session.toml").write_text('delivery = "r128"\n')
     samples, rate = sf.read(season / "ep 2" / "seat 1.wav")

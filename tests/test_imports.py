@@ -23,8 +23,6 @@ ORDER = (  # the design: each room may import those before it (and its own modul
     "batch", "console", "cli", "__main__")
 OWNERS = {  # outside library: the modules that may import it
     "soundfile": {"audio"}, "soxr": {"audio"}, "webrtcvad": {"measure.voice"}, "rich": {"console"}, "typer": {"cli"}}
-BACKWARDS = {  # known, to be mended
-    "cut": pytest.mark.xfail(strict=True, reason="finish imports report.finished inside, which imports cut")}
 LIGHT = ("numpy", "scipy", "soundfile", "soxr", "webrtcvad", "rich", "typer")  # what `import leveller` must not load
 
 
@@ -93,7 +91,7 @@ def test_every_module_has_its_place() -> None:
 
 
 @pytest.mark.parametrize("module", [
-    pytest.param(name, marks=BACKWARDS.get(name, ())) for name in modules() if name])
+    name for name in modules() if name])
 def test_imports_point_one_way(module: str) -> None:
     """A module imports only what stands before it; also inside functions."""
     backwards = [f"line {one.line}: {one.of}" for one in inner_imports() if one.by == module

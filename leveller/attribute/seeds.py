@@ -45,7 +45,7 @@ def first_labels(m: Measurements, audible_db: npt.NDArray[np.float32], programme
     """
     level_db = level_to_db(m.levels).mean(axis=2)
     by_arrival = _by_arrival(m, level_db, audible_db, programme)
-    if len(np.unique(by_arrival[by_arrival >= 0])) >= min(2, m.levels.shape[1]):
+    if (by_arrival != NOBODY).any():
         return by_arrival
     return _by_level(level_db, audible_db, programme)
 

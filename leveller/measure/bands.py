@@ -2,8 +2,8 @@
 
 Everything that decides works at 16 kHz on 10 ms hops: a Hann window of 20 ms round each hop, 14 bands from 180 to
 7000 Hz, about a third-octave to half-octave wide (our choice), averaged over three hops, because the power of a single
-window scatters. K-weighted power and rumble stay as fast as the hop. The periodic Hann window leaks DC into the first
-two bins only (0 and 50 Hz), which nothing here but the K-weighted power uses, and there they weigh next to nothing.
+window scatters. K-weighted power and rumble stay as fast as the hop. DC is taken out
+of each window first (its mean under the window), since the window would leak it into the line at 50 Hz.
 
 K-weighted power is the same spectrum times |H(f)|^2 of ITU-R BS.1770-5; it misses what lies over 8 kHz, which for
 speech is a small part. It serves to compare own speech hop by hop; the delivered mix is measured at full rate. Ride
@@ -44,6 +44,7 @@ class BandMeter:
         self._pieces = Pieces(_PIECE_HOPS * HOP, 1, before=margin, after=margin)
         ramp = np.arange(WINDOW) / WINDOW
         self._window = (0.5 - 0.5 * np.cos(2 * np.pi * ramp)).astype(np.float32)
+        self._mean = self._window / self._window.sum()
         frequencies = np.arange(WINDOW // 2 + 1) * ANALYSIS_HZ / WINDOW
         self._starts = np.searchsorted(frequencies, EDGES_HZ)
         self._rumble = np.searchsorted(frequencies, RUMBLE_HZ)
@@ -66,7 +67,8 @@ class BandMeter:
         """One second's levels."""
         import scipy.fft
 
-        windows = np.lib.stride_tricks.sliding_window_view(samples, WINDOW)[::HOP] * self._window
+        windows = np.lib.stride_tricks.sliding_window_view(samples, WINDOW)[::HOP]
+        windows = (windows - (windows @ self._mean)[:, None]) * self._window
         spectrum = scipy.fft.rfft(windows, axis=1)
         power = np.square(spectrum.real)
         power += np.square(spectrum.imag)

@@ -156,8 +156,10 @@ def spread_places(first: Onsets, second: Onsets, line: Line) -> list[int]:
     for by in (-1, 0, 1):  # an onset falls into one hop or the next
         shared[inside] += (np.maximum(first[inside], 0) * np.maximum(second[there[inside] + by], 0)).sum(axis=1)
     length = round(PLACE_S * HOPS_PER_S)
-    sums = np.concatenate([[0.0], np.cumsum(shared)])
-    worth = sums[length:] - sums[:-length] if len(sums) > length else np.zeros(0)
+    worth = np.concatenate([[0.0], shared])
+    for half in (length // 2, length // 2):  # twice a mean of half a place: what lies in its middle counts most
+        sums = np.cumsum(worth)
+        worth = sums[half:] - sums[:-half] if len(sums) > half else np.zeros(0)
     count = max(1, min(STRETCHES, len(worth) // (2 * length)))
     chosen: list[int] = []
     for stretch in np.array_split(np.arange(len(worth)), count):
@@ -189,7 +191,7 @@ def fitted(lags: Lags) -> Fit | None:
 
 
 def _middle(kept: Lags, slope: float) -> tuple[float, float | None, int | None]:
-    """Offset, way and sign from the delays of the sides at 0; what belongs to neither counts only without any.
+    """Offset, way and sign, from the delays of both sides at 0; places of neither count only where no other is.
 
     A softer sound is taken for the direct one only as long as the way that follows is one.
     """
@@ -269,8 +271,8 @@ def _read(
     at_s = np.array(places, dtype=np.float64) * HOP_S
     there_s = at_s + offset_s + drift * at_s
     middle_s = at_s + PLACE_S / 2
-    near, far = _spectra(first.track, rate_hz, at_s, 0.0), _spectra(second.track, rate_hz, there_s, drift)
-    rows = [_correlation(a, b) for a, b in zip(near, far, strict=True)]
+    near, far = spectra_at(first.track, rate_hz, at_s, 0.0), spectra_at(second.track, rate_hz, there_s, drift)
+    rows = [correlation(a, b) for a, b in zip(near, far, strict=True)]
     around = np.stack(rows) if rows else np.zeros((0, 1), np.float32)
     return Lags(middle_s, offset_s + drift * middle_s, around, np.array(sides, np.int8))
 
@@ -284,7 +286,7 @@ def _side(first: Heard, second: Heard, others: Sequence[Heard], at_s: float, lin
     return 1 if over[0] > over[1] else -1
 
 
-def _spectra(track: Track, rate_hz: int, at_s: Floats, drift: float) -> Iterator[npt.NDArray[np.complex128]]:
+def spectra_at(track: Track, rate_hz: int, at_s: Floats, drift: float) -> Iterator[npt.NDArray[np.complex128]]:
     """Spectra of the windows of each place, shape=(windows, lines) in `BAND_HZ`, moved to exactly where they belong."""
     source_hz, frames = clock_rate_hz(track), round(WINDOW_S * track.source_rate_hz)
     steps = np.arange(round((PLACE_S - WINDOW_S) / STEP_S) + 1) * STEP_S * (1 + drift)
@@ -306,7 +308,7 @@ def _spectra(track: Track, rate_hz: int, at_s: Floats, drift: float) -> Iterator
         yield out
 
 
-def _correlation(near: npt.NDArray[np.complex128], far: npt.NDArray[np.complex128]) -> npt.NDArray[np.float32]:
+def correlation(near: npt.NDArray[np.complex128], far: npt.NDArray[np.complex128]) -> npt.NDArray[np.float32]:
     """Smoothed coherence transform at lags within `REACH_S`, 1 for a pure delay."""
     cross = np.sum(far * near.conj(), axis=0)
     power = np.sum(np.abs(near) ** 2, axis=0) * np.sum(np.abs(far) ** 2, axis=0)

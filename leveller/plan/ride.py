@@ -43,7 +43,7 @@ def ride_nodes_db(level_db: Grid, counted: Bools, still: Bools, *, settings: set
     wanted = -STRENGTH * _smoothed(power, weight, settings.window_s)
     wanted = _within_rate(np.clip(wanted, -settings.range_db, settings.range_db), settings.rate_db_s * CELL_S)
     at = np.clip((np.arange(hops + 1) - _CELL / 2) / _CELL, 0, len(wanted) - 1)
-    return np.asarray(_standing(np.interp(at, np.arange(len(wanted)), wanted), still), np.float32)
+    return np.asarray(_standing(np.interp(at, np.arange(len(wanted)), wanted), still, settings.rate_db_s), np.float32)
 
 
 def _cells(level_db: Grid, counted: Bools) -> tuple[Grid, Grid]:
@@ -84,27 +84,15 @@ def _within_rate(wanted: Grid, step_db: float) -> Grid:
     return np.asarray((upper + lower) / 2, np.float32)
 
 
-def _standing(curve: npt.NDArray[np.floating], still: Bools) -> npt.NDArray[np.floating]:
-    """The curve with its movement during `still` moved to the stretch before the voice falls silent."""
-    moves = np.diff(curve)
+def _standing(curve: npt.NDArray[np.floating], still: Bools, rate_db_s: float) -> npt.NDArray[np.floating]:
+    """The curve held during `still`; what it moved meanwhile is caught up afterwards, within the rate."""
     if not still.any():
         return curve
-    ends = np.flatnonzero(np.diff(np.concatenate([still.astype(np.int8), [0]])) == -1)
-    starts = np.flatnonzero(np.diff(np.concatenate([[0], still.astype(np.int8)])) == 1)
-    total = np.concatenate([[0], np.cumsum(moves)])
-    for first, last in zip(starts.tolist(), ends.tolist(), strict=True):
-        owed = total[last + 1] - total[first]
-        moves[first : last + 1] = 0
-        room = _movable(still, last + 1)
-        if room > 0:
-            moves[last + 1 : last + 1 + room] += owed / room
-        elif first > 0:
-            room = min(first, HOPS_PER_S)
-            moves[first - room : first] += owed / room
-    return np.concatenate([curve[:1], curve[0] + np.cumsum(moves)])
-
-
-def _movable(still: Bools, at: int) -> int:
-    """Hops from here on, at most one second, that are not still."""
-    part = still[at : at + HOPS_PER_S]
-    return int(part.argmax()) if part.any() else len(part)
+    step = rate_db_s / HOPS_PER_S
+    now = float(curve[0])
+    out = [now]
+    for wanted, held in zip(curve[1:].tolist(), still.tolist(), strict=True):
+        if not held and now != wanted:
+            now = min(max(wanted, now - step), now + step)
+        out.append(now)
+    return np.array(out)

@@ -22,8 +22,7 @@ from leveller.report.quantities import shown
 from leveller.report.season import FAILED, KEPT_LU, WAITING, KeptLevel, Outcome, SeasonReport, SeasonVoice
 from leveller.report.text import visible
 
-COLUMNS = ("Episode", "Outcome", "Delivery", "Length", "Loudness, LUFS", "Range, LU", "True peak, dBTP", "To listen to",
-           "Took", "Out of line")
+COLUMNS = ("Episode", "Outcome", "Delivery", "Length", "LUFS", "Range", "dBTP", "To listen", "Took", "Out of line")
 WORD_COLUMNS, CLASS_WORDS = ("Outcome", "Delivery", "Out of line"), ' class="words"'
 BEAD_STEP, LEFT, TOP, HEIGHT, SPAN_LU = 22, 46, 14, 120, 3.0  # of the drawing, in its own units; the scale's half
 BEAD_SIZE = 5
@@ -94,9 +93,9 @@ def out_of_line(report: SeasonReport) -> list[tuple[str, str]]:
 
 def _episodes(report: SeasonReport) -> str:
     """The table of episodes."""
-    heads = "".join(f'<th scope="col"{CLASS_WORDS if column in WORD_COLUMNS else ""}>{column}</th>' for column in COLUMNS)
+    heads = "".join(f'<th scope="col"{CLASS_WORDS if name in WORD_COLUMNS else ""}>{name}</th>' for name in COLUMNS)
     rows = "".join(_episode_row(episode) for episode in report.episodes)
-    table = (f'<table>\n<caption>In the season\'s order; a diamond marks what stands out</caption>\n'
+    table = (f'<table>\n<caption>In the season\'s order; range in LU; a diamond marks what stands out</caption>\n'
              f"<thead><tr>{heads}</tr></thead>\n<tbody>\n{rows}</tbody>\n</table>\n")
     return _section("Episodes", "episodes", _wide(table, "Table of episodes"))
 

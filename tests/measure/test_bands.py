@@ -71,8 +71,6 @@ def test_dc_is_no_speech() -> None:
     assert found[:, :BANDS].max() < -66
 
 
-@pytest.mark.xfail(
-    strict=True, reason="a periodic Hann window leaks DC into the line at 50 Hz, which counts as rumble and K-weighted")
 @pytest.mark.parametrize("column", [K, RUMBLE])
 def test_dc_is_no_rumble(column: int) -> None:
     """A constant of half full scale is taken neither for thumps and hum nor for loudness: K-weighting blocks DC."""

@@ -158,7 +158,6 @@ def test_a_very_long_session_keeps_to_the_most_rows(case: Case, monkeypatch: pyt
     assert sum(len(gain.hop) for gain in plan.tracks) <= 60
 
 
-@pytest.mark.xfail(strict=True, reason="DC counts as loudness: a periodic Hann window leaks it into the line at 50 Hz")
 def test_dc_does_not_move_the_trim(case: Case, tmp_path: Path) -> None:
     """A constant of a tenth of full scale on one track changes its trim by less than half a decibel."""
     mics = case.spoken.mics.copy()

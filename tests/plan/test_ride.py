@@ -81,7 +81,6 @@ def test_it_stands_still_in_an_open_pause() -> None:
     assert found[-1] == pytest.approx(ride_nodes_db(level, counted, NEVER, settings=how)[-1], abs=0.01)
 
 
-@pytest.mark.xfail(strict=True, reason="all that is owed after a pause is paid within one second, at 2 to 3 dB/s here")
 @pytest.mark.parametrize("window_s", [4.0, 40.0])
 def test_what_a_pause_holds_back_is_made_up_within_the_rate(window_s: float) -> None:
     """What the gain owes after an open pause is paid no faster than the rate either."""
