@@ -129,7 +129,8 @@ def aligned(session: Session, found: Sequence[Alignment]) -> Session:
     if zero:
         notes.append(f"the session begins {zero / session.rate_hz:.3f} s earlier, with the earliest track; times in "
                      "session.toml and in corrections count from there")
-    time_reference = None if session.time_reference is None else session.time_reference - zero
+    day = 86400 * session.rate_hz
+    time_reference = None if session.time_reference is None else (session.time_reference - zero) % day
     return dataclasses.replace(
         session, tracks=tuple(tracks), frames=max(t.offset_frames + t.frames for t in tracks),
         notes=(*session.notes, *notes), time_reference=time_reference)
@@ -186,12 +187,16 @@ def _compared(
     session: Session, heard: dict[int, Heard], base: _Clock, k: int, i: int, same_file: bool
 ) -> _Clock | None:
     """Track i against the reference by way of track k, or None where they share no sound."""
-    line: Line | None = Line(0.0, 0.0, ENOUGH_SCORE)
-    if not same_file:
-        line = common_line(heard[k].onsets, heard[i].onsets)
-        line = line if line.score >= ENOUGH_SCORE else common_clap(heard[k], heard[i], session.rate_hz)
     others = [heard[j] for j in heard if j not in (i, k)]
-    fit = None if line is None else clock_of(heard[k], heard[i], line, session.rate_hz, others=others)
+
+    def fit_of(line: Line | None) -> Fit | None:
+        return None if line is None else clock_of(heard[k], heard[i], line, session.rate_hz, others=others)
+
+    line: Line | None = Line(0.0, 0.0, ENOUGH_SCORE) if same_file else common_line(heard[k].onsets, heard[i].onsets)
+    fit = fit_of(line) if line is not None and line.score >= ENOUGH_SCORE else None
+    if (fit is None or not _sure(fit)) and not same_file:
+        line = common_clap(heard[k], heard[i], session.rate_hz)
+        fit = fit_of(line)
     sure = fit is not None and _sure(fit)
     polarity = fit.sign * base.polarity if fit is not None and sure and fit.sign and base.polarity else None
     if same_file:
@@ -215,9 +220,10 @@ def _sure(fit: Fit) -> bool:
 
 def _without_way(fit: Fit) -> float:
     """The offset; where only one track hears the other's voice, the usual way is taken off what it hears late."""
-    if fit.way_s is not None or 0 in fit.sides or len(fit.near.at_s) < LEAST_PLACES:  # a clap is nobody's voice
+    voices = fit.sides - {0}
+    if fit.way_s is not None or len(voices) != 1 or len(fit.near.at_s) < LEAST_PLACES:  # a clap is nobody's voice
         return fit.offset_s
-    side = max(fit.sides)
+    side = max(voices)
     return fit.offset_s - side * min(USUAL_WAY_S, max(side * fit.offset_s, 0.0))
 
 

@@ -59,6 +59,7 @@ Kind = Literal["float32", "pcm24", "pcm16"]
 RATES_HZ = (8000, 192000)
 PREVIEW_PIECES = 60  # of 1 s each; enough for levels and likeness, a sixtieth of an hour's reading
 HEADER_BYTES = 1 << 20  # room for all chunks but the audio (cue points, text) when the size of a file is judged
+MOST_CHANNELS = 128  # our choice: twice the tracks of a large session; bounds what a header can make us hold
 READ_QUALITY = "HQ"
 
 
@@ -89,6 +90,8 @@ def probe(path: Path, *, accept_short: bool = False) -> FileFacts:
     if there <= 0:
         raise InputError(f"{path}: holds no audio (0 frames by its header, {path.stat().st_size} bytes on the disk). "
                          "Leave it out, or have the header repaired if the recorder lost power")
+    if facts[1] > MOST_CHANNELS:
+        raise InputError(f"{path}: {facts[1]} channels, expected at most {MOST_CHANNELS}. Split it first")
     is_float = facts[2] in ("FLOAT", "DOUBLE")
     return FileFacts(facts[0], there, facts[1], facts[2], is_float, facts[3], header_frames)
 
@@ -331,15 +334,25 @@ def _open_parts(parts: Sequence[Part]) -> Any:
 
 def _open(path: Path) -> Any:
     """An open SoundFile, or InputError that says why not."""
-    if not path.is_file():
-        raise InputError(f"{path}: no such file")
-    if not path.stat().st_size:
-        raise InputError(f"{path}: empty file (0 bytes). Leave it out or copy it again")
+    _check_there(path)
     try:
         return soundfile.SoundFile(_native(path))
     except (soundfile.LibsndfileError, OSError) as error:
         raise InputError(
             f"{path}: not readable as audio ({_detail(error)}). Convert it to WAV or leave it out") from error
+
+
+def _check_there(path: Path) -> None:
+    """The file is one, is not empty and may be read."""
+    try:
+        if not path.is_file():
+            raise InputError(f"{path}: no such file")
+        if not path.stat().st_size:
+            raise InputError(f"{path}: empty file (0 bytes). Leave it out or copy it again")
+        with open(path, "rb"):
+            pass
+    except OSError as error:  # no right to it, a name too long
+        raise InputError(f"{path}: cannot be read ({error.strerror})") from error
 
 
 def _detail(error: Exception) -> str:

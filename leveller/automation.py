@@ -28,7 +28,7 @@ COLUMNS = ("time_s", "time", "sample", "track", "gain_db", *PART_COLUMNS, "state
 PARTS_SLACK_CDB = 3  # hundredths of a dB by which the parts may miss the gain
 OFF_GRID_HOPS = 1e-4
 OFF_GRID_CDB = 1e-6
-_FORMULA = ("=", "+", "-", "@", "\t", "\r")
+_FORMULA = ("=", "+", "-", "@", "\t", "\r", "\uff1d", "\uff0b", "\uff0d", "\uff20")  # the wide ones run in East Asia
 _EDIT = CAUSES.index("edit")
 NO_ROWS = np.empty(0, np.int64)  # for `written`: nothing is known of the file before it was edited
 
@@ -112,21 +112,24 @@ def read_automation(path: Path, session: Session, *, hops: int, written: Ints) -
     return ReadBack(GainPlan(hops, tuple(out), ranges), _notes(rows, edited, path.name), edited)
 
 
+def harmless(text: str) -> str:
+    """The text with a quote before it where a spreadsheet would run it, or could take that quote for ours."""
+    return "'" + text if text.lstrip("' ").startswith(_FORMULA) else text
+
+
 def text_cell(text: str) -> str:
     """A text cell that no spreadsheet runs as a formula, quoted where RFC 4180 asks for it."""
-    if text.startswith(_FORMULA):
-        text = "'" + text
+    text = harmless(text)
     return '"' + text.replace('"', '""') + '"' if any(c in text for c in ',;"\r\n\'') else text
 
 
 def track_index(cell: str, session: Session, where: str) -> int:
     """Which track a cell names, also where our own tables have quoted the name; raises AutomationError."""
     names = [track.name for track in session.tracks]
-    name = cell[1:] if cell.startswith("'") and cell not in names else cell
-    stripped = [other.strip() for other in names]  # cells lose the spaces round them
-    if name not in stripped:
-        raise AutomationError(f"{where}: unknown track {cell!r}{nearest(cell, names)}; known: {', '.join(names)}")
-    return stripped.index(name)
+    for known in ([harmless(name).strip() for name in names], [name.strip() for name in names]):
+        if cell in known:  # cells lose the spaces round them
+            return known.index(cell)
+    raise AutomationError(f"{where}: unknown track {cell!r}{nearest(cell, names)}; known: {', '.join(names)}")
 
 
 def _rows(path: Path, session: Session, hops: int) -> list[_Row]:

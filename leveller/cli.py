@@ -32,8 +32,8 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]})
 
 Sources = Annotated[list[Path], typer.Argument(
-    metavar="SESSION...", help="A folder, a session.toml, or the audio files of one conversation.", show_default=False)]
-Files = Annotated[list[Path], typer.Argument(metavar="FILE...", help="Audio files of any kind.", show_default=False)]
+    readable=False, metavar="SESSION...", help="A folder, a session.toml, or the audio files of one conversation.", show_default=False)]
+Files = Annotated[list[Path], typer.Argument(readable=False, metavar="FILE...", help="Audio files of any kind.", show_default=False)]
 Out = Annotated[Path | None, typer.Option(
     metavar="DIR", help="Folder to write; ./levelled/TITLE by default. It appears whole or not at all.")]
 Replace = Annotated[bool, typer.Option("--replace", help="Replace DIR where it exists.")]
@@ -43,7 +43,8 @@ Stems = Annotated[str, typer.Option(
     metavar="LEVEL", help="before-limiter (32-bit float) or limited (24 bit; they add up to mix.wav).")]
 Assignments = Annotated[list[str] | None, typer.Option(
     "--set", metavar="KEY=VALUE", help="A setting, such as expander.range_db=18; may be given again.")]
-Corrections = Annotated[Path | None, typer.Option(metavar="FILE", help="A corrections.csv, or an edited speech.csv.")]
+Corrections = Annotated[Path | None, typer.Option(
+    readable=False, metavar="FILE", help="A corrections.csv, or an edited speech.csv.")]
 AcceptShort = Annotated[bool, typer.Option(
     "--accept-short", help="Take what is there of a file that is shorter than its header says.")]
 Align = Annotated[bool, typer.Option(
@@ -91,7 +92,7 @@ def process(
 def render(
     sources: Sources,
     automation: Annotated[Path, typer.Option(
-        metavar="FILE", help="An automation.csv, as written or edited; its gains are what is heard.",
+        readable=False, metavar="FILE", help="An automation.csv, as written or edited; its gains are what is heard.",
         show_default=False)],
     out: Out = None, replace: Replace = False, delivery: DeliveryName = None, stems: Stems = "before-limiter",
     assignments: Assignments = None, corrections: Corrections = None, accept_short: AcceptShort = False,
@@ -113,7 +114,7 @@ def render(
 @app.command()
 def finish(
     files: Annotated[list[Path], typer.Argument(
-        metavar="FILE...", help="The edited programme, or its stems and music: they are summed as they are.",
+        readable=False, metavar="FILE...", help="The edited programme, or its stems and music: they are summed as they are.",
         show_default=False)],
     out: Annotated[Path | None, typer.Option(
         metavar="DIR", help="Folder to write; './levelled/TITLE finished' by default.")] = None,

@@ -24,7 +24,7 @@ from leveller.session import chosen_delivery, located
 from leveller.settings import Settings
 
 SOURCES_FILE = ".sources.json"
-LIBRARIES = ("numpy", "scipy", "soundfile", "soxr")  # shape the bytes
+LIBRARIES = ("numpy", "scipy", "soundfile", "soxr", "webrtcvad-wheels")  # shape the bytes
 
 
 @functools.cache

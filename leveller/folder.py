@@ -16,7 +16,7 @@ from collections.abc import Iterable, Iterator
 from pathlib import Path
 from types import TracebackType
 
-from leveller.errors import OutputError
+from leveller.errors import InputError, LevellerError, OutputError
 
 _active: set[Path] = set()  # work folders of this very process
 
@@ -75,6 +75,8 @@ class OutputFolder:
             self.publish()
         else:
             self.discard()
+            if isinstance(error, OSError):
+                raise self._told(error) from error
 
     def file(self, name: str) -> Path:
         """Where to write the file of that name, such as 'stems/Host.wav'; its folder is made.
@@ -130,6 +132,15 @@ class OutputFolder:
             with contextlib.suppress(OSError):
                 parent.rmdir()  # stays where something else has come into it
         self._parents = []
+
+    def _told(self, error: OSError) -> LevellerError:
+        """What the system refused in the middle of the work, in one line: to read a file, or to write this folder."""
+        file = None if error.filename is None else Path(os.fsdecode(error.filename))
+        if file is not None and not file.is_relative_to(self.work):
+            return InputError(f"{file}: cannot be read ({error.strerror})")
+        name = "" if file is None else f"{file.relative_to(self.work)}: "
+        return OutputError(
+            f"{self.path}: {name}cannot be written ({error.strerror}). Make room or choose another --out")
 
     def _check_place(self) -> None:
         """Refuse a folder that must not be touched."""

@@ -41,7 +41,7 @@ def safe_name(text: str) -> str:
 
 
 def unique_names(names: Sequence[str]) -> list[str]:
-    """The names in order; the second of equal ones gets ' 2'. Case, accents' encoding and outer blanks make no difference."""
+    """The names in order; the second of equal ones gets ' 2'. Case, outer blanks and accents' encoding do not count."""
     taken: set[str] = set()
     out = []
     for name in names:

@@ -25,6 +25,7 @@ from leveller.errors import InputError, OutputError
 UNKNOWN_SIZE = 0xFFFFFFFF  # EBU Tech 3306: the size stands in ds64; in plain RIFF it marks a stream of unknown length
 RIFF_LIMIT = 0xFFFFFFFF
 BLOCK_BYTES = 1 << 20
+MOST_CHUNKS = 10_000  # our choice: files have a dozen; a file of nothing but empty chunks is not walked for hours
 
 Samples = npt.NDArray[np.float32]
 
@@ -166,7 +167,9 @@ def _walk(file: BinaryIO) -> dict[bytes, tuple[int, int]] | None:
     length = file.seek(0, os.SEEK_END)
     chunks: dict[bytes, tuple[int, int]] = {}
     at, data_size = 12, None
-    while at + 8 <= length:
+    for _ in range(MOST_CHUNKS):
+        if at + 8 > length:
+            break
         file.seek(at)
         kind, size = struct.unpack(order + "4sI", file.read(8))
         if not all(32 <= byte < 127 for byte in kind):

@@ -157,8 +157,13 @@ def _located(sources: list[Path]) -> tuple[str, SessionFile, list[SourceFile], l
     first = sources[0]
     if len(sources) == 1 and first.suffix.lower() == ".toml":
         return _from_session_file(first)
-    if len(sources) == 1 and first.is_dir():
-        if (first / SESSION_FILE).is_file():
+    try:
+        is_folder = first.is_dir()
+        has_file = is_folder and (first / SESSION_FILE).is_file()
+    except OSError as error:
+        raise InputError(f"{first}: cannot be read ({error.strerror})") from error
+    if len(sources) == 1 and is_folder:
+        if has_file:
             return _from_session_file(first / SESSION_FILE)
         return _folder_title(first), SessionFile(), _all_of(first), []
     for source in sources:
@@ -228,8 +233,8 @@ def _check_length(drafts: list[Draft]) -> None:
     for draft in drafts:
         end_s = float(draft.take.offset_s) + draft.take.facts.frames / draft.take.facts.rate_hz
         if end_s > LONGEST_S:
-            raise InputError(f"{draft.take.path}: ends {end_s / 3600:.1f} h after the session's start, expected at most "
-                             f"{LONGEST_S // 3600} h. Cut the recording into sessions, or check its offset_s")
+            raise InputError(f"{draft.take.path}: ends {end_s / 3600:.1f} h after the session's start, expected at "
+                             f"most {LONGEST_S // 3600} h. Cut the recording into sessions, or check its offset_s")
 
 
 def _common_rate(drafts: list[Draft]) -> int:

@@ -122,8 +122,8 @@ def read_session_file(path: Path, *, known: tuple[str, ...] = SESSION_KEYS) -> S
         data = tomllib.loads(_text(path, SettingsError))
     except tomllib.TOMLDecodeError as error:
         raise SettingsError(f"{where}: not valid TOML: {error}") from None
-    except (ValueError, RecursionError) as error:  # a number of thousands of digits; lists within lists
-        raise SettingsError(f"{where}: cannot be understood: {error}") from None
+    except (ValueError, RecursionError):
+        raise SettingsError(f"{where}: a number has thousands of digits, or lists lie too deep in each other") from None
     _known(data, known, where)
     settings = tuple(
         (f"{stage}.{key}", value) for stage in STAGES if stage in data

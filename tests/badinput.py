@@ -1,6 +1,6 @@
 """Inputs that are refused, or repaired and said: each prepares the current folder, where `talk/` holds a short session.
 
-The names are those of the tables in docs/errors.md. `talk/` has Ana.wav and Odo.wav, 6 s at 16 kHz and 24 bit. Where a
+The names are those of the tables in docs/errors.md. `talk/` has Ana.wav and Odo.wav, 20 s at 16 kHz and 24 bit. Where a
 row needs a system that refuses (a disk without room), the builder patches the one call that asks the system.
 """
 
@@ -17,6 +17,7 @@ import pytest
 import soundfile
 
 RATE_HZ = 16_000
+LENGTH_S = 20
 WEEK_S = 7 * 24 * 3600
 TALK = Path("talk")
 
@@ -191,9 +192,9 @@ REFUSED: dict[str, Builder] = {
     "corrections of an unknown track": corrections("track,from_s,to_s,decide\nAnna,1,2,own\n"),
     "corrections that end before they begin": corrections("track,from_s,to_s,decide\nAna,2,1,own\n"),
     "corrections with a cell without end": corrections(f'track,from_s,to_s,decide\n"{"a" * 200_000}",1,2,own\n'),
-    "automation with a gain out of range": automation("0,Ana,0", "0,Odo,0", "6,Ana,80", "6,Odo,0"),
-    "automation with a gain that is no number": automation("0,Ana,0", "0,Odo,1e999", "6,Ana,0", "6,Odo,0"),
-    "automation without a row at the end": automation("0,Ana,0", "0,Odo,0", "3,Ana,0", "6,Odo,0"),
+    "automation with a gain out of range": automation("0,Ana,0", "0,Odo,0", "20,Ana,80", "20,Odo,0"),
+    "automation with a gain that is no number": automation("0,Ana,0", "0,Odo,1e999", "20,Ana,0", "20,Odo,0"),
+    "automation without a row at the end": automation("0,Ana,0", "0,Odo,0", "3,Ana,0", "20,Odo,0"),
     "a cut with more than two channels": lambda _: save("Ana.wav", np.zeros((RATE_HZ, 3), np.float32)),
     "a cut named twice": nothing,
     "a wrong command line": nothing,
@@ -215,12 +216,12 @@ def silent_track(_: pytest.MonkeyPatch) -> None:
 
 def no_voice(_: pytest.MonkeyPatch) -> None:
     for seed, name in enumerate(("Ana.wav", "Odo.wav")):
-        save(name, (1e-3 * np.random.default_rng(seed).standard_normal(6 * RATE_HZ)).astype(np.float32))
+        save(name, (1e-3 * np.random.default_rng(seed).standard_normal(LENGTH_S * RATE_HZ)).astype(np.float32))
 
 
 def near_silent(_: pytest.MonkeyPatch) -> None:
     for seed, name in enumerate(("Ana.wav", "Odo.wav")):
-        save(name, (1e-6 * np.random.default_rng(seed).standard_normal(6 * RATE_HZ)).astype(np.float32))
+        save(name, (1e-6 * np.random.default_rng(seed).standard_normal(LENGTH_S * RATE_HZ)).astype(np.float32))
 
 
 def single(_: pytest.MonkeyPatch) -> None:
@@ -262,9 +263,11 @@ def other_length(_: pytest.MonkeyPatch) -> None:
 
 
 def many(_: pytest.MonkeyPatch) -> None:
-    noise = np.random.default_rng(3)
+    noise, few = np.random.default_rng(3), slice(3 * RATE_HZ)
+    save("Ana.wav", read()[few])
+    save("Odo.wav", read("Odo")[few])
     for n in range(1, 63):
-        save(f"{n:02d}.wav", (1e-4 * noise.standard_normal(6 * RATE_HZ)).astype(np.float32))
+        save(f"{n:02d}.wav", (1e-4 * noise.standard_normal(3 * RATE_HZ)).astype(np.float32))
 
 
 def odd_names(_: pytest.MonkeyPatch) -> None:
@@ -277,7 +280,7 @@ def formula_name(_: pytest.MonkeyPatch) -> None:
 
 
 def markup_name(_: pytest.MonkeyPatch) -> None:
-    (TALK / "Ana.wav").rename(TALK / "<script>alert(1)<" "∕script>.wav")
+    (TALK / "Ana.wav").rename(TALK / "<img src=x onerror=alert(1)>.wav")
 
 
 def equal_names(_: pytest.MonkeyPatch) -> None:

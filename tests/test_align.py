@@ -12,7 +12,8 @@ import soundfile as sf
 import soxr
 from conversations import ConversationSpec, simulate
 
-from leveller.align import Alignment, aligned, alignment_notes, find_alignment, misaligned
+from leveller import cli
+from leveller.align import LONGEST_WAY_S, Alignment, aligned, alignment_notes, find_alignment, misaligned
 from leveller.audio import open_readers
 from leveller.kept import keep_measurements, kept_measurements
 from leveller.measure import Measurements, measure
@@ -225,6 +226,32 @@ def test_process_warns_and_align_corrects(tmp_path: Path) -> None:
     right = process(folder, out=tmp_path / "right", align=True)
     assert right.session.tracks[0].offset_frames == pytest.approx(0.2 * RATE_HZ, abs=16)
     assert any(note.endswith("), put right") for note in right.session.notes)
+
+
+def test_an_aligned_session_renders_again(tmp_path: Path) -> None:
+    """The automation of an aligned run gives the same mix again, at the command line too."""
+    mics = talk()
+    folder = written(tmp_path / "in", mics[:, 0], clocked(mics[:, 1], offset_s=-2.0, ppm=300.0))
+    process(folder, out=tmp_path / "one", align=True)
+    with pytest.raises(SystemExit) as left:
+        cli.main(["render", str(folder), "--automation", str(tmp_path / "one" / "automation.csv"), "--align",
+                  "--out", str(tmp_path / "two"), "--quiet"])
+    assert left.value.code == 0
+    assert (tmp_path / "one" / "mix.wav").read_bytes() == (tmp_path / "two" / "mix.wav").read_bytes()
+
+
+def test_one_way_bleed_leaves_the_way_open(tmp_path: Path) -> None:
+    """Where only one hears the other the offset is right within the way of the sound, and that is said."""
+    made = simulate(TALK)
+    deaf = (made.own + made.noise)[:, 0]
+    session, m = opened(written(tmp_path, deaf, clocked(made.mics[:, 1], offset_s=-5.0)))
+    found = find_alignment(session, m)
+    second = of(found, "second")
+    assert second.way_s is None
+    assert second.offset_s == pytest.approx(-5.0, abs=LONGEST_WAY_S)
+    assert "within 15 ms, since only one of the two hears the other" in aligned(session, found).notes[-1]
+    in_time, measured = opened(written(tmp_path / "in time", deaf, made.mics[:, 1]))
+    assert aligned(in_time, find_alignment(in_time, measured)).tracks == in_time.tracks
 
 
 def test_polarity_is_found_and_turned(tmp_path: Path) -> None:

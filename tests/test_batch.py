@@ -35,6 +35,7 @@ COMMAND = [sys.executable, "-m", "leveller"]
 SPEC = ConversationSpec(seconds=24.0, rate_hz=16_000, people=2, gains_db=(4.0, -3.0))
 LONG_S = 300.0  # of noise: long enough to be at work when it is looked for
 PATIENCE_S = 60.0
+EPISODES = 200
 ENVIRONMENT = {**os.environ, "NO_COLOR": "1"}
 
 
@@ -354,6 +355,30 @@ def test_a_list_gives_each_episode_its_settings(season: Path, tmp_path: Path, in
     assert (one["delivery"]["name"], one["settings"]["expander.range_db"], one["stems"]) == ("a85", 8, "before-limiter")
     assert (two["delivery"]["name"], two["settings"]["expander.range_db"], two["stems"]) == ("a85", "auto", "limited")
     assert read_season(season).episodes[1].name == "ep 2"
+
+
+@pytest.mark.long
+def test_batch_itself_costs_next_to_nothing(tmp_path: Path) -> None:
+    """Beyond the processing an episode takes under 0.2 s of processor time, and the parent's memory stays flat."""
+    import resource
+
+    def used_s() -> float:
+        return sum(sum(resource.getrusage(who)[:2]) for who in (resource.RUSAGE_SELF, resource.RUSAGE_CHILDREN))
+
+    def resident_mb(_: Standing) -> None:
+        status = Path("/proc/self/status").read_text()
+        resident.append(int(re.search(r"VmRSS:\s+(\d+)", status)[1]) / 1024)  # type: ignore[index]
+
+    talk = simulate(dataclasses.replace(SPEC, seconds=10.0))
+    for n in range(EPISODES):
+        talk.write(tmp_path / "season" / f"ep {n}")
+    resident: list[float] = []
+    before_s = used_s()
+    report = batch(tmp_path / "season", out=tmp_path / "out", jobs=2, on_season=resident_mb)
+    beyond_s = used_s() - before_s - sum(episode.cpu_s or 0.0 for episode in report.episodes)
+    assert report.count("finished") == EPISODES
+    assert beyond_s / EPISODES < 0.2
+    assert resident[-1] - resident[0] < 8
 
 
 # ---------------------------------------------------------------------------------------------- a cluster on loopback

@@ -18,9 +18,12 @@ import soundfile
 import leveller
 from leveller import automation, settings
 from leveller.advice import KINDS as ADVICE_KINDS
+from leveller.defaults import DEFAULT_KEYS
 from leveller.plan import CAUSES, STATES
 from leveller.report import faults, tables
-from leveller.report.season import SOME_FAILED_EXIT
+from leveller.report.season import OUTCOMES, SOME_FAILED_EXIT
+from leveller.report.season_files import SEASON_COLUMNS
+from leveller.season import EPISODE_KEYS
 from leveller.sessionfile import (
     CORRECTION_KEYS,
     DECISIONS,
@@ -141,6 +144,15 @@ def test_every_column_has_its_row(file: str, columns: tuple[str, ...]) -> None:
     lines = section.splitlines()
     at = [lines.index(rows_for(section, column)[0]) for column in columns]
     assert at == sorted(at)
+
+
+def test_seasons_are_explained() -> None:
+    """Every key of a list of episodes, every column of season.csv and every outcome has its row in docs/batch.md."""
+    text = page("batch.md")
+    assert [key for key in (*EPISODE_KEYS, *SEASON_COLUMNS) if not rows_for(text, key)] == []
+    assert [outcome for outcome in OUTCOMES if f"\n| {outcome} | " not in text] == []
+    section = text.partition("\n## A show's defaults\n")[2].partition("\n## ")[0]
+    assert [key for key in DEFAULT_KEYS if f"`{key}`" not in section and key not in settings.STAGES] == []
 
 
 def test_states_causes_and_kinds() -> None:

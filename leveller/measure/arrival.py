@@ -29,7 +29,7 @@ BAND_HZ = (200, 3700)
 LAGS = 96  # 12 ms at 8 kHz
 LAG_S = 1 / 8000
 STRIDE = 800  # 50 ms at the most dense
-PAIRS_PER_S = 60
+PAIRS_PER_S = 30
 ENOUGH_WINDOWS = 3000
 _BATCH = 32
 

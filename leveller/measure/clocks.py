@@ -195,7 +195,8 @@ def _middle(kept: Lags, slope: float) -> tuple[float, float | None, int | None]:
 
     A softer sound is taken for the direct one only as long as the way that follows is one.
     """
-    counts = {side: int(np.count_nonzero(kept.side == side)) for side in (1, -1) if side in kept.side} or {0: len(kept.side)}
+    counts = {side: int(np.count_nonzero(kept.side == side)) for side in (1, -1) if side in kept.side}
+    counts = counts or {0: len(kept.side)}
     totals = {side: _laid_over(kept.chosen(kept.side == side), slope) for side in counts}
     for share in EARLY_SHARES_OF_MANY:
         heads = {side: _head(total, start_s, side, share if counts[side] >= MANY else EARLY_SHARE)

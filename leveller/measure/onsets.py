@@ -33,7 +33,7 @@ OVER_FLOOR_DB = 4.0
 CLAP_DB = 8.0  # the least rise of all bands that makes a clap
 CLAP_WEIGHT = 3.0
 STANDS_OUT = 3.0  # standard deviations
-ENOUGH_SCORE = 8.0  # without a common sound the best line reaches less (measured, see tests)
+ENOUGH_SCORE = 8.0  # chance reached 4 in three minutes and 7.8 in an hour (measured); the waveforms decide after this
 
 Onsets = npt.NDArray[np.float32]
 

@@ -13,6 +13,7 @@ import numpy as np
 import numpy.typing as npt
 
 from leveller import settings as settings_
+from leveller.plan.stretches import stretches
 from leveller.units import HOPS_PER_S, Bools
 
 CELL_S = 0.25
@@ -86,13 +87,15 @@ def _within_rate(wanted: Grid, step_db: float) -> Grid:
 
 def _standing(curve: npt.NDArray[np.floating], still: Bools, rate_db_s: float) -> npt.NDArray[np.floating]:
     """The curve held during `still`; what it moved meanwhile is caught up afterwards, within the rate."""
-    if not still.any():
-        return curve
     step = rate_db_s / HOPS_PER_S
-    now = float(curve[0])
-    out = [now]
-    for wanted, held in zip(curve[1:].tolist(), still.tolist(), strict=True):
-        if not held and now != wanted:
-            now = min(max(wanted, now - step), now + step)
-        out.append(now)
-    return np.array(out)
+    out = curve.copy()
+    spans = stretches(still)
+    for (first, after), following in zip(spans.tolist(), [*spans[1:, 0].tolist(), len(still)], strict=False):
+        now = out[first]
+        out[first : after + 1] = now
+        for node in range(after + 1, following + 1):
+            if abs(curve[node] - now) <= step:
+                break
+            now += step if curve[node] > now else -step
+            out[node] = now
+    return out

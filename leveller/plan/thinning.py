@@ -21,11 +21,12 @@ def kept_rows(curves_db: npt.NDArray[np.floating], tolerance_db: float) -> npt.N
     rows = len(curves_db)
     if rows <= 2:
         return np.arange(rows)
+    moving = curves_db[:, np.ptp(curves_db, axis=0) > 0]
     kept = np.array([0, rows - 1])
     todo = np.array([[0, rows - 1]])
     while len(todo):
         todo = todo[np.argsort(todo[:, 0])]
-        far, at = _furthest(curves_db, todo)
+        far, at = _furthest(moving, todo)
         split = far > tolerance_db
         middle = at[split]
         kept = np.concatenate([kept, middle])

@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from leveller.plan import TrackGain
-from leveller.units import hop_to_frame
+from leveller.units import frames_to_hops, hop_to_frame
 
 Samples = npt.NDArray[np.float32]
 _NEPER = np.float32(np.log(10) / 20)
@@ -37,17 +37,19 @@ class GainCurve:
 
     def _edges(self, frames: int, first_hop: int) -> npt.NDArray[np.int64]:
         """Frames at which the block's hops start, from 0; the last one may lie past the block's end."""
-        base = int(hop_to_frame(first_hop, self._rate_hz))
-        count = 0 if not frames else int(
-            np.searchsorted(hop_to_frame(np.arange(first_hop, len(self.starts_db) + 1), self._rate_hz), base + frames))
-        return np.asarray(hop_to_frame(np.arange(first_hop, first_hop + count + 1), self._rate_hz) - base)
+        most = frames_to_hops(frames, self._rate_hz) + 1
+        edges = hop_to_frame(np.arange(first_hop, min(first_hop + most, len(self.starts_db)) + 1), self._rate_hz)
+        edges -= edges[0]
+        return np.asarray(edges[: np.searchsorted(edges, frames) + 1])
 
     def _ramps(self, start: Samples, end: Samples, edges: npt.NDArray[np.int64]) -> Samples:
         """Gain of every frame of whole hops."""
         lengths = np.diff(edges)
         if (lengths == lengths[0]).all():
             part = np.arange(lengths[0], dtype=np.float32) / np.float32(lengths[0])
-            ramp = (start[:, None] + (end - start)[:, None] * part).reshape(-1)
+            ramp = np.multiply((end - start)[:, None], part)
+            ramp += start[:, None]
+            ramp = ramp.reshape(-1)
         else:
             inside = np.arange(edges[-1]) - np.repeat(edges[:-1], lengths)
             part = (inside / np.repeat(lengths, lengths)).astype(np.float32)

@@ -24,7 +24,7 @@ def last_lines(report: SeasonReport, *, width: int | None = None) -> list[Line]:
     failed = [episode for episode in report.episodes if episode.outcome == FAILED]
     lines = [Line(text, BAD) for episode in failed
              for text in folded(visible(f"failed: {episode.episode}: {episode.reason}"), width, indent="")]
-    lines += [Line(text, BAD if failed else GOOD) for text in folded(report.sentence, width, indent="")]
+    lines += [Line(text, BAD if report.exit_code else GOOD) for text in folded(report.sentence, width, indent="")]
     advice = []
     if failed:
         advice.append("Mend what the lines above name and give the same command again: finished episodes are not "
