@@ -32,8 +32,10 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]})
 
 Sources = Annotated[list[Path], typer.Argument(
-    readable=False, metavar="SESSION...", help="A folder, a session.toml, or the audio files of one conversation.", show_default=False)]
-Files = Annotated[list[Path], typer.Argument(readable=False, metavar="FILE...", help="Audio files of any kind.", show_default=False)]
+    readable=False, metavar="SESSION...", show_default=False,
+    help="A folder, a session.toml, or the audio files of one conversation.")]
+Files = Annotated[list[Path], typer.Argument(
+    readable=False, metavar="FILE...", help="Audio files of any kind.", show_default=False)]
 Out = Annotated[Path | None, typer.Option(
     metavar="DIR", help="Folder to write; ./levelled/TITLE by default. It appears whole or not at all.")]
 Replace = Annotated[bool, typer.Option("--replace", help="Replace DIR where it exists.")]
@@ -114,8 +116,8 @@ def render(
 @app.command()
 def finish(
     files: Annotated[list[Path], typer.Argument(
-        readable=False, metavar="FILE...", help="The edited programme, or its stems and music: they are summed as they are.",
-        show_default=False)],
+        readable=False, metavar="FILE...", show_default=False,
+        help="The edited programme, or its stems and music: they are summed as they are.")],
     out: Annotated[Path | None, typer.Option(
         metavar="DIR", help="Folder to write; './levelled/TITLE finished' by default.")] = None,
     replace: Replace = False, delivery: DeliveryName = None, assignments: Assignments = None,

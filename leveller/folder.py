@@ -55,11 +55,13 @@ class OutputFolder:
         self.work = self.path.with_name(f".{self.path.name}.part-{os.getpid()}")
         self._old = self.path.with_name(f".{self.path.name}.old-{os.getpid()}")
         self._replace, self._needed_bytes, self._sources = replace, needed_bytes, tuple(sources)
+        self._marks: list[tuple[int, int]] = []  # of the sources, when the work began
         self._made = False  # the work folder, by this very object
         self._parents: list[Path] = []  # that were made for it, deepest first
 
     def __enter__(self) -> OutputFolder:
         self._check_place()
+        self._marks = [_mark(source) for source in self._sources]
         try:
             self._make()
             self._check_room()
@@ -72,6 +74,7 @@ class OutputFolder:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         if kind is None:
+            self._check_sources()
             self.publish()
         else:
             self.discard()
@@ -132,6 +135,13 @@ class OutputFolder:
             with contextlib.suppress(OSError):
                 parent.rmdir()  # stays where something else has come into it
         self._parents = []
+
+    def _check_sources(self) -> None:
+        """Discard what was made of a source that has changed meanwhile: it would be of neither state."""
+        for source, before in zip(self._sources, self._marks, strict=True):
+            if _mark(source) != before:
+                self.discard()
+                raise InputError(f"{source}: changed while it was read. Run again when nothing else writes to it")
 
     def _told(self, error: OSError) -> LevellerError:
         """What the system refused in the middle of the work, in one line: to read a file, or to write this folder."""
@@ -210,6 +220,15 @@ def clean_up(path: Path) -> None:
 def running_beside(path: Path) -> list[int]:
     """Other processes of this computer that work on a folder of that name."""
     return [pid for _, pid in _siblings(path, ".part-") if _alive(pid)]
+
+
+def _mark(source: Path) -> tuple[int, int]:
+    """Size and time of change of a source; zeros where there is none."""
+    try:
+        facts = source.stat()
+    except OSError:
+        return 0, 0
+    return facts.st_size, facts.st_mtime_ns
 
 
 def _siblings(path: Path, mark: str) -> Iterator[tuple[Path, int]]:

@@ -10,7 +10,6 @@ import shutil
 import struct
 from collections.abc import Callable
 from pathlib import Path
-from typing import NamedTuple
 
 import numpy as np
 import pytest

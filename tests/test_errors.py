@@ -94,7 +94,9 @@ def test_the_tables_are_what_is_tried() -> None:
 
 
 @pytest.mark.parametrize("row", REFUSED, ids=[row[0] for row in REFUSED])
-def test_refused(row: list[str], here: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]) -> None:
+def test_refused(
+    row: list[str], here: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
     """One line on the standard error word for word, the exit code, and nothing written or changed."""
     name, line, message, code = row
     badinput.REFUSED[name](monkeypatch)
@@ -105,8 +107,9 @@ def test_refused(row: list[str], here: Path, monkeypatch: pytest.MonkeyPatch, ca
 
 
 @pytest.mark.parametrize("row", ACCEPTED, ids=[row[0] for row in ACCEPTED])
-def test_accepted(row: list[str], here: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str],
-                  ) -> None:
+def test_accepted(
+    row: list[str], here: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
     """Exit code 0, nothing on the standard error, the sources as they were, and the summary says it."""
     name, line, message, code = row
     badinput.ACCEPTED[name](monkeypatch)

@@ -206,8 +206,9 @@ def _middle(kept: Lags, slope: float) -> tuple[float, float | None, int | None]:
     sign = _sign(kept)
     if len(heads) == 2 and LEAST_WAY_S < (heads[1] - heads[-1]) / 2 < MOST_WAY_S:
         return (heads[1] + heads[-1]) / 2, (heads[1] - heads[-1]) / 2, sign
-    most = max(heads, key=lambda side: (counts[side], side))
-    return heads[most], None, sign
+    if len(heads) == 2:  # the sides are muddled: what is strongest in all
+        return _head(*_laid_over(kept, slope), 0, EARLY_SHARE), None, sign
+    return next(iter(heads.values())), None, sign
 
 
 def _sign(kept: Lags) -> int | None:
