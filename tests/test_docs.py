@@ -63,8 +63,8 @@ def rows_for(text: str, key: str) -> list[str]:
 
 
 def words(text: str) -> list[str]:
-    """Text without what versions of typer write differently: kinds of arguments, braces, line ends."""
-    return re.sub(r"<[^<>\n]*>|[{}]|\.\.\.", " ", text).split()
+    """Text without what versions of typer write differently: kinds of arguments, brackets, line ends."""
+    return re.sub(r"<[^<>\n]*>|[{}\[\]\\]|\.\.\.", " ", text).split()
 
 
 # What the program writes into the pages

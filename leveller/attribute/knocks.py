@@ -11,7 +11,7 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from leveller.measure.levels import STEP_DB, Levels
+from leveller.measure.levels import Levels, mean_level_db
 from leveller.units import Bools
 
 REACH_HOPS = 5
@@ -32,7 +32,7 @@ def without_knocks(evidence: Grid, levels: Levels) -> Grid:
         Nats in favour of own voice.
     levels : shape=(hops, tracks, bands)
     """
-    level_db = levels.mean(axis=2, dtype=np.float32) * np.float32(STEP_DB)
+    level_db = mean_level_db(levels)
     beside = np.maximum(_moved(level_db, -REACH_HOPS), _moved(level_db, REACH_HOPS))
     knock = (level_db - beside > STANDS_OUT_DB) & ~_beside_voice(evidence)
     return np.where(_spread(knock), np.minimum(evidence, 0), evidence)

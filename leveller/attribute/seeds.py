@@ -19,7 +19,7 @@ import numpy as np
 import numpy.typing as npt
 
 from leveller.measure import Measurements
-from leveller.measure.levels import level_to_db
+from leveller.measure.levels import mean_level_db
 from leveller.units import Bools
 
 NOBODY = -1
@@ -43,7 +43,7 @@ def first_labels(m: Measurements, audible_db: npt.NDArray[np.float32], programme
     programme : shape=(hops,)
         False where a slate, a tone or a marked stretch is to be left out.
     """
-    level_db = level_to_db(m.levels).mean(axis=2)
+    level_db = mean_level_db(m.levels)
     by_arrival = _by_arrival(m, level_db, audible_db, programme)
     if (by_arrival != NOBODY).any():
         return by_arrival
@@ -52,7 +52,7 @@ def first_labels(m: Measurements, audible_db: npt.NDArray[np.float32], programme
 
 def labels_by_level(m: Measurements, audible_db: npt.NDArray[np.float32], programme: Bools) -> Labels:
     """The second source alone, shape=(hops,)."""
-    return _by_level(level_to_db(m.levels).mean(axis=2), audible_db, programme)
+    return _by_level(mean_level_db(m.levels), audible_db, programme)
 
 
 def _by_arrival(

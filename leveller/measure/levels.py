@@ -32,3 +32,8 @@ def power_to_level(power: npt.NDArray[np.float32]) -> Levels:
 def level_to_db(level: npt.NDArray[Any]) -> npt.NDArray[np.float32]:
     """16-bit levels in dB, float32, same shape."""
     return level.astype(np.float32) * np.float32(STEP_DB)
+
+
+def mean_level_db(levels: Levels) -> npt.NDArray[np.float32]:
+    """Mean over the last axis (bands) in dB, float32; without a float copy of everything, which is large."""
+    return np.asarray(levels.mean(axis=-1, dtype=np.float32) * np.float32(STEP_DB))

@@ -55,7 +55,7 @@ class GainCurve:
             part = (inside / np.repeat(lengths, lengths)).astype(np.float32)
             ramp = np.repeat(start, lengths) + np.repeat(end - start, lengths) * part
         ramp *= _NEPER
-        return np.exp(ramp, out=ramp)
+        return np.asarray(np.exp(ramp, out=ramp))
 
 
 def hop_gains_db(gain: TrackGain, hops: int) -> tuple[Samples, Samples]:
