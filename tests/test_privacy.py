@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import socket
-from collections.abc import Iterator
 from pathlib import Path
 from typing import NoReturn
 
@@ -23,7 +22,7 @@ def forbidden(*_: object, **__: object) -> NoReturn:
 
 
 @pytest.fixture(scope="module")
-def done(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Path]:
+def done(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """A folder in which everything was run while sockets were forbidden; its own name is a secret."""
     home = tmp_path_factory.mktemp("privacy") / SECRET
     home.mkdir()
@@ -39,7 +38,7 @@ def done(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Path]:
         finish(home / "first" / "mix.wav", out=home / "third")
         assert inspect([home / "talk"]).tracks
         assert measure_files([home / "first" / "mix.wav"])
-    yield home
+    return home
 
 
 def test_no_connection_is_opened(done: Path) -> None:

@@ -58,7 +58,6 @@ class Evidence:
     score: Grid  # (hops, tracks) mean log-likelihood ratio of a band, unclipped
     narrow: Grid  # (hops, tracks) the same of the lowest bands alone, one hop
     own_to_bleed_db: Grid  # (hops, tracks) mean over bands of level over predicted bleed plus noise
-    bleed_db: Grid  # (hops, tracks) predicted bleed, power sum over bands
     audible_db: Grid  # (hops, tracks) mean over bands of level over noise, clipped to 0 .. 20
 
 
@@ -161,7 +160,6 @@ def _describe(out: dict[str, Grid], level_db: Grid, noise_db: Grid, bleed: Grid,
     out["score"][:] = nats.mean(axis=2)
     out["narrow"][:] = nats[:, :, :NARROW_BANDS].mean(axis=2)
     out["own_to_bleed_db"][:] = ratio_db.mean(axis=2)
-    out["bleed_db"][:] = _db(bleed.sum(axis=2))
     out["audible_db"][:] = np.clip(level_db - noise_db, 0, 20).mean(axis=2)
 
 
