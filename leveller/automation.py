@@ -105,7 +105,7 @@ def read_automation(path: Path, session: Session, *, hops: int, written: Ints) -
     out = []
     for i, track in enumerate(session.tracks):
         own = [row for row in rows if row.track == i]
-        _check_course(own, track.name, path.name, hops)
+        _check_rows_of(own, track.name, path.name, hops)
         out.append(_track_gain(own, written, tracks, path.name, track.name))
     edited = sum(int(np.count_nonzero(gain.cause == _EDIT)) for gain in out)
     ranges = tuple(max(0.0, -float(gain.parts_cdb[:, PARTS.index("expander")].min()) / 100) for gain in out)
@@ -174,7 +174,7 @@ def _number(cell: str, name: str, where: str) -> float:
         raise AutomationError(f"{where}: {name} = {cell!r}: expected a number") from None
 
 
-def _check_course(rows: list[_Row], name: str, file: str, hops: int) -> None:
+def _check_rows_of(rows: list[_Row], name: str, file: str, hops: int) -> None:
     """A row at 0 and one at the end; never more than two at one time, since what lies between them is not heard."""
     end_s = hops / HOPS_PER_S
     if not rows or rows[0].hop != 0:

@@ -145,14 +145,39 @@ def measure(
     """Read the loudness and true peak of any files."""
     with _reported(debug):
         from leveller.reading import measure_files
+        from leveller.report.tables import as_json as readable
         from leveller.report.text import format_readings
 
         with console.progress(console.READ_SHARES, quiet=quiet) as on_progress:
             readings = measure_files(files, accept_short=accept_short, on_progress=on_progress)
         if as_json:
-            _print_json(readings)
+            _print_json([readable(reading) for reading in readings])
         else:
             console.print_lines(format_readings(readings, width=console.terminal_width(sys.stdout)))
+
+
+@app.command()
+def inspect(
+    sources: Sources,
+    as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
+    picture: Annotated[Path | None, typer.Option(
+        metavar="FILE", help="Draw the table and what each microphone hears, as SVG.", show_default=False)] = None,
+    accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
+) -> None:
+    """Look at a session before anything is rendered: levels, faults, bleed, room tone, advice."""
+    with _reported(debug):
+        from leveller import inspection
+        from leveller.report.inspection import format_inspection, inspection_json, write_picture
+        from leveller.report.text import Line
+
+        with console.progress(console.INSPECT_SHARES, quiet=quiet) as on_progress:
+            found = inspection.inspect(sources, accept_short=accept_short, on_progress=on_progress)
+        if picture is not None:
+            write_picture(picture, found)
+        if as_json:
+            _print_json(inspection_json(found))
+        else:
+            console.print_lines([Line(text) for text in format_inspection(found)])
 
 
 @app.command()
@@ -197,7 +222,7 @@ def batch(
 @app.command()
 def settings(
     session: Annotated[Path | None, typer.Argument(
-        metavar="[SESSION]", help="A folder or a session.toml whose values count.", show_default=False)] = None,
+        metavar="SESSION", help="A folder or a session.toml whose values count.", show_default=False)] = None,
     assignments: Assignments = None,
     why: Annotated[bool, typer.Option("--why", help="Say the reason for each default.")] = False,
     debug: Debug = False,
@@ -291,10 +316,8 @@ def _near(path: Path) -> str:
     return str(path.relative_to(here)) if path.is_relative_to(here) else str(path)
 
 
-def _print_json(readings: Sequence[Any]) -> None:
-    """Readings as JSON."""
+def _print_json(value: Any) -> None:
+    """A value as JSON."""
     import json
 
-    from leveller.report.tables import as_json
-
-    typer.echo(json.dumps([as_json(reading) for reading in readings], indent=1, ensure_ascii=False))
+    typer.echo(json.dumps(value, indent=1, ensure_ascii=False))

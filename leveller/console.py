@@ -24,6 +24,7 @@ OnSeason = Callable[["Standing"], None]
 MOST_NAME = 28  # characters of an episode in the display
 WAIT_S = 2.0  # shorter work shows no progress
 PROCESS_SHARES = {"measure": 0.45, "decide": 0.25, "render": 0.17, "mix": 0.13}  # of the wall time, measured
+INSPECT_SHARES = {"measure": 0.8, "decide": 0.2}
 FINISH_SHARES = {"render": 0.6, "mix": 0.4}
 READ_SHARES = {"read": 1.0}
 STYLES = {"head": "bold", "good": "green", "bad": "bold red", "dim": "dim", "plain": ""}

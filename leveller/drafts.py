@@ -25,7 +25,7 @@ from leveller.sessionfile import TrackEntry
 from leveller.takes import Take
 from leveller.units import power_to_db
 
-AGREE_CORRELATION = 0.98  # two channels above this are one voice; DESIGN: on loud hops
+AGREE_CORRELATION = 0.98  # two channels above this are one voice, on loud hops
 LOUD_RANGE_DB = 20.0  # hops this far below the loud ones still count as loud
 LOUD_PERCENTILE = 95.0
 SILENT_POWER = 1e-12  # -120 dBFS: below the last bit of 16

@@ -21,7 +21,7 @@ from leveller.session import Session
 from leveller.units import HOPS_PER_S, Bools
 
 MOST_SHARE = 0.08  # of the session's time
-WORD_HARM, BLEED_HARM = 10.0, 0.5
+WORD_HARM, BLEED_HARM = 10.0, 1.0
 LEAST_DOUBT = 0.003  # of a lost word for certain; below it nothing is worth a listen
 CLOSED_DB = 6.0  # a cut that loses a word
 FULLY_AUDIBLE_DB = 20.0

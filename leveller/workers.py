@@ -22,7 +22,7 @@ from typing import Any
 
 from leveller.worker import busy
 
-JOB_BYTES = 600 << 20  # DESIGN: three hours of eight tracks stay under it
+JOB_BYTES = 600 << 20  # three hours of eight tracks stay under it
 THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")  # read when numpy is imported
 PATIENCE_S = 10.0  # for a worker to clean up
 ENDED_EXIT = 143

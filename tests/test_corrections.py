@@ -20,7 +20,7 @@ from leveller.settings import Expander
 SETTINGS = Expander(attack_s=0.08, hold_s=0.24, release_s=0.16, lookahead_s=0.18)
 RANGE_DB = 12.0
 HOPS = 1000
-ROUNDED_DB = 0.1  # rows follow the curve within 0.1 dB (DESIGN: thinned to 0.1 dB)
+ROUNDED_DB = 0.1  # rows follow the curve within 0.1 dB (thinned to 0.1 dB)
 
 
 def flags(*spans: tuple[int, int]) -> np.ndarray:

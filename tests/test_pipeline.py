@@ -33,7 +33,7 @@ from leveller.render.mix import LEVELS
 from leveller.session import open_session
 from leveller.settings import DELIVERIES
 
-TARGET_BAND_LU = 0.1  # design: a delivery is met within 0.1 LU, read by libebur128
+TARGET_BAND_LU = 0.1  # our promise: a delivery is met within 0.1 LU, read by libebur128
 OVER_DB = 0.005  # half of the last digit in which the ceiling is given
 HALF_STEP_24 = 2.0**-24  # rounding to 24 bit
 FLOAT32 = float(np.finfo(np.float32).eps)

@@ -3,7 +3,7 @@
 The story, each step a module:
 
 1. `tone`      leave out line-up tone and the stretches marked in the session file;
-2. `floor`     the noise floor of every microphone and band;
+2. `floor`     the noise floor of every microphone and band; `tail`: how fast the room decays;
 3. `seeds`     a few hops per person that are as good as certain, from arrival times or levels;
 4. `coupling`  from the hops labelled so far: how much of every voice each microphone hears;
 5. `bleed`     from the coupling: what the others explain at each microphone, and the evidence for own voice;
@@ -35,6 +35,7 @@ from leveller.attribute.knocks import without_knocks
 from leveller.attribute.lag import find_lags
 from leveller.attribute.leads import with_leads
 from leveller.attribute.seeds import NOBODY, Labels, first_labels, labels_by_level
+from leveller.attribute.tail import tail_db_per_hop
 from leveller.attribute.tone import steady_tone
 from leveller.measure import Measurements
 from leveller.measure.levels import STEP_DB, level_to_db
@@ -46,7 +47,6 @@ CLEARLY_OWN = 0.6  # mean nats a band: this microphone has its own voice
 CLEARLY_NOT = 0.2  # ... and this one has not
 CLEARLY_AUDIBLE_DB = 6.0
 KEPT_SEEDS = 0.5
-TAIL_DB_PER_HOP = 0.8
 HEARD_DB = 3.0  # mean over bands, over the noise: something sounds
 NEAR_HOPS = 10
 
@@ -86,11 +86,12 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
     """The story above, over voice tracks only."""
     floor_db = noise_floor(m.levels)
     audible_db = _audible(m, floor_db)
+    tail = tail_db_per_hop(m.levels, floor_db)
     lags = find_lags(audible_db, labels_by_level(m, audible_db, programme))
     labels = seeds = first_labels(m, audible_db, programme)
     for _ in range(ROUNDS):
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
-        evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=TAIL_DB_PER_HOP)
+        evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail)
         labels = _relabelled(evidence, programme, seeds)
     voice = without_knocks(with_leads(evidence.own, m.arrivals, audible_db, coupling), m.levels)
     margin = margins(np.where(programme[:, None], voice, 0))

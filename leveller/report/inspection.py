@@ -9,13 +9,15 @@ from __future__ import annotations
 import dataclasses
 import math
 from collections.abc import Sequence
+from pathlib import Path
 from typing import Any
 
 from leveller.advice import SPEED_M_S
+from leveller.errors import OutputError
 from leveller.findings import Inspection, Matrix, TrackFindings
 from leveller.report.inspection_picture import inspection_svg
 
-__all__ = ["format_inspection", "inspection_json", "inspection_svg"]
+__all__ = ["format_inspection", "inspection_json", "inspection_svg", "write_picture"]
 
 LONGEST_NAME = 24  # longer ones are cut in tables; advice has them whole
 AIR_MOST_S = 0.03  # delays beyond are given in ms only
@@ -46,6 +48,23 @@ def inspection_json(inspection: Inspection) -> dict[str, Any]:
     plain = {field.name: _plain(getattr(inspection, field.name)) for field in dataclasses.fields(inspection)}
     assert isinstance(plain, dict)
     return plain
+
+
+def write_picture(path: Path, inspection: Inspection) -> None:
+    """Write the picture to a new file.
+
+    Raises
+    ------
+    OutputError
+        when the file exists or cannot be written.
+    """
+    try:
+        with open(path, "x", encoding="utf-8", newline="\n") as file:
+            file.write(inspection_svg(inspection))
+    except FileExistsError:
+        raise OutputError(f"{path}: exists already. Remove it, or name another file") from None
+    except OSError as error:
+        raise OutputError(f"{path}: cannot be written ({error.strerror})") from error
 
 
 def _plain(value: Any) -> Any:

@@ -106,7 +106,7 @@ def _arrows(found: Inspection) -> list[tuple[int, int, float]]:
     return sorted(out, key=lambda arrow: arrow[2])
 
 
-def _course(start: tuple[float, float], end: tuple[float, float]) -> tuple[float, ...]:
+def _bow(start: tuple[float, float], end: tuple[float, float]) -> tuple[float, ...]:
     """Start, control point and end of an arrow's curve, bent to its right so that both ways stay apart."""
     (ax, ay), (bx, by) = start, end
     length = math.hypot(bx - ax, by - ay)
@@ -119,7 +119,7 @@ def _course(start: tuple[float, float], end: tuple[float, float]) -> tuple[float
 
 def _arrow(start: tuple[float, float], end: tuple[float, float], value: float) -> str:
     """One arrow, 1.5 to 10 px wide."""
-    ax, ay, cx, cy, bx, by = _course(start, end)
+    ax, ay, cx, cy, bx, by = _bow(start, end)
     wide = min(10.0, max(1.5, 12 * 10 ** (value / 20)))
     ux, uy = (bx - cx) / math.hypot(bx - cx, by - cy), (by - cy) / math.hypot(bx - cx, by - cy)
     tip = 6 + wide
@@ -133,7 +133,7 @@ def _arrow(start: tuple[float, float], end: tuple[float, float], value: float) -
 
 def _arrow_label(start: tuple[float, float], end: tuple[float, float], value: float) -> str:
     """Its number."""
-    ax, ay, cx, cy, bx, by = _course(start, end)
+    ax, ay, cx, cy, bx, by = _bow(start, end)
     style = f"c {'head' if value > BLEED_DB else 'num'} halo"
     start_part, bend, end_part = (1 - LABEL_AT) ** 2, 2 * LABEL_AT * (1 - LABEL_AT), LABEL_AT**2
     x, y = (start_part * a + bend * c + end_part * b for a, c, b in ((ax, cx, bx), (ay, cy, by)))

@@ -19,7 +19,7 @@ from leveller.render.gain import hop_gains_db
 from leveller.session import Session, open_session
 
 TOLERANCE_DB = 0.1  # the promise of automation.csv: thinned to 0.1 dB
-SPREAD_DB = 2.0  # between voices after levelling, the worst session of the design's numbers to reach
+SPREAD_DB = 2.0  # between voices after levelling, the worst session allowed
 SPEC = ConversationSpec(rate_hz=16_000, seconds=30.0, seed=51, voices=sounds.HELD_OUT, gains_db=(6.0, -4.0, 2.0))
 
 
