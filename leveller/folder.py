@@ -123,12 +123,12 @@ class OutputFolder:
             raise
         _active.discard(self.work)
         self._made, self._parents = False, []
-        shutil.rmtree(self._old, ignore_errors=True)
+        _remove(self._old)
 
     def discard(self) -> None:
         """Remove all that was written, and the parents that were made for it; doing so twice does no harm."""
         if self._made:
-            shutil.rmtree(self.work, ignore_errors=True)
+            _remove(self.work)
             _active.discard(self.work)
             self._made = False
         for parent in self._parents:
@@ -220,6 +220,15 @@ def clean_up(path: Path) -> None:
 def running_beside(path: Path) -> list[int]:
     """Other processes of this computer that work on a folder of that name."""
     return [pid for _, pid in _siblings(path, ".part-") if _alive(pid)]
+
+
+def _remove(folder: Path) -> None:
+    """Delete a folder to its end, also where an interruption comes in between; that is passed on then."""
+    try:
+        shutil.rmtree(folder, ignore_errors=True)
+    except KeyboardInterrupt:
+        shutil.rmtree(folder, ignore_errors=True)
+        raise
 
 
 def _mark(source: Path) -> tuple[int, int]:

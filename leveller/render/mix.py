@@ -112,6 +112,7 @@ class Bus:
     ) -> Mix:
         """Write the mix on target under the ceiling; the reading is of what was written."""
         cells, peak_cells, cell_s = self._loudness.cells(), self._peaks.cells(), self._peaks.cell_frames / self._rate_hz
+        del self._loudness, self._peaks  # the sum is complete; an hour of peak cells is 14 MB
         target, ceiling = delivery.target_lufs, delivery.ceiling_dbtp
         for _ in range(MOST_ROUNDS):
             make_up = find_make_up(
