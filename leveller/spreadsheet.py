@@ -11,13 +11,13 @@ from __future__ import annotations
 
 import csv
 import io
-import math
 import re
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 
 from leveller.errors import AutomationError, InputError, nearest
 
+MOST = 1e15  # beyond it a number of seconds or dB is none, and hundredths of it are not exact
 DELIMITERS = ",;\t"
 _UTF16 = (b"\xff\xfe", b"\xfe\xff")
 _WRAPPED = re.compile(r'="(.*)"', re.DOTALL)
@@ -61,7 +61,7 @@ def number(cell: str) -> float:
         value = float(cell)
     except ValueError:
         value = _written_otherwise(cell)
-    if not math.isfinite(value) or "_" in cell:
+    if not abs(value) < MOST or "_" in cell:
         raise ValueError(f"{cell!r} is no number")
     return value
 

@@ -204,8 +204,8 @@ def test_links_do_not_lead_out(place: Path, tmp_path: Path) -> None:
 # Tables
 
 cells = st.one_of(
-    st.sampled_from(["0", "0.5", "1", "1,5", "-3", "1e999", "nan", "-inf", "1e-320", "9" * 500, "a", "b", "own", "",
-                     "=1+1", "-0", "1_0", "\u0663", "1.234,5", '="1"', "\u22123", "x" * 200_000, "a\0b"]),
+    st.sampled_from(["0", "0.5", "1", "1,5", "-3", "1e999", "1e307", "nan", "-inf", "1e-320", "9" * 500, "a", "b",
+                     "own", "", "=1+1", "-0", "1_0", "\u0663", "1.234,5", '="1"', "\u22123", "x" * 200_000, "a\0b"]),
     st.text(max_size=6), st.floats().map(str))
 COLUMNS = {"automation": ("time_s", "track", "gain_db", "auto_trim_db", "state", "cause"),
            "speech": SPEECH_COLUMNS, "corrections": CORRECTION_KEYS}
@@ -350,7 +350,7 @@ def test_headers(place: Path, content: bytes) -> None:
 
 
 @pytest.mark.long
-@fuzz(2 * LONG)
+@fuzz(LONG)
 @given(content=headers())
 def test_many_headers(place: Path, content: bytes) -> None:
     """The same, many times."""

@@ -17,7 +17,7 @@ import numpy.typing as npt
 
 from leveller.measure.levels import Levels, power_to_level
 from leveller.measure.loudness import k_response_power
-from leveller.measure.pieces import Pieces
+from leveller.measure.pieces import Grown, Pieces
 
 ANALYSIS_HZ = 16000
 HOP = 160
@@ -50,17 +50,17 @@ class BandMeter:
         self._rumble = np.searchsorted(frequencies, RUMBLE_HZ)
         self._scale = np.float32(2.0 / (WINDOW * float((self._window**2).sum())))
         self._k_weight = k_response_power(frequencies).astype(np.float32)
-        self._levels: list[Levels] = []
+        self._levels = Grown()
 
     def push(self, block: npt.NDArray[np.float32]) -> None:
         """Take 16 kHz samples, shape=(frames,)."""
-        self._levels.extend(self._measure(piece[0]) for piece in self._pieces.push(block))
+        for piece in self._pieces.push(block):
+            self._levels.append(self._measure(piece[0]))
 
     def result(self) -> Levels:
         """Levels of all hops begun so far."""
-        done = list(self._levels)
-        for piece, frames in self._pieces.rest():
-            done.append(self._measure(piece[0])[: -(-frames // HOP)])
+        done = self._levels.rows(
+            *(self._measure(piece[0])[: -(-frames // HOP)] for piece, frames in self._pieces.rest()))
         return np.concatenate(done) if done else np.empty((0, BANDS + 3), np.int16)
 
     def _measure(self, samples: npt.NDArray[np.float32]) -> Levels:

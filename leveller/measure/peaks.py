@@ -24,7 +24,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from leveller.measure.pieces import Piece, Pieces
+from leveller.measure.pieces import Grown, Piece, Pieces
 from leveller.units import gain_to_db
 
 FULL_SCALE = 0.9999  # a choice of ours: just under the largest 16-bit sample, 0.99997
@@ -131,9 +131,16 @@ class PeakMeter:
 
 
 class TruePeakMeter:
-    """Streaming true peak; `push` blocks, then `result`."""
+    """Streaming true peak; `push` blocks, then `result`.
 
-    def __init__(self, rate_hz: int, channels: int) -> None:
+    Parameters
+    ----------
+    rate_hz, channels : int
+    keep_cells : bool
+        Without it only the highest peak is remembered: an hour of cells is 14 MB.
+    """
+
+    def __init__(self, rate_hz: int, channels: int, *, keep_cells: bool = True) -> None:
         self._rate_hz = rate_hz
         self.cell_frames = peak_cell_frames(rate_hz)
         self._group = _group_frames(self.cell_frames)
@@ -144,27 +151,40 @@ class TruePeakMeter:
         groups = piece_frames // self._group
         self._around = np.empty((self._matrix.shape[1], groups), np.float32)
         self._between = np.empty((self._matrix.shape[0], groups), np.float32)
-        self._cells: list[npt.NDArray[np.float32]] = []
+        self._keep = keep_cells
+        self._cells = Grown()
+        self._count = 0  # cells so far
+        self._highest = (0.0, 0)  # linear, cell
 
     def push(self, block: npt.NDArray[Any]) -> None:
         """Take a block, shape=(frames,) or (frames, channels), of any length."""
-        self._cells.extend(self._measure(piece) for piece in self._pieces.push(block))
+        for piece in self._pieces.push(block):
+            cells = self._measure(piece)
+            self._highest = self._higher(cells)
+            self._count += len(cells)
+            if self._keep:
+                self._cells.append(cells)
 
     def cells(self) -> npt.NDArray[np.float32]:
         """True peak of each peak cell so far, linear, shape=(cells,)."""
-        done = list(self._cells)
-        for piece, frames in self._pieces.rest():
-            done.append(self._measure(piece)[: -(-frames // self.cell_frames)])
+        done = self._cells.rows(
+            *(self._measure(piece)[: -(-frames // self.cell_frames)] for piece, frames in self._pieces.rest()))
         return np.concatenate(done) if done else np.zeros(0, np.float32)
 
     def result(self) -> TruePeakReading:
-        """The reading over what was pushed so far."""
-        cells = self.cells()
-        if not len(cells) or not cells.max():
+        """The reading over what was pushed so far; without cells where none are kept."""
+        peak, at = self._highest
+        for piece, frames in self._pieces.rest():
+            peak, at = self._higher(self._measure(piece)[: -(-frames // self.cell_frames)])
+        cells = self.cells() if self._keep else np.zeros(0, np.float32)
+        if not peak:
             return TruePeakReading(-math.inf, 0.0, cells, self.cell_frames)
+        return TruePeakReading(gain_to_db(peak), (at + 0.5) * self.cell_frames / self._rate_hz, cells, self.cell_frames)
+
+    def _higher(self, cells: npt.NDArray[np.float32]) -> tuple[float, int]:
+        """The highest peak with these cells, and its cell."""
         at = int(cells.argmax())
-        return TruePeakReading(
-            gain_to_db(float(cells[at])), (at + 0.5) * self.cell_frames / self._rate_hz, cells, self.cell_frames)
+        return (float(cells[at]), self._count + at) if cells[at] > self._highest[0] else self._highest
 
     def _measure(self, piece: Piece) -> npt.NDArray[np.float32]:
         """Cells of one piece, the largest over the channels."""

@@ -19,6 +19,7 @@ import numpy as np
 import numpy.typing as npt
 
 Piece = npt.NDArray[np.float32]
+_TOGETHER = 120
 
 
 def as_columns(block: npt.NDArray[Any], channels: int) -> npt.NDArray[Any]:
@@ -62,3 +63,22 @@ class Pieces:
         padded[:, : self._filled] = self._buffer[:, : self._filled]
         for start in range(0, left, self.frames):
             yield padded[:, start : start + self.frames + self._shared], min(self.frames, left - start)
+
+
+class Grown:
+    """Rows that come in small arrays, kept in few large ones: many small ones would fragment the memory for good."""
+
+    def __init__(self) -> None:
+        self._large: list[npt.NDArray[Any]] = []
+        self._small: list[npt.NDArray[Any]] = []
+
+    def append(self, rows: npt.NDArray[Any]) -> None:
+        """Add rows at the end."""
+        self._small.append(rows)
+        if len(self._small) == _TOGETHER:
+            self._large.append(np.concatenate(self._small))
+            self._small.clear()
+
+    def rows(self, *more: npt.NDArray[Any]) -> list[npt.NDArray[Any]]:
+        """All arrays so far in order, then `more`; ready to be concatenated."""
+        return [*self._large, *self._small, *more]

@@ -130,7 +130,8 @@ class Bus:
         self, path: Path, make_up: MakeUp, delivery: Delivery, frames: int, cell_s: float, on_progress: OnProgress
     ) -> Mix:
         """One pass over the sum."""
-        loudness, peaks = LoudnessMeter(self._rate_hz, self._channels), TruePeakMeter(self._rate_hz, self._channels)
+        loudness = LoudnessMeter(self._rate_hz, self._channels)
+        peaks = TruePeakMeter(self._rate_hz, self._channels, keep_cells=False)
         total = self._spill.frames / self._rate_hz
         at = 0
         with (ThreadPoolExecutor(thread_count()) as pool,
