@@ -350,7 +350,7 @@ def test_headers(place: Path, content: bytes) -> None:
 
 
 @pytest.mark.long
-@fuzz(LONG)
+@fuzz(LONG // 3)
 @given(content=headers())
 def test_many_headers(place: Path, content: bytes) -> None:
     """The same, many times."""
