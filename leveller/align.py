@@ -31,7 +31,7 @@ from leveller.measure.levels import level_to_db
 from leveller.measure.onsets import ENOUGH_SCORE, Line, common_line, onsets
 from leveller.session import Session, Track
 
-LEAST_S = 0.003  # a metre of air: microphones that stand differently look that far apart without any fault
+LEAST_S = 0.006  # two metres of air: microphones that stand differently look that far apart without any fault
 LONGEST_WAY_S = 0.03  # five metres, or a strong echo taken for the direct sound (17 ms seen)
 USUAL_WAY_S = 0.003
 LEAST_DRIFT_S = 0.0015  # by the session's end; less is no drift

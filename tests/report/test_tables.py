@@ -126,7 +126,7 @@ def test_report_holds_the_report(twice: Twice) -> None:
     assert [voice["track"] for voice in found["voices"]] == [track.name for track in twice.first.session.tracks]
     assert found["voices"][0]["trim_db"] == rounded(report.voices[0], "trim_db")
     assert found["settings"]["expander.range_db"] == "auto"
-    assert set(found["made_by"]) == {"leveller", "numpy", "scipy", "soundfile", "soxr"}
+    assert set(found["made_by"]) == {"leveller", "numpy", "scipy", "soundfile", "soxr", "webrtcvad-wheels"}
 
 
 def test_sources_are_fingerprinted(twice: Twice) -> None:
