@@ -305,16 +305,16 @@ def _print_summary(result: Any, quiet: bool) -> None:
     """The summary of a run."""
     from leveller.report.figures import figures_of
 
-    _print_report(figures_of(result), result.out, quiet)
+    _print_report(figures_of(result), result.out, quiet, result.places)
 
 
-def _print_report(report: Any, out: Path, quiet: bool) -> None:
+def _print_report(report: Any, out: Path, quiet: bool, places: Sequence[Any] = ()) -> None:
     """A report; a delivery that is not met is said in any case."""
     from leveller.report.text import format_summary
 
     if not quiet:
         width = console.terminal_width(sys.stdout)
-        console.print_lines(format_summary(report, out=_near(out), width=width))
+        console.print_lines(format_summary(report, out=_near(out), places=places, width=width))
     elif not report.delivery.met:
         console.print_error(f"delivery not met: {report.delivery.why_not}")
 

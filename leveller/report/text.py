@@ -14,6 +14,7 @@ import unicodedata
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 
+from leveller.listen import Place as Doubtful
 from leveller.report.origins import DEFAULT, Row
 from leveller.report.quantities import shown
 from leveller.report.records import TWO_CHANNELS_LU, Fault, FileReading, MixFigures, Place, Report, VoiceFigures
@@ -21,6 +22,7 @@ from leveller.settings import Delivery
 from leveller.units import clock
 
 HEAD, GOOD, BAD, DIM, PLAIN = "head", "good", "bad", "dim", "plain"
+MOST_TO_HEAR = 5
 MOST_PLACES = 4  # printed of a fault; report.json has them all
 LONG_S = 1.0  # a place longer than this is printed with its end
 SHORTEST_NAME = 8
@@ -45,11 +47,14 @@ class Column:
     group: str = ""
 
 
-def format_summary(report: Report, *, out: str, width: int | None = None) -> list[Line]:
-    """The summary of a run: delivery first, then voices, mix, sources, what is left open, where it lies."""
+def format_summary(
+    report: Report, *, out: str, places: Sequence[Doubtful] = (), width: int | None = None
+) -> list[Line]:
+    """The summary of a run: delivery first, then voices, mix, where to listen, sources, what is left open."""
     blocks = [
         _delivery_lines(report, width), _voice_lines(report, width), _other_lines(report, width),
-        _mix_lines(report.mix), _list_lines("Sources", map(fault_text, report.faults), width),
+        _mix_lines(report.mix), _listen_lines(places, width),
+        _list_lines("Sources", map(fault_text, report.faults), width),
         _list_lines("Left open", report.left_open, width), [Line(f"Written to {visible(out)}")],
     ]
     return _joined(blocks)
@@ -210,6 +215,16 @@ def _limiting(mix: MixFigures) -> str:
         return ""
     return (f"at {shown(mix, 'limiting_most_s')}; {mix.limiting_total_s:.1f} s in all, over 3 dB for "
             f"{shown(mix, 'limiting_heavy_pct', unit=True)}")
+
+
+def _listen_lines(places: Sequence[Doubtful], width: int | None) -> list[Line]:
+    """The most doubtful places; listen.csv has them all."""
+    texts = [f"{clock(place.from_s)} {place.track}: {place.decided}, could be {place.could_be}; {place.reason}"
+             for place in places[:MOST_TO_HEAR]]
+    if len(places) > MOST_TO_HEAR:
+        seconds = sum(place.to_s - place.from_s for place in places)
+        texts.append(f"{len(places)} places, {seconds:.0f} s in all: listen.csv and report.html")
+    return _list_lines("Listen here first", texts, width)
 
 
 def _list_lines(title: str, sentences: Iterable[str], width: int | None) -> list[Line]:
