@@ -93,7 +93,7 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
         evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail)
         labels = _relabelled(evidence, programme, seeds)
-    voice = without_knocks(with_leads(evidence.own, m.arrivals, audible_db, coupling), m.levels)
+    voice = without_knocks(with_leads(evidence, m.arrivals, coupling), m.levels)
     margin = margins(np.where(programme[:, None], voice, 0))
     own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)
     return Activity(

@@ -1,9 +1,9 @@
 """Arrival times as evidence: a microphone that clearly hears first has its own voice.
 
-Where microphones hear everybody almost alike (far from the mouths, or all on lapels), levels say little and arrival
-times still tell who speaks. A clear lead (`measure.arrival`) opens its microphone; that a microphone does not lead
-closes nothing, since of two people who talk at once only one can. Where levels separate well, the lead must be
-clearer to count: there it can only add errors.
+Where a microphone far from its mouth hears everybody almost alike, levels say little and arrival times still tell who
+speaks. There a clear lead (`measure.arrival`) opens its microphone; that a microphone does not lead closes nothing,
+since of two people who talk at once only one can. Where levels separate, leads have no say, nor against the levels of the moment: an
+air conditioner that all microphones hear leads somewhere too.
 """
 
 from __future__ import annotations
@@ -11,28 +11,30 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
+from leveller.attribute.bleed import Evidence
 from leveller.attribute.coupling import LEAST_EVER, Coupling
 from leveller.attribute.seeds import AUDIBLE_DB, three
 from leveller.measure.arrival import Arrivals
 
 NATS = 1.0  # what a clear lead says for own voice, per hop
-LEAD = 0.25
-LEAD_WHERE_ALIKE = 0.15
+LEAD = 0.15
+CONTRADICTED_DB = -2.0  # own-to-bleed ratio under which levels speak against the lead
 ALIKE_DB = -5.0  # coupling over all bands: these two microphones hear a voice almost alike
 
 Grid = npt.NDArray[np.float32]
 
 
-def with_leads(evidence: Grid, arrivals: Arrivals, audible_db: Grid, coupling: Coupling) -> Grid:
+def with_leads(evidence: Evidence, arrivals: Arrivals, coupling: Coupling) -> Grid:
     """Evidence in which leading microphones have at least `NATS` for own voice, shape=(hops, tracks)."""
-    inside = arrivals.hop < len(evidence)
+    inside = arrivals.hop < len(evidence.own)
     hop, lead = arrivals.hop[inside], three(arrivals.lead[inside])
     if len(hop) < 2:
-        return evidence
+        return evidence.own
     first = lead.argmax(axis=1)
-    wanted = np.where(_alike(coupling), LEAD_WHERE_ALIKE, LEAD)[first]
-    clear = (lead.max(axis=1) > wanted) & (audible_db[hop, first] > AUDIBLE_DB)
-    out = evidence.copy()
+    clear = _alike(coupling)[first] & (lead.max(axis=1) > LEAD)
+    clear &= evidence.audible_db[hop, first] > AUDIBLE_DB
+    clear &= evidence.own_to_bleed_db[hop, first] > CONTRADICTED_DB
+    out = evidence.own.copy()
     apart = int(hop[1] - hop[0])
     for offset in range(-(apart // 2), apart - apart // 2):
         at = np.clip(hop[clear] + offset, 0, len(out) - 1)
