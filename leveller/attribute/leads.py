@@ -2,8 +2,8 @@
 
 Where a microphone far from its mouth hears everybody almost alike, levels say little and arrival times still tell who
 speaks. There a clear lead (`measure.arrival`) opens its microphone; that a microphone does not lead closes nothing,
-since of two people who talk at once only one can. Where levels separate, leads have no say, nor against the levels of the moment: an
-air conditioner that all microphones hear leads somewhere too.
+since of two people who talk at once only one can. Where levels separate, leads have no say, nor against the levels of
+the moment: an air conditioner that all microphones hear leads somewhere too.
 """
 
 from __future__ import annotations
