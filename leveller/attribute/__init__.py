@@ -15,7 +15,8 @@ The story, each step a module:
 
 `lag` looks for voices that arrive late somewhere (a call, a clock of its own) before the first round.
 
-Nothing here depends on how the recording gains were set, and voice activity is evidence, never a veto.
+Nothing here depends on how the recording gains were set. Voice activity is evidence, never a veto: it says from which
+hops couplings may be learnt (6), and opens and closes nothing by itself.
 """
 
 from __future__ import annotations
@@ -29,7 +30,7 @@ import numpy.typing as npt
 from leveller.attribute.bleed import CLIP, Evidence, evidence_of
 from leveller.attribute.coupling import NONE_DB, Coupling, estimate_coupling
 from leveller.attribute.decode import margins
-from leveller.attribute.floor import noise_floor, quietest_db
+from leveller.attribute.floor import floor_of, noise_floor, quietest_db
 from leveller.attribute.knobs import Step, knob_steps
 from leveller.attribute.knocks import without_knocks
 from leveller.attribute.lag import find_lags
@@ -84,7 +85,8 @@ def attribute(m: Measurements, session: Session) -> Activity:
 
 def _decided(m: Measurements, programme: Bools) -> Activity:
     """The story above, over voice tracks only."""
-    floor_db = noise_floor(m.levels)
+    quiet_db = quietest_db(m.levels)
+    floor_db = floor_of(quiet_db)
     audible_db = _audible(m, floor_db)
     tail = tail_db_per_hop(m.levels, floor_db)
     lags = find_lags(audible_db, labels_by_level(m, audible_db, programme))
@@ -92,14 +94,14 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
     for _ in range(ROUNDS):
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
         evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail)
-        labels = _relabelled(evidence, programme, seeds)
+        labels = _relabelled(evidence, programme[:, None] & m.voiced, seeds)
     voice = without_knocks(with_leads(evidence, m.arrivals, coupling), m.levels)
     margin = margins(np.where(programme[:, None], voice, 0))
     own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)
     return Activity(
         own=own, bleed=_bleed(own, evidence), margin=margin, own_to_bleed_db=evidence.own_to_bleed_db,
         audible_db=evidence.audible_db, floor_db=floor_db, coupling=coupling, programme=programme,
-        steps=tuple(knob_steps(quietest_db(m.levels), level_to_db(m.voice_levels), own)))
+        steps=tuple(knob_steps(quiet_db, level_to_db(m.voice_levels), own)))
 
 
 def _nobody(m: Measurements, programme: Bools) -> Activity:
@@ -156,8 +158,8 @@ def _audible(m: Measurements, floor_db: Grid) -> Grid:
     return out
 
 
-def _relabelled(evidence: Evidence, programme: Bools, seeds: Labels) -> Labels:
-    """Hops in which one microphone clearly has its own voice and all others clearly have not.
+def _relabelled(evidence: Evidence, voiced: Bools, seeds: Labels) -> Labels:
+    """Hops in which one microphone clearly has its own voice, voice activity agrees, and all others clearly have not.
 
     A person of whom this finds less than the seeds did keeps the seeds: microphones that hear everybody almost alike
     have no clear hops.
@@ -167,7 +169,7 @@ def _relabelled(evidence: Evidence, programme: Bools, seeds: Labels) -> Labels:
     clear = (evidence.score[rows, best] > CLEARLY_OWN) & (evidence.audible_db[rows, best] > CLEARLY_AUDIBLE_DB)
     if evidence.score.shape[1] > 1:
         clear &= np.partition(evidence.score, -2, axis=1)[:, -2] < CLEARLY_NOT
-    labels = np.where(clear & programme, best, NOBODY).astype(np.int16)
+    labels = np.where(clear & voiced[rows, best], best, NOBODY).astype(np.int16)
     for person in range(evidence.score.shape[1]):
         if np.count_nonzero(labels == person) < KEPT_SEEDS * np.count_nonzero(seeds == person):
             labels[(seeds == person) & (labels == NOBODY)] = person

@@ -28,7 +28,11 @@ FloorDb = npt.NDArray[np.float32]
 
 def noise_floor(levels: Levels) -> FloorDb:
     """Floor in dB, shape=(seconds, tracks, bands); `NONE_DB` for a track that is digitally silent throughout."""
-    quiet = quietest_db(levels)
+    return floor_of(quietest_db(levels))
+
+
+def floor_of(quiet: FloorDb) -> FloorDb:
+    """The same from the quietest moments, shape=(seconds, tracks, bands), nan where there is none."""
     floor = np.full(quiet.shape, np.nan, np.float32)
     for second in range(len(quiet)):
         before = _low(quiet[max(0, second - WINDOW_S + 1) : second + 1])
