@@ -94,7 +94,7 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
     for _ in range(ROUNDS):
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
         evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail)
-        labels = _relabelled(evidence, programme[:, None] & m.voiced, seeds)
+        labels = _relabelled(evidence, programme[:, None] & _near(m.voiced), seeds)
     voice = without_knocks(with_leads(evidence, m.arrivals, coupling), m.levels)
     margin = margins(np.where(programme[:, None], voice, 0))
     own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)
