@@ -27,11 +27,11 @@ from leveller.errors import InputError, OutputError
 from leveller.riff import (
     RIFF_LIMIT,
     FloatSpill,
+    FloatWav,
     append_chunks,
     clear_peak_time,
     missing_bytes,
     read_chunks,
-    scale_float_wav,
 )
 from leveller.samples import (
     AudioSource,
@@ -49,9 +49,9 @@ from leveller.samples import (
 from leveller.units import HOPS_PER_S
 
 __all__ = [
-    "AudioSource", "FileFacts", "FloatSpill", "Part", "Preview", "Resampler", "TrackReader", "WavWriter",
+    "AudioSource", "FileFacts", "FloatSpill", "FloatWav", "Part", "Preview", "Resampler", "TrackReader", "WavWriter",
     "append_chunks", "clock_rate_hz", "open_readers", "parts_of", "pieces", "preview", "probe", "read_chunks",
-    "scale_float_wav", "spread_starts",
+    "spread_starts",
 ]
 
 Kind = Literal["float32", "pcm24", "pcm16"]

@@ -20,13 +20,14 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import FloatSpill, TrackReader, open_readers, probe
+from leveller.audio import TrackReader, open_readers, probe
 from leveller.errors import InputError, SettingsError
 from leveller.folder import OutputFolder
 from leveller.lanes import walk
 from leveller.measure import OnProgress
 from leveller.names import safe_name, unique_names
 from leveller.render.mix import BLOCK_S, Bus, Mix
+from leveller.render.programme import SpilledSum, summed
 from leveller.samples import FileFacts
 from leveller.session import Session, Track, audio_files
 from leveller.settings import Settings, delivery_named
@@ -83,20 +84,20 @@ def deliver_cut(session: Session, folder: OutputFolder, on_progress: OnProgress)
     """Sum the files of a cut and deliver the sum as mix.wav of the folder."""
     frames = round(BLOCK_S * session.rate_hz)
     length_s = session.frames / session.rate_hz
-    with (FloatSpill(folder.work / ".sum", session.mix_channels) as spill, open_readers(session) as readers):
-        bus = Bus(session.rate_hz, session.mix_channels, spill)
+    with (SpilledSum(folder.work / ".sum", session.rate_hz, session.mix_channels, frames) as spilled,
+          open_readers(session) as readers):
+        bus = Bus(session.rate_hz, session.mix_channels)
 
         def step(lane: int, block: int) -> Samples:
             return _placed(readers[lane], min(frames, session.frames - block * frames), session.mix_channels)
 
         for block, row in enumerate(walk(step, lanes=len(readers), blocks=-(-session.frames // frames))):
-            total = row[0].copy()
-            for part in row[1:]:
-                total += part
+            total = summed(row)
             bus.push(total)
+            spilled.append(total)
             on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
         repaired = tuple(reader.repaired_frames for reader in readers)
-        mix = bus.deliver(folder.work / "mix.wav", session.delivery, session.settings.limiter, frames, on_progress)
+        mix = bus.deliver(folder.work / "mix.wav", spilled, session.delivery, session.settings.limiter, on_progress)
     return Finished(session, mix, repaired, folder.path)
 
 

@@ -24,7 +24,6 @@ from leveller.errors import InputError, OutputError
 
 UNKNOWN_SIZE = 0xFFFFFFFF  # EBU Tech 3306: the size stands in ds64; in plain RIFF it marks a stream of unknown length
 RIFF_LIMIT = 0xFFFFFFFF
-BLOCK_BYTES = 1 << 20
 MOST_CHUNKS = 10_000  # our choice: files have a dozen; a file of nothing but empty chunks is not walked for hours
 
 Samples = npt.NDArray[np.float32]
@@ -86,24 +85,67 @@ def append_chunks(path: Path, chunks: Sequence[tuple[bytes, bytes]]) -> None:
         raise OutputError(f"{path}: cannot be written ({error.strerror})") from error
 
 
-def scale_float_wav(path: Path, gain: float) -> None:
-    """Multiply a finished 32-bit float WAV file by a linear gain, in place; the peaks it notes are scaled as well."""
-    chunks = read_chunks(path)
-    offset, size = chunks[b"data"]
-    factor = np.float32(gain)
-    buffer = np.empty(BLOCK_BYTES // 4, "<f4")
-    try:
-        with open(path, "r+b", buffering=0) as file:
-            for at in range(offset, offset + size, BLOCK_BYTES):
-                part = buffer[: min(BLOCK_BYTES, offset + size - at) // 4]
-                file.seek(at)
-                _read_all(file, _bytes_of(part), path)
-                part *= factor
-                file.seek(at)
-                _write_all(file, _bytes_of(part))
-            _scale_peaks(file, chunks, factor)
-    except OSError as error:
-        raise OutputError(f"{path}: cannot be written ({error.strerror})") from error
+class FloatWav:
+    """A finished 32-bit float WAV file, walked block by block; a block may be put back changed. A context manager."""
+
+    def __init__(self, path: Path, channels: int) -> None:
+        self.path = path
+        self._channels = channels
+        self._chunks = read_chunks(path)
+        self._offset, size = self._chunks[b"data"]
+        self.frames = size // (4 * channels)
+        self._at, self._last = 0, 0  # frames: of the next block, of the one read last
+        try:
+            self._file = open(path, "r+b", buffering=0)  # noqa: SIM115 (closed by close)
+        except OSError as error:
+            raise OutputError(f"{path}: cannot be opened ({error.strerror})") from error
+
+    def __enter__(self) -> FloatWav:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def rewind(self) -> None:
+        """Start again at the first frame."""
+        self._at = 0
+
+    def read(self, frames: int) -> Samples:
+        """The next frames in a new array, `(frames,)` or `(frames, channels)`; fewer at the end."""
+        count = min(frames, self.frames - self._at)
+        block = np.empty((count,) if self._channels == 1 else (count, self._channels), "<f4")
+        try:
+            self._seek(self._at)
+            _read_all(self._file, _bytes_of(block), self.path)
+        except OSError as error:
+            raise OutputError(f"{self.path}: cannot be read back ({error.strerror})") from error
+        self._last, self._at = self._at, self._at + count
+        return block
+
+    def put_back(self, block: Samples) -> None:
+        """Write the block in the place of the one read last, whose shape it has."""
+        try:
+            self._seek(self._last)
+            _write_all(self._file, _bytes_of(np.ascontiguousarray(block, "<f4")))
+        except OSError as error:
+            raise OutputError(f"{self.path}: cannot be written ({error.strerror})") from error
+
+    def scale_peaks(self, factor: float) -> None:
+        """Scale the peak of each channel that the file notes in its PEAK chunk: version, time, (value, frame) each."""
+        offset, size = self._chunks.get(b"PEAK", (0, 0))
+        for at in range(offset + 8, offset + size - 7, 8):
+            self._file.seek(at)
+            (value,) = struct.unpack("<f", self._file.read(4))
+            self._file.seek(at)
+            self._file.write(struct.pack("<f", abs(np.float32(value) * np.float32(factor))))
+
+    def close(self) -> None:
+        """Close the file; closing twice does no harm."""
+        self._file.close()
+
+    def _seek(self, frame: int) -> None:
+        """Go to a frame of the audio."""
+        self._file.seek(self._offset + 4 * self._channels * frame)
 
 
 def clear_peak_time(path: Path) -> None:
@@ -202,18 +244,6 @@ def _set_riff_size(file: BinaryIO, size: int, path: Path) -> None:
         file.write(struct.pack("<Q", size))
     else:
         raise OutputError(f"{path}: not a WAV file, no chunk can be added")
-
-
-def _scale_peaks(file: BinaryIO, chunks: dict[bytes, tuple[int, int]], factor: np.float32) -> None:
-    """Scale the peak of each channel in the PEAK chunk: version, time, then (value, frame) a channel."""
-    if b"PEAK" not in chunks:
-        return
-    offset, size = chunks[b"PEAK"]
-    for at in range(offset + 8, offset + size - 7, 8):
-        file.seek(at)
-        (value,) = struct.unpack("<f", file.read(4))
-        file.seek(at)
-        file.write(struct.pack("<f", abs(np.float32(value) * factor)))
 
 
 def _bytes_of(block: Samples) -> memoryview:

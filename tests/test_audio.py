@@ -405,20 +405,30 @@ def fill(path: Path, kind: Any) -> None:
 
 
 @pytest.mark.parametrize("expected_frames", [0, 2**30])
-def test_scaling_in_place_is_one_product_a_sample(tmp_path: Path, expected_frames: int) -> None:
-    """Every sample is multiplied once in float32, the noted peak too; header and chunks stay as they were."""
-    x = noise(riff.BLOCK_BYTES // 4 + 1000)
-    with audio.WavWriter(tmp_path / "x.wav", RATE_HZ, 1, "float32", expected_frames=expected_frames) as writer:
+@pytest.mark.parametrize("channels", [1, 2])
+def test_blocks_put_back_change_the_samples_alone(tmp_path: Path, expected_frames: int, channels: int) -> None:
+    """A float file walked twice and put back changed holds the changed samples and peaks; its chunks stay."""
+    x = noise(10_000, channels)
+    with audio.WavWriter(tmp_path / "x.wav", RATE_HZ, channels, "float32", expected_frames=expected_frames) as writer:
         writer.write(x)
     audio.append_chunks(tmp_path / "x.wav", [(b"memo", b"kept")])
-    audio.scale_float_wav(tmp_path / "x.wav", 0.7)
-    assert np.array_equal(soundfile.read(tmp_path / "x.wav", dtype="float32")[0], x * np.float32(0.7))
+    with audio.FloatWav(tmp_path / "x.wav", channels) as file:
+        assert file.frames == len(x)
+        for factor in (np.float32(0.7), np.float32(-0.5)):
+            file.rewind()
+            while len(block := file.read(777)):
+                file.put_back(block * factor)
+        file.scale_peaks(-0.35)
+    read = soundfile.read(tmp_path / "x.wav", dtype="float32")[0]
+    assert np.array_equal(read, x * np.float32(0.7) * np.float32(-0.5))
     data = (tmp_path / "x.wav").read_bytes()
     chunks = audio.read_chunks(tmp_path / "x.wav")
-    assert data[chunks[b"memo"][0] :] == b"kept"
-    if b"PEAK" in chunks:
-        (peak,) = struct.unpack_from("<f", data, chunks[b"PEAK"][0] + 8)
-        assert peak == pytest.approx(0.7 * np.max(np.abs(x)), rel=1e-6)
+    assert data[chunks[b"memo"][0] :][:4] == b"kept"
+    assert (b"PEAK" in chunks) == (expected_frames == 0)  # RF64 files have none
+    if b"PEAK" not in chunks:
+        return
+    peaks = struct.unpack_from("<" + "fI" * channels, data, chunks[b"PEAK"][0] + 8)[::2]
+    assert peaks == pytest.approx(0.35 * np.abs(x.reshape(-1, channels)).max(axis=0), rel=1e-6)
 
 
 @pytest.mark.parametrize(("frames", "expected_frames"), [(999, 0), (1000, 0), (999, 2**31)])

@@ -16,8 +16,8 @@ import leveller
 
 PACKAGE = Path(leveller.__file__).parent
 ORDER = (  # the design: each room may import those before it (and its own modules), never those after it
-    "errors", "units", "names", "riff", "samples", "settings", "spreadsheet", "folder", "desk", "lanes", "decoder",
-    "bwf", "ixml", "audio", "sessionfile", "defaults", "takes", "drafts", "duplicates", "session", "season",
+    "errors", "units", "names", "riff", "samples", "settings", "spreadsheet", "folder", "desk", "lanes", "recursion",
+    "decoder", "bwf", "ixml", "audio", "sessionfile", "defaults", "takes", "drafts", "duplicates", "session", "season",
     "fingerprint", "measure", "align", "attribute", "plan", "automation", "edits", "kept", "listen", "render", "marks",
     "cut", "findings", "advice", "quiet", "inspection", "report", "reading", "pipeline", "worker", "workers", "cluster",
     "batch", "console", "cli", "__main__")

@@ -13,8 +13,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from leveller.recursion import recursion
+
 CHANGE_COST = 2.0  # nats
-STRETCH_HOPS = 30_000
 SURE_OWN = ((0.0, 1.5, 3.0, 4.6, 5.2, 5.5), (0.72, 0.78, 0.86, 0.91, 0.98, 0.99))  # margin in nats, share right
 SURE_NOT = ((0.0, 1.0, 2.0, 3.9, 4.1), (0.76, 0.82, 0.93, 0.95, 0.995))
 
@@ -43,12 +44,4 @@ def sure_of(margin: npt.NDArray[np.floating[Any]]) -> Grid:
 
 def _leads(column: Grid, cost: float) -> npt.NDArray[np.float64]:
     """Lead of own after each hop, given the hops up to it."""
-    out = np.empty(len(column))
-    lead = 0.0
-    for start in range(0, len(column), STRETCH_HOPS):  # plain Python is fastest here, and lists of floats are large
-        leads = []
-        for value in column[start : start + STRETCH_HOPS].tolist():
-            lead = (cost if lead > cost else -cost if lead < -cost else lead) + value
-            leads.append(lead)
-        out[start : start + len(leads)] = leads
-    return out
+    return recursion(column, lambda lead, value: np.minimum(np.maximum(lead, -cost), cost) + value)

@@ -86,7 +86,6 @@ class LoudnessMeter:
         if len(self._weights) != channels:
             raise ValueError(f"{len(self._weights)} channel weights for {channels} channel(s)")
         self._edges = np.asarray(hop_to_frame(np.arange(HOPS_PER_S + 1), rate_hz))
-        self._lengths = np.diff(self._edges)
         self._pieces = Pieces(rate_hz, channels)  # one second holds 100 whole cells at any rate
         self._state = np.zeros((channels, len(self._sos), 2))
         self._cells: list[Cells] = []
@@ -111,15 +110,40 @@ class LoudnessMeter:
 
     def _measure(self, piece: Piece, state: npt.NDArray[np.float64]) -> tuple[Cells, npt.NDArray[np.float64]]:
         """Cells of one second and the filter state after it."""
-        cells = np.zeros(HOPS_PER_S)
-        after = np.zeros_like(state)
-        for channel, weight in enumerate(self._weights):
-            if weight and (state[channel].any() or piece[channel].any()):
-                weighted, after[channel] = _filtered(self._sos, piece[channel], state[channel])
-                np.square(weighted, out=weighted)
-                cells += weight * np.add.reduceat(weighted, self._edges[:-1]) / self._lengths
+        cells, after = weighted_cells(piece, self._edges, sos=self._sos, weights=self._weights, state=state)
         after[np.abs(after) < _STATE_FLOOR] = 0.0
         return cells, after
+
+
+def weighted_cells(
+    samples: Piece, edges: npt.NDArray[np.int64], *, sos: npt.NDArray[np.float64], weights: Sequence[float],
+    state: npt.NDArray[np.float64],
+) -> tuple[Cells, npt.NDArray[np.float64]]:
+    """K-weighted power between edges, and the filter's state after the last sample.
+
+    Parameters
+    ----------
+    samples : shape=(channels, frames)
+    edges : shape=(cells + 1,)
+        Frames at which cells begin, and the one at which the last ends.
+    sos : shape=(2, 6)
+        `k_weighting` of the rate.
+    weights : channel weights
+    state : shape=(channels, 2, 2)
+        Of the filter before the first sample; zeros after silence.
+
+    Returns
+    -------
+    cells : shape=(cells,); state : shape=(channels, 2, 2)
+    """
+    cells = np.zeros(len(edges) - 1)
+    after = np.zeros_like(state)
+    for channel, weight in enumerate(weights):
+        if weight and (state[channel].any() or samples[channel].any()):
+            weighted, after[channel] = _filtered(sos, samples[channel], state[channel])
+            np.square(weighted, out=weighted)
+            cells += weight * np.add.reduceat(weighted[: edges[-1]], edges[:-1]) / np.diff(edges)
+    return cells, after
 
 
 def channel_weights(channels: int) -> tuple[float, ...]:
@@ -259,5 +283,5 @@ def _filtered(
     """Samples through the sections in float64, and the state after them."""
     from scipy.signal import sosfilt
 
-    weighted, after = sosfilt(sos, samples.astype(np.float64), zi=state)
+    weighted, after = sosfilt(sos, samples, zi=state)  # in float64, as the sections are
     return weighted, after

@@ -32,7 +32,7 @@ CLIPPED_FRAMES = 3  # common practice, no source: fewer in a row may be a chance
 CLIPPED_MERGE_S = 0.2  # a choice of ours: clipped runs closer than this are one place to listen to
 INTERPOLATOR_TAPS = 49  # libebur128
 _GROUP_FRAMES = 12  # groups of about this many frames cost least in product and maxima (measured: 8 to 16 alike)
-_PIECE_CELLS = 256  # a piece of true peak, about 0.26 s: its buffers stay in the second-level cache
+PIECE_CELLS = 256  # a piece of true peak, about 0.26 s: its buffers stay in the second-level cache
 
 
 @dataclass(frozen=True)
@@ -130,64 +130,24 @@ class PeakMeter:
         return runs[:-1] + out
 
 
-class TruePeakMeter:
-    """Streaming true peak; `push` blocks, then `result`.
+class PeakCells:
+    """True peak of the cells of one piece; pieces are those of `pieces(channels)`, shared by all who measure."""
 
-    Parameters
-    ----------
-    rate_hz, channels : int
-    keep_cells : bool
-        Without it only the highest peak is remembered: an hour of cells is 14 MB.
-    """
-
-    def __init__(self, rate_hz: int, channels: int, *, keep_cells: bool = True) -> None:
-        self._rate_hz = rate_hz
+    def __init__(self, rate_hz: int) -> None:
         self.cell_frames = peak_cell_frames(rate_hz)
         self._group = _group_frames(self.cell_frames)
         self._reach = interpolator_reach(rate_hz)
         self._matrix = _interpolation_matrix(oversampling(rate_hz), self._group)
-        piece_frames = self.cell_frames * _PIECE_CELLS
-        self._pieces = Pieces(piece_frames, channels, before=self._reach, after=self._reach)
-        groups = piece_frames // self._group
+        groups = self.cell_frames * PIECE_CELLS // self._group
         self._around = np.empty((self._matrix.shape[1], groups), np.float32)
         self._between = np.empty((self._matrix.shape[0], groups), np.float32)
-        self._keep = keep_cells
-        self._cells = Grown()
-        self._count = 0  # cells so far
-        self._highest = (0.0, 0)  # linear, cell
 
-    def push(self, block: npt.NDArray[Any]) -> None:
-        """Take a block, shape=(frames,) or (frames, channels), of any length."""
-        for piece in self._pieces.push(block):
-            cells = self._measure(piece)
-            self._highest = self._higher(cells)
-            self._count += len(cells)
-            if self._keep:
-                self._cells.append(cells)
+    def pieces(self, channels: int) -> Pieces:
+        """The cutter that makes pieces of `PIECE_CELLS` cells with what the interpolator needs on either side."""
+        return Pieces(self.cell_frames * PIECE_CELLS, channels, before=self._reach, after=self._reach)
 
-    def cells(self) -> npt.NDArray[np.float32]:
-        """True peak of each peak cell so far, linear, shape=(cells,)."""
-        done = self._cells.rows(
-            *(self._measure(piece)[: -(-frames // self.cell_frames)] for piece, frames in self._pieces.rest()))
-        return np.concatenate(done) if done else np.zeros(0, np.float32)
-
-    def result(self) -> TruePeakReading:
-        """The reading over what was pushed so far; without cells where none are kept."""
-        peak, at = self._highest
-        for piece, frames in self._pieces.rest():
-            peak, at = self._higher(self._measure(piece)[: -(-frames // self.cell_frames)])
-        cells = self.cells() if self._keep else np.zeros(0, np.float32)
-        if not peak:
-            return TruePeakReading(-math.inf, 0.0, cells, self.cell_frames)
-        return TruePeakReading(gain_to_db(peak), (at + 0.5) * self.cell_frames / self._rate_hz, cells, self.cell_frames)
-
-    def _higher(self, cells: npt.NDArray[np.float32]) -> tuple[float, int]:
-        """The highest peak with these cells, and its cell."""
-        at = int(cells.argmax())
-        return (float(cells[at]), self._count + at) if cells[at] > self._highest[0] else self._highest
-
-    def _measure(self, piece: Piece) -> npt.NDArray[np.float32]:
-        """Cells of one piece, the largest over the channels."""
+    def measure(self, piece: Piece) -> npt.NDArray[np.float32]:
+        """Cells of one piece, linear, the largest over the channels, shape=(PIECE_CELLS,)."""
         highest = np.zeros(self._around.shape[1], np.float32)
         for channel in piece:
             step = channel.strides[0]
@@ -205,6 +165,57 @@ class TruePeakMeter:
         for later in range(1, groups):
             np.maximum(cells, highest[later::groups], out=cells)
         return cells
+
+
+class TruePeakMeter:
+    """Streaming true peak; `push` blocks, then `result`.
+
+    Parameters
+    ----------
+    rate_hz, channels : int
+    keep_cells : bool
+        Without it only the highest peak is remembered: an hour of cells is 14 MB.
+    """
+
+    def __init__(self, rate_hz: int, channels: int, *, keep_cells: bool = True) -> None:
+        self._rate_hz = rate_hz
+        self._between = PeakCells(rate_hz)
+        self.cell_frames = self._between.cell_frames
+        self._pieces = self._between.pieces(channels)
+        self._keep = keep_cells
+        self._cells = Grown()
+        self._count = 0  # cells so far
+        self._highest = (0.0, 0)  # linear, cell
+
+    def push(self, block: npt.NDArray[Any]) -> None:
+        """Take a block, shape=(frames,) or (frames, channels), of any length."""
+        for piece in self._pieces.push(block):
+            cells = self._between.measure(piece)
+            self._highest = self._higher(cells)
+            self._count += len(cells)
+            if self._keep:
+                self._cells.append(cells)
+
+    def cells(self) -> npt.NDArray[np.float32]:
+        """True peak of each peak cell so far, linear, shape=(cells,)."""
+        done = self._cells.rows(
+            *(self._between.measure(piece)[: -(-frames // self.cell_frames)] for piece, frames in self._pieces.rest()))
+        return np.concatenate(done) if done else np.zeros(0, np.float32)
+
+    def result(self) -> TruePeakReading:
+        """The reading over what was pushed so far; without cells where none are kept."""
+        peak, at = self._highest
+        for piece, frames in self._pieces.rest():
+            peak, at = self._higher(self._between.measure(piece)[: -(-frames // self.cell_frames)])
+        cells = self.cells() if self._keep else np.zeros(0, np.float32)
+        if not peak:
+            return TruePeakReading(-math.inf, 0.0, cells, self.cell_frames)
+        return TruePeakReading(gain_to_db(peak), (at + 0.5) * self.cell_frames / self._rate_hz, cells, self.cell_frames)
+
+    def _higher(self, cells: npt.NDArray[np.float32]) -> tuple[float, int]:
+        """The highest peak with these cells, and its cell."""
+        at = int(cells.argmax())
+        return (float(cells[at]), self._count + at) if cells[at] > self._highest[0] else self._highest
 
 
 def peak_cell_frames(rate_hz: int) -> int:

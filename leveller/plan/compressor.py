@@ -12,6 +12,7 @@ import numpy.typing as npt
 
 from leveller import settings as settings_
 from leveller.plan.curves import compressor_gain_db, one_pole
+from leveller.recursion import recursion
 from leveller.units import HOP_S, Bools
 
 Grid = npt.NDArray[np.float32]
@@ -39,16 +40,13 @@ def compressor_nodes_db(level_db: Grid, own: Bools, *, settings: settings_.Compr
     return out
 
 
-def _smoothed(wanted: npt.NDArray[np.floating], settings: settings_.Compressor) -> list[float]:
+def _smoothed(wanted: npt.NDArray[np.floating], settings: settings_.Compressor) -> npt.NDArray[np.float64]:
     """One-pole smoothing with separate attack and release."""
     attack, release = one_pole(settings.attack_s, HOP_S), one_pole(settings.release_s, HOP_S)
-    now = 0.0
-    out = []
-    for target in wanted.tolist():
-        if target != now:
-            pole = attack if target < now else release
-            now = target + pole * (now - target)
-            if target == 0.0 and now > -_DONE_DB:
-                now = 0.0
-        out.append(now)
-    return out
+
+    def step(now: npt.NDArray[np.float64], target: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:
+        after = target + np.where(target < now, attack, release) * (now - target)
+        after[(target == 0.0) & (after > -_DONE_DB)] = 0.0
+        return after
+
+    return recursion(wanted, step)

@@ -1,34 +1,34 @@
 """Stems and their sum, then make-up gain and limiter: no decisions about microphones, only what the plan says.
 
-Pass over the sources: each track is read, gets its gain and its place, and is written as a stem; the sum goes to a
-temporary float file while its loudness and true peak are measured. From these two readings the make-up gain is
-found without touching audio again (`limiter.find_make_up`). One pass over the sum then writes the mix and measures
-it as written; should its loudness or true peak miss by more than the reading can tell, make-up or ceiling are
-corrected and the pass repeated. Last, the stems take the make-up gain in place, so that they add up to the mix
-before the limiter.
+First pass, over the sources: each track is read, gets its gain and its place, and is written as a stem; the sum is only
+measured (loudness, true peak). From these two readings the make-up gain is found without touching audio again
+(`limiter.find_make_up`). Second pass, over the stems: each gets the make-up gain in place, and their sum, after the
+limiter, is written as the mix. Its reading is that of the first sum, measured anew where the limiter was at work
+(`remeter`); should loudness or true peak miss by more than the reading can tell, make-up or ceiling are corrected and
+the pass repeated.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import FloatSpill, TrackReader, WavWriter, file_blocks, open_readers, scale_float_wav
-from leveller.lanes import thread_count, walk
+from leveller.audio import TrackReader, WavWriter, open_readers
+from leveller.lanes import walk
 from leveller.measure.loudness import Loudness, LoudnessMeter, short_term_lufs
-from leveller.measure.peaks import TruePeakMeter
+from leveller.measure.peaks import TruePeakMeter, peak_cell_frames
 from leveller.plan import GainPlan
 from leveller.render.gain import GainCurve
-from leveller.render.limiter import LimiterSummary, MakeUp, apply_nodes, find_make_up, summarise
+from leveller.render.limiter import LimiterSummary, MakeUp, find_make_up, summarise
+from leveller.render.programme import LimitedStems, Programme, ScaledStems, summed
+from leveller.render.remeter import Remeter, Unlimited
 from leveller.session import Session, Track
 from leveller.settings import Delivery, Limiter
-from leveller.units import db_to_gain
 
 Samples = npt.NDArray[np.float32]
 OnProgress = Callable[[str, float, float], None]
@@ -81,43 +81,39 @@ def render(
     frames = round(block_s * session.rate_hz)
     paths = [work / "stems" / f"{track.name}.wav" for track in session.tracks]
     paths[0].parent.mkdir(exist_ok=True)
-    with FloatSpill(work / ".sum", session.mix_channels) as spill:
-        bus = Bus(session.rate_hz, session.mix_channels, spill)
-        _write_stems(session, plan, paths, frames, bus, on_progress)
-        mix = bus.deliver(work / "mix.wav", session.delivery, session.settings.limiter, frames, on_progress)
-    for path in paths:
-        if stems == LEVELS[0]:
-            scale_float_wav(path, float(db_to_gain(mix.make_up_db)))
-        else:
-            _limit_stem(path, mix, session.rate_hz, session.frames, frames)
+    bus = Bus(session.rate_hz, session.mix_channels)
+    _write_stems(session, plan, paths, frames, bus, on_progress)
+    kind = ScaledStems if stems == LEVELS[0] else LimitedStems
+    with kind(paths, session, frames) as programme:
+        mix = bus.deliver(work / "mix.wav", programme, session.delivery, session.settings.limiter, on_progress)
+        programme.keep()
     return mix
 
 
 class Bus:
-    """The sum on its way to the mix: spilled and measured as it grows, then delivered."""
+    """The sum on its way to the mix: measured as it grows, then delivered."""
 
-    def __init__(self, rate_hz: int, channels: int, spill: FloatSpill) -> None:
-        self._rate_hz, self._channels, self._spill = rate_hz, channels, spill
+    def __init__(self, rate_hz: int, channels: int) -> None:
+        self._rate_hz, self._channels = rate_hz, channels
         self._loudness = LoudnessMeter(rate_hz, channels)
         self._peaks = TruePeakMeter(rate_hz, channels)
 
     def push(self, block: Samples) -> None:
-        """Add the next block of the sum."""
-        self._spill.append(block)
+        """Measure the next block of the sum."""
         self._loudness.push(block)
         self._peaks.push(block)
 
     def deliver(
-        self, path: Path, delivery: Delivery, limiter: Limiter, frames: int, on_progress: OnProgress
+        self, path: Path, programme: Programme, delivery: Delivery, limiter: Limiter, on_progress: OnProgress
     ) -> Mix:
         """Write the mix on target under the ceiling; the reading is of what was written."""
-        cells, peak_cells, cell_s = self._loudness.cells(), self._peaks.cells(), self._peaks.cell_frames / self._rate_hz
+        before = Unlimited(self._loudness.cells(), self._peaks.cells())
         del self._loudness, self._peaks  # the sum is complete; an hour of peak cells is 14 MB
         target, ceiling = delivery.target_lufs, delivery.ceiling_dbtp
         for _ in range(MOST_ROUNDS):
-            make_up = find_make_up(
-                cells, peak_cells, target_lufs=target, ceiling_dbtp=ceiling, settings=limiter, cell_s=cell_s)
-            mix = self._write(path, make_up, delivery, frames, cell_s, on_progress)
+            make_up = find_make_up(before.cells, before.peak_cells, target_lufs=target, ceiling_dbtp=ceiling,
+                                   settings=limiter, cell_s=peak_cell_frames(self._rate_hz) / self._rate_hz)
+            mix = self._write(path, programme, before, make_up, delivery, on_progress)
             off = delivery.target_lufs - mix.loudness.integrated_lufs
             over = mix.true_peak_dbtp - delivery.ceiling_dbtp
             if make_up.reason or not math.isfinite(off) or (abs(off) <= LOUDNESS_SLACK_LU and over <= PEAK_SLACK_DB):
@@ -127,25 +123,22 @@ class Bus:
         return mix
 
     def _write(
-        self, path: Path, make_up: MakeUp, delivery: Delivery, frames: int, cell_s: float, on_progress: OnProgress
+        self, path: Path, programme: Programme, before: Unlimited, make_up: MakeUp, delivery: Delivery,
+        on_progress: OnProgress,
     ) -> Mix:
-        """One pass over the sum."""
-        loudness = LoudnessMeter(self._rate_hz, self._channels)
-        peaks = TruePeakMeter(self._rate_hz, self._channels, keep_cells=False)
-        total = self._spill.frames / self._rate_hz
-        at = 0
-        with (ThreadPoolExecutor(thread_count()) as pool,
-              WavWriter(path, self._rate_hz, self._channels, "pcm24", expected_frames=self._spill.frames) as writer):
-            for block in self._spill.blocks(frames):
-                out = apply_nodes(block, make_up.nodes_db, first_frame=at, cell_frames=peaks.cell_frames,
-                                  make_up_db=make_up.make_up_db)
-                list(pool.map(lambda take, out=out: take(out), (writer.write, loudness.push, peaks.push)))
-                at += len(block)
-                on_progress("mix", at / self._rate_hz, total)
-        reading = peaks.result()
-        return Mix(delivery, self._channels, loudness.result(), reading.true_peak_dbtp, reading.true_peak_s,
-                   make_up.make_up_db, make_up.nodes_db, cell_s, summarise(make_up.nodes_db, cell_s=cell_s),
-                   make_up.reason)
+        """One pass over the programme."""
+        meter = Remeter(before, make_up.nodes_db, make_up.make_up_db, self._rate_hz, self._channels)
+        total_s, done = programme.frames / self._rate_hz, 0
+        with WavWriter(path, self._rate_hz, self._channels, "pcm24", expected_frames=programme.frames) as writer:
+            for block in programme.delivered(make_up):
+                writer.write(block)
+                meter.push(block)
+                done += len(block)
+                on_progress("mix", done / self._rate_hz, total_s)
+        cell_s = peak_cell_frames(self._rate_hz) / self._rate_hz
+        peak_dbtp, peak_s = meter.true_peak()
+        return Mix(delivery, self._channels, meter.loudness(), peak_dbtp, peak_s, make_up.make_up_db, make_up.nodes_db,
+                   cell_s, summarise(make_up.nodes_db, cell_s=cell_s), make_up.reason)
 
 
 def _write_stems(
@@ -168,10 +161,7 @@ def _write_stems(
 
         try:
             for block, row in enumerate(walk(step, lanes=len(lanes), blocks=blocks)):
-                total = row[0].copy()
-                for stem in row[1:]:
-                    total += stem
-                bus.push(total)
+                bus.push(summed(row))
                 on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
         finally:
             for lane in lanes:
@@ -201,15 +191,3 @@ def pan_gains(pan: float) -> Samples:
     """Left and right gain of a place from -1 to 1: sine / cosine law, -3.01 dB each in the middle."""
     angle = (pan + 1) * math.pi / 4
     return np.array([math.cos(angle), math.sin(angle)], np.float32)
-
-
-def _limit_stem(path: Path, mix: Mix, rate_hz: int, frames_in_all: int, frames: int) -> None:
-    """Replace a float stem by a 24-bit one that has make-up and the limiter's gain."""
-    limited = path.with_suffix(".limited")
-    at = 0
-    with WavWriter(limited, rate_hz, mix.channels, "pcm24", expected_frames=frames_in_all) as writer:
-        for block in file_blocks(path, frames):
-            writer.write(apply_nodes(block, mix.limiter_db, first_frame=at, cell_frames=round(mix.cell_s * rate_hz),
-                                     make_up_db=mix.make_up_db))
-            at += len(block)
-    limited.replace(path)

@@ -18,6 +18,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import numpy.typing as npt
 
 from leveller.audio import parts_of
 from leveller.automation import text_cell
@@ -27,6 +28,7 @@ from leveller.lanes import thread_count
 from leveller.listen import Place
 from leveller.measure.loudness import SHORT_TERM_CELLS
 from leveller.plan import STATES
+from leveller.render.mix import Mix
 from leveller.report.figures import figures_of
 from leveller.report.quantities import quantities, rounded
 from leveller.report.records import Report, Run
@@ -76,18 +78,28 @@ def write_listen(path: Path, places: Sequence[Place]) -> None:
 def write_mix(path: Path, result: Run) -> None:
     """Make-up, limiter and short-term loudness over time."""
     mix = result.mix
-    length_s = result.session.frames / result.session.rate_hz
-    short_term, step_cells = mix.short_term_lufs, HOPS_PER_S // STEPS_PER_S
+    steps = math.ceil(result.session.frames / result.session.rate_hz * STEPS_PER_S - 1e-9)
     make_up = _number(mix.make_up_db, 2)
-    rows = []
-    for step in range(math.ceil(length_s * STEPS_PER_S - 1e-9)):
-        first, end = (round((step + n) / STEPS_PER_S / mix.cell_s) for n in (0, 1))
-        here = mix.limiter_db[first : end + 1]
-        window = step * step_cells - SHORT_TERM_CELLS
-        loudness = short_term[window] if 0 <= window < len(short_term) else math.nan
-        rows.append(f"{step / STEPS_PER_S:.1f},{make_up},{_number(float(here.min(initial=0.0)), 2)},"
-                    f"{_number(loudness, 1)}\r\n")
-    _write(path, MIX_COLUMNS, rows)
+    limiter, loudness = _cells(_deepest_db(mix, steps), 2), _cells(_short_term_lufs(mix, steps), 1)
+    _write(path, MIX_COLUMNS, [f"{step / STEPS_PER_S:.1f},{make_up},{deepest},{heard}\r\n"
+                               for step, (deepest, heard) in enumerate(zip(limiter, loudness, strict=True))])
+
+
+def _deepest_db(mix: Mix, steps: int) -> npt.NDArray[np.float32]:
+    """The limiter's deepest gain from each step to the next one's first node."""
+    nodes = np.append(mix.limiter_db, np.float32(0))  # behind the end there is nothing to limit
+    edges = np.minimum(np.rint(np.arange(steps + 1) / STEPS_PER_S / mix.cell_s).astype(np.int64), len(nodes) - 1)
+    within = np.minimum.reduceat(nodes, edges[:-1]) if steps else nodes[:0]
+    return np.asarray(np.minimum(within, nodes[edges[1:]]), np.float32)
+
+
+def _short_term_lufs(mix: Mix, steps: int) -> npt.NDArray[np.float64]:
+    """Short-term loudness at each step, nan in the first 3 s."""
+    known = mix.short_term_lufs[:: HOPS_PER_S // STEPS_PER_S]
+    first = SHORT_TERM_CELLS * STEPS_PER_S // HOPS_PER_S
+    out = np.full(steps, np.nan)
+    out[first : first + len(known)] = known[: max(0, steps - first)]
+    return out
 
 
 def write_report(path: Path, report: Report, result: Run, *, stages: Sequence[str] = STAGES) -> None:
@@ -130,6 +142,12 @@ def sources_of(result: Run) -> list[dict[str, Any]]:
 def _number(value: float, decimals: int) -> str:
     """A cell; empty for what is no number. No minus sign before zero."""
     return f"{np.round(value, decimals) + 0.0:.{decimals}f}" if math.isfinite(value) else ""
+
+
+def _cells(values: npt.NDArray[np.floating], decimals: int) -> list[str]:
+    """`_number` of many."""
+    near = np.round(values.astype(np.float64), decimals) + 0.0
+    return [f"{value:.{decimals}f}" if math.isfinite(value) else "" for value in near.tolist()]
 
 
 def _write(path: Path, columns: tuple[str, ...], rows: list[str]) -> None:

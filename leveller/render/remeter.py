@@ -1,0 +1,129 @@
+"""The reading of a delivered mix from that of the same programme before make-up and limiter.
+
+Where the limiter rests, the make-up gain is one factor on every sample, and so its square is one on every K-weighted
+cell and it is one on every peak cell: nothing needs to be measured twice. Where the limiter is at work, and as far
+round it as the K-weighting remembers and the interpolator reaches, the samples that are written are measured as in
+`measure.loudness` and `measure.peaks`. In conversations that is a sixth of the programme (measured: 0.1 to 0.25).
+
+The K-weighting's slowest pole, the high-pass at 38 Hz, has fallen to e^-24 after `MEMORY_CELLS`: so long before a
+stretch the filter starts from rest, and so long after it the stretch still counts as touched.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from leveller.measure.loudness import Cells, Loudness, channel_weights, k_weighting, loudness_of, weighted_cells
+from leveller.measure.peaks import PIECE_CELLS, PeakCells
+from leveller.measure.pieces import Piece, Pieces
+from leveller.render.limiter import Nodes
+from leveller.units import HOPS_PER_S, Bools, db_to_gain, gain_to_db, hop_to_frame
+
+Samples = npt.NDArray[np.float32]
+
+MEMORY_CELLS = 10  # 0.1 s
+
+
+@dataclass(frozen=True)
+class Unlimited:
+    """What was measured of a programme before make-up and limiter."""
+
+    cells: Cells  # K-weighted power per 10 ms
+    peak_cells: Samples  # true peak per peak cell, linear
+
+
+class Remeter:
+    """Streaming: `push` the delivered blocks, then `loudness` and `true_peak`.
+
+    Parameters
+    ----------
+    before : Unlimited
+    nodes_db : shape=(peak cells + 1,)
+        The limiter's gain.
+    make_up_db : float
+    """
+
+    def __init__(self, before: Unlimited, nodes_db: Nodes, make_up_db: float, rate_hz: int, channels: int) -> None:
+        self._rate_hz = rate_hz
+        self._peak_gain = np.float32(db_to_gain(make_up_db))
+        self._peak_cells = before.peak_cells
+        self._between = PeakCells(rate_hz)
+        self._touched_peaks = touched_cells(nodes_db)
+        self._peak_pieces = self._between.pieces(channels)
+        self._at = 0  # peak cell of the next piece
+        self._highest = (0.0, 0)
+
+        self._sos, self._weights = k_weighting(rate_hz), channel_weights(channels)
+        self._state = np.zeros((channels, len(self._sos), 2))  # at rest
+        self._edges = np.asarray(hop_to_frame(np.arange(HOPS_PER_S + 1), rate_hz))
+        self._lead = rate_hz - int(self._edges[HOPS_PER_S - MEMORY_CELLS])
+        self._pieces = Pieces(rate_hz, channels, before=self._lead)
+        self._touched = touched_hops(nodes_db, len(before.cells), self._between.cell_frames / rate_hz)
+        self._cells = before.cells * float(db_to_gain(2 * make_up_db))
+        self._hop = 0
+
+    def push(self, block: Samples) -> None:
+        """Take the next delivered block, shape=(frames,) or (frames, channels)."""
+        for piece in self._pieces.push(block):
+            self._weigh(piece)
+        for piece in self._peak_pieces.push(block):
+            self._look(piece)
+
+    def loudness(self) -> Loudness:
+        """The loudness of everything; nothing may be pushed any more."""
+        for piece, _ in self._pieces.rest():
+            self._weigh(piece)
+        return loudness_of(self._cells)
+
+    def true_peak(self) -> tuple[float, float]:
+        """True peak in dBTP and the middle of its cell in s; nothing may be pushed any more."""
+        for piece, _ in self._peak_pieces.rest():
+            self._look(piece)
+        peak, cell = self._highest
+        at_s = (cell + 0.5) * self._between.cell_frames / self._rate_hz if peak else 0.0
+        return (gain_to_db(peak) if peak else -math.inf), at_s
+
+    def _weigh(self, piece: Piece) -> None:
+        """Measure the touched cells of one second."""
+        first, self._hop = self._hop, self._hop + HOPS_PER_S
+        touched = np.flatnonzero(self._touched[first : self._hop])
+        if not len(touched):
+            return
+        start, end = int(touched[0]), int(touched[-1]) + 1
+        lead = self._edges[(start - MEMORY_CELLS) % HOPS_PER_S] - (self._rate_hz if start < MEMORY_CELLS else 0)
+        edges = self._lead + np.concatenate([[lead], self._edges[start : end + 1]])
+        cells, _ = weighted_cells(piece[:, edges[0] : edges[-1]], edges - edges[0], sos=self._sos,
+                                  weights=self._weights, state=self._state)
+        self._cells[first + start : first + end] = cells[1:]
+
+    def _look(self, piece: Piece) -> None:
+        """The highest peak with this piece."""
+        places = slice(self._at, self._at + PIECE_CELLS)
+        known = self._peak_cells[places]
+        cells = self._between.measure(piece)[: len(known)] if self._touched_peaks[places].any() else known
+        factor = 1.0 if cells is not known else float(self._peak_gain)
+        if len(cells):
+            at = int(cells.argmax())
+            if float(cells[at]) * factor > self._highest[0]:
+                self._highest = float(cells[at]) * factor, self._at + at
+        self._at += PIECE_CELLS
+
+
+def touched_cells(nodes_db: Nodes) -> Bools:
+    """Peak cells in which the limiter works, and their neighbours, into which the interpolator reaches."""
+    working = np.pad((nodes_db[:-1] < 0) | (nodes_db[1:] < 0), 1)
+    return np.asarray(working[:-2] | working[1:-1] | working[2:])
+
+
+def touched_hops(nodes_db: Nodes, hops: int, cell_s: float) -> Bools:
+    """Hops in which the limiter works or whose K-weighting remembers that it did, shape=(hops,)."""
+    out = np.zeros(hops + 1, np.bool_)
+    at = np.flatnonzero(nodes_db < 0)
+    for beside_s in (-cell_s, cell_s):  # a node's gain reaches to its neighbours
+        out[np.clip(((at * cell_s + beside_s) * HOPS_PER_S).astype(np.int64), 0, hops)] = True
+    total = np.concatenate([np.zeros(MEMORY_CELLS + 1, np.int64), np.cumsum(out[:hops])])
+    return np.asarray(total[MEMORY_CELLS + 1 :] > total[: -MEMORY_CELLS - 1])
