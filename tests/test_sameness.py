@@ -15,7 +15,6 @@ import runs
 import leveller
 from leveller import cut, lanes, pipeline
 from leveller.pipeline import finish, process, render_again
-from leveller.render import mix
 from leveller.report import tables
 from leveller.settings import Settings
 
@@ -37,7 +36,7 @@ def results(tmp_path_factory: pytest.TempPathFactory) -> list[Path]:
 def run_all(talk: Path, folder: Path, block_s: float, threads: int) -> None:
     """Everything in blocks of so many seconds on so many threads."""
     with pytest.MonkeyPatch.context() as patch:
-        for module in (lanes, mix, tables):
+        for module in (lanes, tables):
             patch.setattr(module, "thread_count", lambda: threads)
         patch.setattr(pipeline, "measure", in_blocks(pipeline.measure, block_s))
         patch.setattr(pipeline, "render", in_blocks(pipeline.render, block_s))

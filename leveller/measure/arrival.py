@@ -113,11 +113,17 @@ class ArrivalMeter:
 
         first = self._next - self._start
         spectra = np.zeros((self._tracks, count, _BACK // 2 + 1), np.complex64)
+        shape, strides = (count, WINDOW), (self._stride * self._buffer.itemsize, self._buffer.itemsize)
+        windows = np.empty(shape, np.float32)
         for track in range(self._tracks):
-            view = np.lib.stride_tricks.sliding_window_view(self._buffer[track, first:], WINDOW)
-            cut = scipy.fft.rfft(view[:: self._stride][:count] * self._taper, axis=1)[:, self._low : self._high]
-            modulus = np.abs(cut)
-            spectra[track, :, self._low : self._high] = cut / np.maximum(modulus, np.float32(1e-20))
+            view = np.lib.stride_tricks.as_strided(self._buffer[track, first:], shape, strides, writeable=False)
+            spectrum = scipy.fft.rfft(np.multiply(view, self._taper, out=windows), axis=1)
+            cut = spectrum[:, self._low : self._high]
+            modulus = np.square(cut.real)
+            modulus += np.square(cut.imag)
+            np.sqrt(modulus, out=modulus)
+            np.divide(np.float32(1), np.maximum(modulus, np.float32(1e-20), out=modulus), out=modulus)
+            np.multiply(cut, modulus, out=spectra[track, :, self._low : self._high])
         lag = np.empty((count, len(self._pairs)), np.int16)
         strength = np.empty((count, len(self._pairs)), np.float32)
         for p, (i, j) in enumerate(self._pairs):

@@ -44,12 +44,9 @@ class BandMeter:
         self._pieces = Pieces(_PIECE_HOPS * HOP, 1, before=margin, after=margin)
         ramp = np.arange(WINDOW) / WINDOW
         self._window = (0.5 - 0.5 * np.cos(2 * np.pi * ramp)).astype(np.float32)
-        self._mean = self._window / self._window.sum()
-        frequencies = np.arange(WINDOW // 2 + 1) * ANALYSIS_HZ / WINDOW
-        self._starts = np.searchsorted(frequencies, EDGES_HZ)
-        self._rumble = np.searchsorted(frequencies, RUMBLE_HZ)
-        self._scale = np.float32(2.0 / (WINDOW * float((self._window**2).sum())))
-        self._k_weight = k_response_power(frequencies).astype(np.float32)
+        self._windowed = np.empty((_PIECE_HOPS + 2, WINDOW), np.float32)
+        self._weights = np.repeat(_weights(), 2, axis=0)  # real and imaginary parts lie side by side
+        self._weights *= np.float32(2.0 / (WINDOW * float((self._window**2).sum())))
         self._levels = Grown()
 
     def push(self, block: npt.NDArray[np.float32]) -> None:
@@ -67,19 +64,29 @@ class BandMeter:
         """One second's levels."""
         import scipy.fft
 
-        windows = np.lib.stride_tricks.sliding_window_view(samples, WINDOW)[::HOP]
-        windows = (windows - (windows @ self._mean)[:, None]) * self._window
-        spectrum = scipy.fft.rfft(windows, axis=1)
-        power = np.square(spectrum.real)
-        power += np.square(spectrum.imag)
-        power *= self._scale
-        banded = np.add.reduceat(power[:, : self._starts[-1]], self._starts[:-1], axis=1)
-        out = np.empty((len(power) - 2, BANDS + 3), np.float32)
-        out[:, :BANDS] = (banded[:-2] + banded[1:-1] + banded[2:]) / np.float32(3)
-        middle = power[1:-1]
-        out[:, BANDS + 2] = middle[:, self._rumble[0] : self._rumble[1]].sum(axis=1)
-        middle *= self._k_weight
-        low = middle[:, : self._rumble[1]].sum(axis=1)
-        out[:, BANDS + 1] = middle[:, self._rumble[1] :].sum(axis=1)
-        out[:, BANDS] = out[:, BANDS + 1] + low
+        step = samples.strides[0]
+        windows = np.lib.stride_tricks.as_strided(samples, self._windowed.shape, (HOP * step, step), writeable=False)
+        spectrum = scipy.fft.rfft(np.multiply(windows, self._window, out=self._windowed), axis=1)
+        spectrum[:, 1] += np.float32(0.5) * spectrum[:, 0]  # DC under a Hann window: minus a half of it beside line 0
+        squares = spectrum.view(np.float32)
+        np.square(squares, out=squares)
+        power = squares[:, 2:] @ self._weights[2:]
+        out = power[1:-1].copy()
+        out[:, :BANDS] += power[:-2, :BANDS]
+        out[:, :BANDS] += power[2:, :BANDS]
+        out[:, :BANDS] /= np.float32(3)
         return power_to_level(out)
+
+
+def _weights() -> npt.NDArray[np.float32]:
+    """What each line of the spectrum counts in each column of the levels, shape=(lines, BANDS + 3)."""
+    frequencies = np.arange(WINDOW // 2 + 1) * ANALYSIS_HZ / WINDOW
+    edges = np.searchsorted(frequencies, EDGES_HZ)
+    low, high = np.searchsorted(frequencies, RUMBLE_HZ)
+    out = np.zeros((len(frequencies), BANDS + 3), np.float32)
+    for band in range(BANDS):
+        out[edges[band] : edges[band + 1], band] = 1
+    out[:, BANDS] = k_response_power(frequencies)
+    out[high:, BANDS + 1] = out[high:, BANDS]
+    out[low:high, BANDS + 2] = 1
+    return out
