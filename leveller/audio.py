@@ -1,4 +1,4 @@
-"""Opens tracks, yields aligned blocks, writes files; the sole user of soundfile and soxr.
+"""Opens tracks and yields aligned blocks; the sole user of soundfile and soxr.
 
 A `TrackReader` walks one track in *session* time: silence before its offset, the source resampled to the session's
 rate, silence behind its end, so that every reader of a session gives blocks of the same frames. Files are decoded in
@@ -6,8 +6,8 @@ chunks of a fixed size and the resampler sees only those, so the bytes do not de
 Readers on one polyphonic file share its decode; a take split into several files is read as one. Sources are opened for
 reading only.
 
-Audio is float32, `(frames,)` for one channel or `(frames, channels)`. PCM is quantised by `samples.Quantiser`, since
-libsndfile rounds down. Own chunks, scaling in place and truncated files are the business of `riff`.
+Audio is float32, `(frames,)` for one channel or `(frames, channels)`. What is written is the business of `wav`; own
+chunks and truncated files that of `riff`.
 """
 
 from __future__ import annotations
@@ -16,30 +16,21 @@ import contextlib
 import os
 from collections.abc import Iterator, Sequence
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any
 
 import numpy as np
 import soundfile
 import soxr
 
 from leveller.decoder import CHUNK_FRAMES, Chain, Decoder
-from leveller.errors import InputError, OutputError
-from leveller.riff import (
-    RIFF_LIMIT,
-    FloatSpill,
-    FloatWav,
-    append_chunks,
-    clear_peak_time,
-    missing_bytes,
-    read_chunks,
-)
+from leveller.errors import InputError
+from leveller.riff import append_chunks, missing_bytes, read_chunks
 from leveller.samples import (
     AudioSource,
     FileFacts,
     HighPass,
     Part,
     Preview,
-    Quantiser,
     Samples,
     SourceList,
     clock_rate_hz,
@@ -47,6 +38,7 @@ from leveller.samples import (
     repair,
 )
 from leveller.units import HOPS_PER_S
+from leveller.wav import FloatSpill, FloatWav, WavWriter
 
 __all__ = [
     "AudioSource", "FileFacts", "FloatSpill", "FloatWav", "Part", "Preview", "Resampler", "TrackReader", "WavWriter",
@@ -54,11 +46,8 @@ __all__ = [
     "spread_starts",
 ]
 
-Kind = Literal["float32", "pcm24", "pcm16"]
-
 RATES_HZ = (8000, 192000)
 PREVIEW_PIECES = 60  # of 1 s each; enough for levels and likeness, a sixtieth of an hour's reading
-HEADER_BYTES = 1 << 20  # room for all chunks but the audio (cue points, text) when the size of a file is judged
 MOST_CHANNELS = 128  # our choice: twice the tracks of a large session; bounds what a header can make us hold
 READ_QUALITY = "HQ"
 
@@ -272,59 +261,6 @@ def file_blocks(path: Path, frames: int) -> Iterator[Samples]:
     with _open(path) as file:
         while len(block := file.read(frames, dtype="float32", always_2d=True)):
             yield block
-
-
-class WavWriter:
-    """Writes one WAV file (RF64 where it would pass 4 GiB); a context manager.
-
-    Parameters
-    ----------
-    path : Path
-    rate_hz, channels : int
-    kind : str
-        'float32', 'pcm24' or 'pcm16' (the only one with dither)
-    expected_frames : int
-        how many will be written at most; decides between WAV and RF64
-    """
-
-    def __init__(self, path: Path, rate_hz: int, channels: int, kind: Kind, *, expected_frames: int = 0) -> None:
-        subtype, bits = {"float32": ("FLOAT", 32), "pcm24": ("PCM_24", 24), "pcm16": ("PCM_16", 16)}[kind]
-        self.path, self.frames = path, 0
-        self._frame_bytes = channels * bits // 8
-        self._large = expected_frames * self._frame_bytes + HEADER_BYTES > RIFF_LIMIT
-        self._quantiser = None if kind == "float32" else Quantiser(bits, channels)
-        try:
-            self._file = soundfile.SoundFile(
-                _native(path), "w", rate_hz, channels, subtype, format="RF64" if self._large else "WAV")
-        except (soundfile.LibsndfileError, OSError) as error:
-            raise OutputError(f"{path}: cannot be written ({_detail(error)})") from error
-
-    def __enter__(self) -> WavWriter:
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.close()
-
-    def write(self, block: Samples) -> None:
-        """Append `(frames,)` or `(frames, channels)` float32; PCM is clipped at full scale."""
-        if not self._large and (self.frames + len(block)) * self._frame_bytes + HEADER_BYTES > RIFF_LIMIT:
-            raise OutputError(f"{self.path}: would pass 4 GiB, more than was expected of it")
-        try:
-            self._file.write(block if self._quantiser is None else self._quantiser.push(block))
-        except (soundfile.LibsndfileError, OSError) as error:
-            raise OutputError(f"{self.path}: cannot be written ({_detail(error)}; is the disk full?)") from error
-        self.frames += len(block)
-
-    def close(self) -> None:
-        """Finish the file; closing twice does no harm."""
-        if self._file.closed:
-            return
-        try:
-            self._file.close()
-            if self._quantiser is None:
-                clear_peak_time(self.path)
-        except (soundfile.LibsndfileError, OSError) as error:
-            raise OutputError(f"{self.path}: cannot be finished ({_detail(error)}; is the disk full?)") from error
 
 
 def _open_parts(parts: Sequence[Part]) -> Any:

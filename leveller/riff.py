@@ -1,7 +1,7 @@
-"""RIFF, RF64 and AIFF files at the byte level: what the header says, chunks of our own, scaling in place.
+"""RIFF, RF64 and AIFF files at the byte level: what the header says, and chunks of our own.
 
-libsndfile clamps a truncated file to what is there and says nothing, stamps a clock time into the PEAK chunk of float
-files, and knows no chunk beyond its own. This module does those three jobs on the bytes. Nothing here decodes audio.
+libsndfile clamps a truncated file to what is there and says nothing, and knows no chunk beyond its own. This module
+does those two jobs on the bytes. Nothing here decodes audio.
 
 A chunk is an id of four bytes, a size of four bytes and a payload padded to an even length. RIFF counts little-endian,
 AIFF big-endian. In RF64 and BW64 the sizes that do not fit stand in the `ds64` chunk.
@@ -13,20 +13,15 @@ from __future__ import annotations
 
 import os
 import struct
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from pathlib import Path
-from typing import Any, BinaryIO
-
-import numpy as np
-import numpy.typing as npt
+from typing import BinaryIO
 
 from leveller.errors import InputError, OutputError
 
 UNKNOWN_SIZE = 0xFFFFFFFF  # EBU Tech 3306: the size stands in ds64; in plain RIFF it marks a stream of unknown length
 RIFF_LIMIT = 0xFFFFFFFF
 MOST_CHUNKS = 10_000  # our choice: files have a dozen; a file of nothing but empty chunks is not walked for hours
-
-Samples = npt.NDArray[np.float32]
 
 
 def read_chunks(path: Path) -> dict[bytes, tuple[int, int]]:
@@ -77,124 +72,12 @@ def append_chunks(path: Path, chunks: Sequence[tuple[bytes, bytes]]) -> None:
     try:
         with open(path, "r+b") as file:
             start = file.seek(0, os.SEEK_END)
-            body = b"\0" * (start % 2) + b"".join(_chunk(kind, payload) for kind, payload in chunks)
+            body = b"\0" * (start % 2) + b"".join(chunk(kind, payload) for kind, payload in chunks)
             _set_riff_size(file, start + len(body) - 8, path)
             file.seek(start)
             file.write(body)
     except OSError as error:
         raise OutputError(f"{path}: cannot be written ({error.strerror})") from error
-
-
-class FloatWav:
-    """A finished 32-bit float WAV file, walked block by block; a block may be put back changed. A context manager."""
-
-    def __init__(self, path: Path, channels: int) -> None:
-        self.path = path
-        self._channels = channels
-        self._chunks = read_chunks(path)
-        self._offset, size = self._chunks[b"data"]
-        self.frames = size // (4 * channels)
-        self._at, self._last = 0, 0  # frames: of the next block, of the one read last
-        try:
-            self._file = open(path, "r+b", buffering=0)  # noqa: SIM115 (closed by close)
-        except OSError as error:
-            raise OutputError(f"{path}: cannot be opened ({error.strerror})") from error
-
-    def __enter__(self) -> FloatWav:
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.close()
-
-    def rewind(self) -> None:
-        """Start again at the first frame."""
-        self._at = 0
-
-    def read(self, frames: int) -> Samples:
-        """The next frames in a new array, `(frames,)` or `(frames, channels)`; fewer at the end."""
-        count = min(frames, self.frames - self._at)
-        block = np.empty((count,) if self._channels == 1 else (count, self._channels), "<f4")
-        try:
-            self._seek(self._at)
-            _read_all(self._file, _bytes_of(block), self.path)
-        except OSError as error:
-            raise OutputError(f"{self.path}: cannot be read back ({error.strerror})") from error
-        self._last, self._at = self._at, self._at + count
-        return block
-
-    def put_back(self, block: Samples) -> None:
-        """Write the block in the place of the one read last, whose shape it has."""
-        try:
-            self._seek(self._last)
-            _write_all(self._file, _bytes_of(np.ascontiguousarray(block, "<f4")))
-        except OSError as error:
-            raise OutputError(f"{self.path}: cannot be written ({error.strerror})") from error
-
-    def scale_peaks(self, factor: float) -> None:
-        """Scale the peak of each channel that the file notes in its PEAK chunk: version, time, (value, frame) each."""
-        offset, size = self._chunks.get(b"PEAK", (0, 0))
-        for at in range(offset + 8, offset + size - 7, 8):
-            self._file.seek(at)
-            (value,) = struct.unpack("<f", self._file.read(4))
-            self._file.seek(at)
-            self._file.write(struct.pack("<f", abs(np.float32(value) * np.float32(factor))))
-
-    def close(self) -> None:
-        """Close the file; closing twice does no harm."""
-        self._file.close()
-
-    def _seek(self, frame: int) -> None:
-        """Go to a frame of the audio."""
-        self._file.seek(self._offset + 4 * self._channels * frame)
-
-
-def clear_peak_time(path: Path) -> None:
-    """Zero the clock time in the PEAK chunk, so that two runs write the same bytes."""
-    place = read_chunks(path).get(b"PEAK")
-    if place is not None:
-        with open(path, "r+b") as file:
-            file.seek(place[0] + 4)
-            file.write(b"\0\0\0\0")
-
-
-class FloatSpill:
-    """A temporary file of raw float32 frames: append blocks, then walk them from the start; a context manager."""
-
-    def __init__(self, path: Path, channels: int = 1) -> None:
-        self.path, self.channels, self.frames = path, channels, 0
-        try:
-            self._file = open(path, "w+b", buffering=0)  # noqa: SIM115 (closed by close)
-        except OSError as error:
-            raise OutputError(f"{path}: cannot be written ({error.strerror})") from error
-
-    def __enter__(self) -> FloatSpill:
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.close()
-
-    def append(self, block: Samples) -> None:
-        """Add `(frames,)` or `(frames, channels)` float32 at the end."""
-        try:
-            self._file.seek(4 * self.channels * self.frames)
-            _write_all(self._file, _bytes_of(np.ascontiguousarray(block, np.float32)))
-        except OSError as error:
-            raise OutputError(f"{self.path}: cannot be written ({error.strerror})") from error
-        self.frames += len(block)
-
-    def blocks(self, frames: int) -> Iterator[Samples]:
-        """All frames from the start in new arrays of so many, the last one shorter; shaped as they were appended."""
-        for start in range(0, self.frames, frames):
-            count = min(frames, self.frames - start)
-            block = np.empty((count,) if self.channels == 1 else (count, self.channels), np.float32)
-            self._file.seek(4 * self.channels * start)
-            _read_all(self._file, _bytes_of(block), self.path)
-            yield block
-
-    def close(self) -> None:
-        """Close and remove the file; closing twice does no harm."""
-        self._file.close()
-        self.path.unlink(missing_ok=True)
 
 
 def _walk(file: BinaryIO) -> dict[bytes, tuple[int, int]] | None:
@@ -225,7 +108,7 @@ def _walk(file: BinaryIO) -> dict[bytes, tuple[int, int]] | None:
     return chunks
 
 
-def _chunk(kind: bytes, payload: bytes) -> bytes:
+def chunk(kind: bytes, payload: bytes) -> bytes:
     """One chunk with its header and padding."""
     return struct.pack("<4sI", kind, len(payload)) + payload + b"\0" * (len(payload) % 2)
 
@@ -244,23 +127,3 @@ def _set_riff_size(file: BinaryIO, size: int, path: Path) -> None:
         file.write(struct.pack("<Q", size))
     else:
         raise OutputError(f"{path}: not a WAV file, no chunk can be added")
-
-
-def _bytes_of(block: Samples) -> memoryview:
-    """A contiguous array as bytes, without a copy."""
-    return block.reshape(-1).view(np.uint8).data
-
-
-def _read_all(file: Any, view: memoryview, path: Path) -> None:
-    """Fill the view from an unbuffered file, which may read short."""
-    while len(view):
-        got = file.readinto(view)
-        if not got:
-            raise OutputError(f"{path}: ended before its header said")
-        view = view[got:]
-
-
-def _write_all(file: Any, view: memoryview) -> None:
-    """Write the whole view to an unbuffered file, which may write short."""
-    while len(view):
-        view = view[file.write(view):]

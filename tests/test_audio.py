@@ -327,14 +327,10 @@ def write(path: Path, x: np.ndarray, kind: Any, size: int) -> bytes:
 def test_written_bytes_do_not_depend_on_block_size_or_time(
     tmp_path: Path, kind: str, channels: int, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    """Two runs, in different blocks, write the same bytes: dither is seeded, no clock time stays in the file."""
+    """Two runs, in different blocks, write the same bytes: dither is seeded, no clock time comes into the file."""
     x = noise(10_000, channels)
     first = write(tmp_path / "a.wav", x, kind, 10_000)
     assert all(write(tmp_path / "b.wav", x, kind, size) == first for size in (1, 777, 4096))
-    if kind == "float32":
-        offset, size = audio.read_chunks(tmp_path / "a.wav")[b"PEAK"]
-        assert first[offset + 4 : offset + 8] == b"\0\0\0\0"
-        assert size == 8 + 8 * channels
 
 
 def test_pcm24_rounds_to_nearest_and_clips(tmp_path: Path) -> None:
@@ -373,6 +369,7 @@ def test_rf64_where_wav_cannot_hold_it(tmp_path: Path) -> None:
         writer.frames = 2**32 // 3
         with pytest.raises(OutputError, match="would pass 4 GiB"):
             writer.write(noise(100))
+        writer.frames = 0
 
 
 def test_file_that_cannot_be_written_is_an_output_error(tmp_path: Path) -> None:
@@ -407,7 +404,7 @@ def fill(path: Path, kind: Any) -> None:
 @pytest.mark.parametrize("expected_frames", [0, 2**30])
 @pytest.mark.parametrize("channels", [1, 2])
 def test_blocks_put_back_change_the_samples_alone(tmp_path: Path, expected_frames: int, channels: int) -> None:
-    """A float file walked twice and put back changed holds the changed samples and peaks; its chunks stay."""
+    """A float file walked twice and put back changed holds the changed samples; its chunks stay."""
     x = noise(10_000, channels)
     with audio.WavWriter(tmp_path / "x.wav", RATE_HZ, channels, "float32", expected_frames=expected_frames) as writer:
         writer.write(x)
@@ -418,17 +415,9 @@ def test_blocks_put_back_change_the_samples_alone(tmp_path: Path, expected_frame
             file.rewind()
             while len(block := file.read(777)):
                 file.put_back(block * factor)
-        file.scale_peaks(-0.35)
     read = soundfile.read(tmp_path / "x.wav", dtype="float32")[0]
     assert np.array_equal(read, x * np.float32(0.7) * np.float32(-0.5))
-    data = (tmp_path / "x.wav").read_bytes()
-    chunks = audio.read_chunks(tmp_path / "x.wav")
-    assert data[chunks[b"memo"][0] :][:4] == b"kept"
-    assert (b"PEAK" in chunks) == (expected_frames == 0)  # RF64 files have none
-    if b"PEAK" not in chunks:
-        return
-    peaks = struct.unpack_from("<" + "fI" * channels, data, chunks[b"PEAK"][0] + 8)[::2]
-    assert peaks == pytest.approx(0.35 * np.abs(x.reshape(-1, channels)).max(axis=0), rel=1e-6)
+    assert riff.read_chunk(tmp_path / "x.wav", b"memo", most_bytes=100) == b"kept"
 
 
 @pytest.mark.parametrize(("frames", "expected_frames"), [(999, 0), (1000, 0), (999, 2**31)])

@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from contextlib import ExitStack
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -148,32 +149,27 @@ def _write_stems(
     blocks = -(-session.frames // frames)
     hops_per_block = round(frames / session.rate_hz * 100)
     length_s = session.frames / session.rate_hz
-    with open_readers(session) as readers:
+    with open_readers(session) as readers, ExitStack() as stack:
+        writers = [stack.enter_context(WavWriter(path, session.rate_hz, session.mix_channels, "float32",
+                                                 expected_frames=session.frames)) for path in paths]
         lanes = [
-            _StemLane(reader, track, GainCurve(gain, plan.hops, session.rate_hz),
-                      WavWriter(path, session.rate_hz, session.mix_channels, "float32", expected_frames=session.frames),
-                      session.mix_channels)
-            for reader, track, gain, path in zip(readers, session.tracks, plan.tracks, paths, strict=True)
+            _StemLane(reader, track, GainCurve(gain, plan.hops, session.rate_hz), writer, session.mix_channels)
+            for reader, track, gain, writer in zip(readers, session.tracks, plan.tracks, writers, strict=True)
         ]
 
         def step(lane: int, block: int) -> Samples:
             return lanes[lane].next(min(frames, session.frames - block * frames), block * hops_per_block)
 
-        try:
-            for block, row in enumerate(walk(step, lanes=len(lanes), blocks=blocks)):
-                bus.push(summed(row))
-                on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
-        finally:
-            for lane in lanes:
-                lane.writer.close()
+        for block, row in enumerate(walk(step, lanes=len(lanes), blocks=blocks)):
+            bus.push(summed(row))
+            on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
 
 
 class _StemLane:
     """One track on its way from source to stem."""
 
     def __init__(self, reader: TrackReader, track: Track, curve: GainCurve, writer: WavWriter, channels: int) -> None:
-        self.writer = writer
-        self._reader, self._curve, self._channels = reader, curve, channels
+        self._reader, self._curve, self._writer, self._channels = reader, curve, writer, channels
         self._places = pan_gains(track.pan) if track.width == 1 and channels == 2 else None
 
     def next(self, frames: int, first_hop: int) -> Samples:
@@ -183,7 +179,7 @@ class _StemLane:
             block = block[:, None] * self._places
         elif block.ndim == 2 and self._channels == 1:
             block = block.mean(axis=1)
-        self.writer.write(block)
+        self._writer.write(block)
         return block
 
 

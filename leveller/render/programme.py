@@ -102,9 +102,7 @@ class ScaledStems:
         self._gain = wanted
 
     def keep(self) -> None:
-        """Nothing is delivered any more: note the new peaks."""
-        for file in self._files:
-            file.scale_peaks(self._gain)
+        """Nothing is delivered any more: the stems are where they belong."""
 
 
 class LimitedStems:
