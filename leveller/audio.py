@@ -24,7 +24,7 @@ import soxr
 
 from leveller.decoder import CHUNK_FRAMES, Chain, Decoder
 from leveller.errors import InputError
-from leveller.riff import append_chunks, missing_bytes, read_chunks
+from leveller.riff import append_chunks, is_little_wav, missing_bytes, read_chunks
 from leveller.samples import (
     AudioSource,
     FileFacts,
@@ -38,7 +38,7 @@ from leveller.samples import (
     repair,
 )
 from leveller.units import HOPS_PER_S
-from leveller.wav import FloatSpill, FloatWav, WavWriter
+from leveller.wav import FloatSpill, FloatWav, Kind, SampleFile, WavWriter
 
 __all__ = [
     "AudioSource", "FileFacts", "FloatSpill", "FloatWav", "Part", "Preview", "Resampler", "TrackReader", "WavWriter",
@@ -50,6 +50,7 @@ RATES_HZ = (8000, 192000)
 PREVIEW_PIECES = 60  # of 1 s each; enough for levels and likeness, a sixtieth of an hour's reading
 MOST_CHANNELS = 128  # our choice: twice the tracks of a large session; bounds what a header can make us hold
 READ_QUALITY = "HQ"
+PLAIN: dict[str, Kind] = {"PCM_16": "pcm16", "PCM_24": "pcm24", "FLOAT": "float32"}  # by libsndfile's names
 
 
 def probe(path: Path, *, accept_short: bool = False) -> FileFacts:
@@ -97,7 +98,7 @@ def pieces(path: Path | Sequence[Part], starts: Sequence[int], *, frames: int) -
 
     The same array is filled again for each place. The files of a split take (`parts_of(track)`) count as one.
     """
-    with _open(path) if isinstance(path, Path) else _open_parts(path) as file:
+    with _open_samples(path) if isinstance(path, Path) else _open_parts(path) as file:
         block = np.empty((frames, file.channels), np.float32)
         for start in starts:
             block.fill(0)
@@ -265,7 +266,17 @@ def file_blocks(path: Path, frames: int) -> Iterator[Samples]:
 
 def _open_parts(parts: Sequence[Part]) -> Any:
     """One open file, or a chain of several."""
-    return _open(parts[0].path) if len(parts) == 1 else Chain(parts, _open)
+    return _open_samples(parts[0].path) if len(parts) == 1 else Chain(parts, _open_samples)
+
+
+def _open_samples(path: Path) -> Any:
+    """The quickest reader of the samples of a file: `SampleFile` for plain WAV files, else a SoundFile."""
+    file = _open(path)
+    kind = PLAIN.get(file.subtype) if file.format in ("WAV", "WAVEX", "RF64") and is_little_wav(path) else None
+    if kind is None:
+        return file
+    with file:
+        return SampleFile(path, kind, frames=file.frames, samplerate=file.samplerate, channels=file.channels)
 
 
 def _open(path: Path) -> Any:

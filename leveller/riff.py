@@ -39,6 +39,14 @@ def read_chunks(path: Path) -> dict[bytes, tuple[int, int]]:
     return chunks
 
 
+def is_little_wav(path: Path) -> bool:
+    """Whether a file is a little-endian WAV file (RIFF, RF64) with audio that can be found; RIFX is not."""
+    with open(path, "rb") as file:
+        little = file.read(4) in (b"RIFF", b"RF64")
+        file.seek(0)
+        return little and b"data" in (_walk(file) or {})
+
+
 def read_chunk(path: Path, kind: bytes, *, most_bytes: int) -> bytes | None:
     """A chunk's payload as far as it is there, at most so many bytes; None where the file has no such chunk."""
     with open(path, "rb") as file:
