@@ -7,12 +7,15 @@ Without a delivery the files decide: `podcast-stereo` where one of them has two 
 
 Files of other rates are resampled to the most common one (a tie takes the higher); all start together, and shorter ones
 end in silence.
+
+The outlines that report.html draws are taken as the files pass by; that of the mix is the sum's outline per peak cell
+times make-up and limiter gain, so that nothing is read again for it.
 """
 
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -20,19 +23,23 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import FloatSpill, TrackReader, open_readers, probe
+from leveller.audio import FloatSpill, open_readers, probe
 from leveller.errors import InputError, SettingsError
 from leveller.folder import OutputFolder
 from leveller.lanes import walk
 from leveller.measure import OnProgress
+from leveller.measure.outline import Outlined, cell_outline, hop_outline
+from leveller.measure.peaks import peak_cell_frames
 from leveller.names import safe_name, unique_names
 from leveller.render.mix import BLOCK_S, Bus, Mix
 from leveller.samples import FileFacts
 from leveller.session import Session, Track, audio_files
 from leveller.settings import Settings, delivery_named
+from leveller.units import db_to_gain, hop_to_frame
 
 DEFAULT_OUT = Path("levelled")
 MARGIN_BYTES = 16 << 20  # tables and what else is small
+OUTLINED_HOPS = 6000  # of the mix's outline at once: a minute, so that memory stays small
 BY_CHANNELS = {1: "podcast-mono", 2: "podcast-stereo"}
 
 Samples = npt.NDArray[np.float32]
@@ -46,6 +53,9 @@ class Finished:
     mix: Mix
     repaired_frames: tuple[int, ...]  # per file: NaN or Inf silenced
     out: Path
+    file_peaks: tuple[Outlined, ...]  # per file: sample peak of each hop at the cut's rate, linear
+    mix_peaks: Outlined  # the same of the mix as delivered
+    limiter_db: Outlined  # the limiter's deepest gain in each hop, 0 or less
     stems: str = "none"  # as report.json names them
 
 
@@ -82,27 +92,55 @@ def open_cut(
 def deliver_cut(session: Session, folder: OutputFolder, on_progress: OnProgress) -> Finished:
     """Sum the files of a cut and deliver the sum as mix.wav of the folder."""
     frames = round(BLOCK_S * session.rate_hz)
-    length_s = session.frames / session.rate_hz
+    outlines = [hop_outline(session.frames, session.rate_hz) for _ in session.tracks]
+    summed = cell_outline(session.frames, peak_cell_frames(session.rate_hz))
     with (FloatSpill(folder.work / ".sum", session.mix_channels) as spill, open_readers(session) as readers):
         bus = Bus(session.rate_hz, session.mix_channels, spill)
 
         def step(lane: int, block: int) -> Samples:
-            return _placed(readers[lane], min(frames, session.frames - block * frames), session.mix_channels)
+            own = readers[lane].read(min(frames, session.frames - block * frames))
+            outlines[lane].push(own)
+            return _placed(own, session.mix_channels)
 
-        for block, row in enumerate(walk(step, lanes=len(readers), blocks=-(-session.frames // frames))):
-            total = row[0].copy()
-            for part in row[1:]:
-                total += part
+        for done, total in _sums(step, session, frames):
+            summed.push(total)
             bus.push(total)
-            on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
+            on_progress("render", done / session.rate_hz, session.frames / session.rate_hz)
         repaired = tuple(reader.repaired_frames for reader in readers)
         mix = bus.deliver(folder.work / "mix.wav", session.delivery, session.settings.limiter, frames, on_progress)
-    return Finished(session, mix, repaired, folder.path)
+    peaks, limiter_db = _delivered_outline(summed.result(), mix, session)
+    return Finished(session, mix, repaired, folder.path, tuple(outline.result() for outline in outlines), peaks,
+                    limiter_db)
 
 
-def _placed(reader: TrackReader, frames: int, channels: int) -> Samples:
-    """The next block of a file with the channels of the mix."""
-    block = reader.read(frames)
+def _sums(step: Callable[[int, int], Samples], session: Session, frames: int) -> Iterator[tuple[int, Samples]]:
+    """Block by block: frames so far, and the sum of all files."""
+    for block, row in enumerate(walk(step, lanes=len(session.tracks), blocks=-(-session.frames // frames))):
+        total = row[0].copy()
+        for part in row[1:]:
+            total += part
+        yield min(session.frames, (block + 1) * frames), total
+
+
+def _delivered_outline(summed: Outlined, mix: Mix, session: Session) -> tuple[Outlined, Outlined]:
+    """Peak and limiter gain per hop of the mix, from the sum's peak cells and the nodes at their edges."""
+    hops = len(hop_outline(session.frames, session.rate_hz).result())
+    starts = hop_to_frame(np.arange(hops), session.rate_hz) // round(mix.cell_s * session.rate_hz)
+    peaks, limiter_db = np.zeros(hops, np.float32), np.zeros(hops, np.float32)
+    for first in range(0, hops, OUTLINED_HOPS):
+        here = starts[first : first + OUTLINED_HOPS]
+        end = int(starts[first + OUTLINED_HOPS]) if first + OUTLINED_HOPS < hops else len(summed)
+        nodes = mix.limiter_db[int(here[0]) : end + 1]
+        least = np.maximum(nodes[:-1], nodes[1:])  # reduction within a cell: an upper bound of its peak
+        delivered = summed[int(here[0]) : end] * db_to_gain(least + np.float32(mix.make_up_db))
+        peaks[first : first + OUTLINED_HOPS] = np.maximum.reduceat(delivered, here - here[0])
+        limiter_db[first : first + OUTLINED_HOPS] = np.minimum.reduceat(
+            np.minimum(nodes[:-1], nodes[1:]), here - here[0])
+    return peaks, limiter_db
+
+
+def _placed(block: Samples, channels: int) -> Samples:
+    """A block of a file with the channels of the mix."""
     if channels == 1:
         return block if block.ndim == 1 else np.asarray(block.mean(axis=1))
     return block if block.ndim == 2 else np.repeat(block[:, None], 2, axis=1)
