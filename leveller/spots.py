@@ -88,7 +88,7 @@ def _full_scale(finished: Finished) -> Iterator[Spot]:
             here = peaks[first:after]
             count = int(np.count_nonzero(here >= FULL_SCALE))
             over_db = float(gain_to_db(float(here.max())))
-            how = f"peaks {over_db:.1f} dB over full scale" if over_db > 0.05 else "samples at full scale, maybe clipped"
+            how = f"peaks {over_db:.1f} dB over full scale" if over_db > 0.05 else "at full scale, maybe clipped"
             yield _spot(first, after, "full scale", f"{how}, in {count / HOPS_PER_S:.2f} s of this file",
                         1 + count / FULL_SCALE_HOPS, track.name)
 

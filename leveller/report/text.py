@@ -207,9 +207,10 @@ def _other_lines(report: Report, width: int | None) -> list[Line]:
 def _mix_lines(mix: MixFigures) -> list[Line]:
     """The mix, a figure a line: name, number, unit, when."""
     two = "" if mix.two_channels_lufs is None else f"{shown(mix, 'two_channels_lufs')} on two channels"
+    spoken = [] if mix.speech_lufs is None else [("speech", shown(mix, "speech_lufs"), "LUFS", "")]
     rows = [
         ("integrated", shown(mix, "integrated_lufs"), "LUFS", two),
-        ("speech", shown(mix, "speech_lufs"), "LUFS", ""),
+        *spoken,
         ("range", shown(mix, "range_lu"), "LU", ""),
         ("short-term, most", shown(mix, "max_short_term_lufs"), "LUFS", f"at {shown(mix, 'max_short_term_s')}"),
         ("momentary, most", shown(mix, "max_momentary_lufs"), "LUFS", f"at {shown(mix, 'max_momentary_s')}"),
