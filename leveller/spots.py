@@ -26,9 +26,9 @@ from leveller.render.limiter import HEAVY_DB
 from leveller.units import HOPS_PER_S, Bools, gain_to_db, power_to_db
 
 OVER_LU = 5.0  # EBU R 128 s1: short-term loudness of short programmes at most 5 LU over the target
-UNDER_LU = 8.0
-SILENT_UNDER_LU = 40.0  # of the target: room tone lies higher
-SILENT_S = 3.0
+UNDER_LU = 8.0  # a choice of ours: pauses of speech do not reach it
+SILENT_UNDER_LU = 40.0  # of the target: a choice of ours, room tone lies higher
+SILENT_S = 3.0  # a choice of ours: longer than a pause that is meant
 JOIN_HOPS = 100  # stretches closer than a second are one
 FULL_SCALE_HOPS = 5  # so many hops at full scale weigh as much again as the first
 MOST_OF_A_KIND = 6  # on the page; the console says how many there are in all

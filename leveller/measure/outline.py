@@ -40,12 +40,13 @@ class Outline:
         """Take a block, shape=(frames,) or (frames, channels), of any length."""
         if not len(block):
             return
-        magnitudes = np.abs(block) if block.ndim == 1 else np.abs(block).max(axis=1)
+        channels = [block] if block.ndim == 1 else list(block.T)
         first, last = self._cell(self._at), self._cell(self._at + len(block) - 1)
         cells = np.arange(first + 1, last + 1)
         edges = (cells * self._frames_per + self._cells_per // 2) // self._cells_per - self._at
-        here = self._peaks[first : last + 1]
-        np.maximum(here, np.maximum.reduceat(magnitudes, np.concatenate([[0], edges])), out=here)
+        starts, here = np.concatenate([[0], edges]), self._peaks[first : last + 1]
+        for channel in channels:  # one by one: a maximum along an axis of two takes ten times as long
+            np.maximum(here, np.maximum.reduceat(np.abs(channel), starts), out=here)
         self._at += len(block)
 
     def result(self) -> Outlined:

@@ -2,7 +2,7 @@
 // below. The outline's height is the square root of the sample peak: 12 dB less is half as high.
 
 const KIND = {
-  track: "file", marks: "marks a stretch",
+  track: "file", loudness: "Loudness", marks: "marks a stretch",
   bands: {ridge: 40, ribbon: 0, icicles: 0, mixRidge: 46, mixIcicles: 30},
   hear: [["source", "given file"], ["mix", "finished mix"]],
   keys: [],

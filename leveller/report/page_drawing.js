@@ -85,7 +85,7 @@ function drawLoudness(pen, g, box, y) {
   font(pen, g, 14, "500");
   pen.textAlign = "right";
   pen.fillStyle = view.ink.ink;
-  pen.fillText("Mix", g.left - 10 * g.u, y + high - 4 * g.u);
+  pen.fillText(KIND.loudness, g.left - 10 * g.u, y + high - 4 * g.u);
   font(pen, g, 11);
   pen.fillStyle = view.ink.loud;
   pen.fillText(`${plain(target, 0)} LUFS`, g.left - 10 * g.u, at(target));

@@ -5,7 +5,7 @@ const COLUMNS = ["track", "from_s", "to_s", "decide", "gain_db"];
 const KEPT_UNDER = `leveller corrections ${record.digest}`;
 
 const KIND = {
-  track: "track", marks: "marks a stretch of the chosen track",
+  track: "track", loudness: "Mix", marks: "marks a stretch of the chosen track",
   bands: {ridge: 38, ribbon: 12, icicles: 20, mixRidge: 0, mixIcicles: 0},
   hear: [["source", "source"], ["stem", "stem"], ["mix", "mix"]],
   keys: [
