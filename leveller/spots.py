@@ -26,7 +26,7 @@ from leveller.render.limiter import HEAVY_DB
 from leveller.units import HOPS_PER_S, Bools, gain_to_db, power_to_db
 
 OVER_LU = 5.0  # EBU R 128 s1: short-term loudness of short programmes at most 5 LU over the target
-UNDER_LU = 8.0  # a choice of ours: pauses of speech do not reach it
+UNDER_LU = 8.0  # a choice of ours: the demo as levelled stays within it
 SILENT_UNDER_LU = 40.0  # of the target: a choice of ours, room tone lies higher
 SILENT_S = 3.0  # a choice of ours: longer than a pause that is meant
 JOIN_HOPS = 100  # stretches closer than a second are one
@@ -50,7 +50,7 @@ class Spot:
     @property
     def sentence(self) -> str:
         """For the console."""
-        return f"{self.track or 'mix'}: {self.reason}"
+        return f"{self.track or 'mix'}: {self.kind}, {self.reason}"
 
 
 def spots_to_hear(finished: Finished) -> tuple[Spot, ...]:
@@ -88,9 +88,10 @@ def _full_scale(finished: Finished) -> Iterator[Spot]:
             here = peaks[first:after]
             count = int(np.count_nonzero(here >= FULL_SCALE))
             over_db = float(gain_to_db(float(here.max())))
-            how = f"peaks {over_db:.1f} dB over full scale" if over_db > 0.05 else "at full scale, maybe clipped"
-            yield _spot(first, after, "full scale", f"{how}, in {count / HOPS_PER_S:.2f} s of this file",
-                        1 + count / FULL_SCALE_HOPS, track.name)
+            kept = track.is_float and here.max() > 1
+            how = f"{over_db:.1f} dB over it, kept by the file's floats" if kept else "maybe clipped"
+            yield _spot(first, after, "full scale", f"{how}, for {count / HOPS_PER_S:.2f} s in all",
+                        1 if kept else 1 + count / FULL_SCALE_HOPS, track.name)
 
 
 def _limited(finished: Finished) -> Iterator[Spot]:
@@ -98,7 +99,7 @@ def _limited(finished: Finished) -> Iterator[Spot]:
     for first, after in _spans(np.asarray(finished.limiter_db <= -HEAVY_DB)):
         here = finished.limiter_db[first:after]
         most, heavy = -float(here.min()), np.count_nonzero(here <= -HEAVY_DB) / HOPS_PER_S
-        reason = f"the limiter takes up to {most:.1f} dB, {HEAVY_DB:.0f} dB or more for {heavy:.2f} s"
+        reason = f"takes up to {most:.1f} dB, {HEAVY_DB:.0f} dB or more for {heavy:.2f} s"
         yield _spot(first, after, "limiter", reason, most / HEAVY_DB)
 
 
@@ -106,7 +107,7 @@ def _silences(finished: Finished) -> list[Spot]:
     """Stretches in which nothing is heard."""
     limit = finished.mix.delivery.target_lufs - SILENT_UNDER_LU
     silent = np.asarray(power_to_db(finished.mix.loudness.cells) + OFFSET_LU < limit)
-    return [_spot(int(first), int(after), "silence", f"silence, under {limit:.0f} LUFS for {seconds:.1f} s",
+    return [_spot(int(first), int(after), "silence", f"under {limit:.0f} LUFS for {seconds:.1f} s",
                   seconds / SILENT_S)
             for first, after in stretches(silent) if (seconds := (after - first) / HOPS_PER_S) >= SILENT_S]
 
@@ -127,5 +128,5 @@ def _beyond(off_lu: Curve, limit_lu: float, kind: str, side: str, but: Sequence[
         most = float(here[np.isfinite(here)].max(initial=0.0))
         if any(spot.from_s < after / HOPS_PER_S and first / HOPS_PER_S < spot.to_s for spot in but):
             continue
-        reason = f"short-term loudness up to {most:.1f} LU {side} the target, {(after - first) / HOPS_PER_S:.1f} s"
+        reason = f"short-term up to {most:.1f} LU {side} the target, {(after - first) / HOPS_PER_S:.1f} s"
         yield _spot(first, after, kind, reason, most / limit_lu)

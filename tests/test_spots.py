@@ -46,8 +46,8 @@ def test_a_long_silence(tmp_path: Path) -> None:
     (spot,) = found(tmp_path, signal)
     assert (spot.kind, spot.track, spot.from_s, spot.to_s) == (
         "silence", "", pytest.approx(20, abs=EDGE_S), pytest.approx(24, abs=EDGE_S))
-    assert spot.reason == f"silence, under -63 LUFS for {spot.to_s - spot.from_s:.1f} s"
-    assert spot.sentence == f"mix: {spot.reason}"
+    assert spot.reason == f"under -63 LUFS for {spot.to_s - spot.from_s:.1f} s"
+    assert spot.sentence == f"mix: silence, {spot.reason}"
 
 
 @pytest.mark.parametrize(("gain_db", "kind", "words"), [(7.0, "loud", "over"), (-12.0, "quiet", "under")])
@@ -80,12 +80,13 @@ def test_full_scale_of_a_given_file(tmp_path: Path) -> None:
     part(signal, 5, 5.05)[:] = 1.0
     (spot, *_) = [spot for spot in found(tmp_path, signal) if spot.kind == "full scale"]
     assert (spot.track, spot.from_s) == ("cut", pytest.approx(5.0, abs=0.011))
-    assert spot.reason == "at full scale, maybe clipped, in 0.05 s of this file"
-    assert spot.sentence == f"cut: {spot.reason}"
+    assert spot.reason == "maybe clipped, for 0.05 s in all"
+    assert spot.sentence == f"cut: full scale, {spot.reason}"
     (tmp_path / "float").mkdir()
     part(signal, 5, 5.05)[:] = 1.5
     (spot, *_) = [spot for spot in found(tmp_path / "float", signal, subtype="FLOAT") if spot.kind == "full scale"]
-    assert spot.reason == "peaks 3.5 dB over full scale, in 0.05 s of this file"
+    assert spot.reason == "3.5 dB over it, kept by the file's floats, for 0.05 s in all"
+    assert spot.weight == 1  # nothing is lost
 
 
 def test_a_silent_cut(tmp_path: Path) -> None:

@@ -5,7 +5,7 @@ const KEYS = [
   ["Up, Down", "the line above, the line below"],
   ["Home, End", "start and end of the line; with Ctrl of it all"],
   ["with Shift", KIND.marks],
-  ["T, Shift+T", `next ${KIND.track}, ${KIND.track} before`],
+  ...(record.tracks.length > 1 ? [["T, Shift+T", `next ${KIND.track}, ${KIND.track} before`]] : []),
   ["Space", "plays, or pauses; a marked stretch alone"],
   [KIND.hear.map((_, i) => i + 1).join(", "), `hear ${KIND.hear.map(([, text]) => `the ${text}`).join(", ")}`],
   ["N, P", "next place worth a listen, place before: jumps and plays"],

@@ -8,7 +8,7 @@ const KIND = {
   keys: [],
   letters: {},
   legend: [["given", "given file: peaks, outlined"], ["own", "finished mix: peaks, filled"],
-    ["gain", "gain it got: hangs from the make-up gain, named at the left over the least"],
+    ["gain", "gain it got: what the limiter takes hangs from the make-up gain; most and least at the left"],
     ["loud", "short-term loudness, target dashed"]],
 };
 const LEAST_DEPTH_DB = 6; // of the gain's scale: a little limiting shall look little
