@@ -271,3 +271,18 @@ def test_the_command_says_what_the_mix_reads(place: Path, tmp_path: Path) -> Non
     assert (ran.returncode, ran.stderr) == (0, "")
     assert ran.stdout.startswith("Delivery met: -23.0")
     assert (tmp_path / "levelled" / "cut finished" / "mix.wav").is_file()
+
+
+def test_the_command_says_where_to_listen(tmp_path: Path) -> None:
+    """What stands out is printed as a session's places are, the strongest first; no figure of speech is left blank."""
+    wave = np.random.default_rng(5).uniform(-0.1, 0.1, 30 * RATE_HZ)
+    wave[10 * RATE_HZ : 16 * RATE_HZ] = 0
+    wave[20 * RATE_HZ : 20 * RATE_HZ + 320] = 1.0
+    sf.write(tmp_path / "cut.wav", wave, RATE_HZ, subtype="PCM_24")
+    ran = subprocess.run([sys.executable, "-m", "leveller", "finish", "cut.wav", "--delivery", "r128"],
+                         capture_output=True, text=True, check=False, cwd=tmp_path)
+    lines = ran.stdout.splitlines()
+    at = lines.index("Listen here first")
+    assert lines[at + 1 : at + 3] == [
+        "  0:00:10 mix: silence, under -63 LUFS for 6.0 s", "  0:00:20 cut: full scale, maybe clipped, for 0.02 s in all"]
+    assert not [line for line in lines if line.startswith("  speech")]
