@@ -284,5 +284,6 @@ def test_the_command_says_where_to_listen(tmp_path: Path) -> None:
     lines = ran.stdout.splitlines()
     at = lines.index("Listen here first")
     assert lines[at + 1 : at + 3] == [
-        "  0:00:10 mix: silence, under -63 LUFS for 6.0 s", "  0:00:20 cut: full scale, maybe clipped, for 0.02 s in all"]
+        "  0:00:10 mix: silence, under -63 LUFS for 6.0 s",
+        "  0:00:20 cut: full scale, maybe clipped, for 0.02 s in all"]
     assert not [line for line in lines if line.startswith("  speech")]
