@@ -130,12 +130,13 @@ def finish(
         from leveller import pipeline
         from leveller.report.finished import finished_figures
         from leveller.settings import parse_assignments
+        from leveller.spots import spots_to_hear
 
         with console.progress(console.FINISH_SHARES, quiet=quiet) as on_progress:
             finished = pipeline.finish(
                 files, out=out, replace=replace, delivery=delivery, settings=parse_assignments(assignments or []),
                 accept_short=accept_short, on_progress=on_progress)
-        _print_report(finished_figures(finished), finished.out, quiet)
+        _print_report(finished_figures(finished), finished.out, quiet, spots_to_hear(finished), "report.html")
 
 
 @app.command()
@@ -304,17 +305,18 @@ def _told(error: BaseException, debug: bool) -> tuple[str, int]:
 def _print_summary(result: Any, quiet: bool) -> None:
     """The summary of a run."""
     from leveller.report.figures import figures_of
+    from leveller.report.text import LISTED_IN
 
-    _print_report(figures_of(result), result.out, quiet, result.places)
+    _print_report(figures_of(result), result.out, quiet, result.places, LISTED_IN)
 
 
-def _print_report(report: Any, out: Path, quiet: bool, places: Sequence[Any] = ()) -> None:
+def _print_report(report: Any, out: Path, quiet: bool, places: Sequence[Any], listed_in: str) -> None:
     """A report; a delivery that is not met is said in any case."""
     from leveller.report.text import format_summary
 
     if not quiet:
         width = console.terminal_width(sys.stdout)
-        console.print_lines(format_summary(report, out=_near(out), places=places, width=width))
+        console.print_lines(format_summary(report, out=_near(out), places=places, listed_in=listed_in, width=width))
     elif not report.delivery.met:
         console.print_error(f"delivery not met: {report.delivery.why_not}")
 

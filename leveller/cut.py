@@ -7,12 +7,14 @@ Without a delivery the files decide: `podcast-stereo` where one of them has two 
 
 Files of other rates are resampled to the most common one (a tie takes the higher); all start together, and shorter ones
 end in silence.
+
+The outlines that report.html draws, of files and mix, are taken as the blocks pass by: nothing is read again.
 """
 
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -20,17 +22,20 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import TrackReader, open_readers, probe
+from leveller.audio import open_readers, probe
 from leveller.errors import InputError, SettingsError
 from leveller.folder import OutputFolder
 from leveller.lanes import walk
 from leveller.measure import OnProgress
+from leveller.measure.outline import Outlined, hop_outline
 from leveller.names import safe_name, unique_names
+from leveller.render.limiter import MakeUp
 from leveller.render.mix import BLOCK_S, Bus, Mix
-from leveller.render.programme import SpilledSum, summed
+from leveller.render.programme import Programme, SpilledSum, summed
 from leveller.samples import FileFacts
 from leveller.session import Session, Track, audio_files
 from leveller.settings import Settings, delivery_named
+from leveller.units import hop_to_frame
 
 DEFAULT_OUT = Path("levelled")
 MARGIN_BYTES = 16 << 20  # tables and what else is small
@@ -47,6 +52,9 @@ class Finished:
     mix: Mix
     repaired_frames: tuple[int, ...]  # per file: NaN or Inf silenced
     out: Path
+    file_peaks: tuple[Outlined, ...]  # per file: sample peak of each hop at the cut's rate, linear
+    mix_peaks: Outlined  # the same of the mix as delivered
+    limiter_db: Outlined  # the limiter's deepest gain in each hop, 0 or less
     stems: str = "none"  # as report.json names them
 
 
@@ -83,13 +91,16 @@ def open_cut(
 def deliver_cut(session: Session, folder: OutputFolder, on_progress: OnProgress) -> Finished:
     """Sum the files of a cut and deliver the sum as mix.wav of the folder."""
     frames = round(BLOCK_S * session.rate_hz)
+    outlines = [hop_outline(session.frames, session.rate_hz) for _ in session.tracks]
     length_s = session.frames / session.rate_hz
     with (SpilledSum(folder.work / ".sum", session.rate_hz, session.mix_channels, frames) as spilled,
           open_readers(session) as readers):
         bus = Bus(session.rate_hz, session.mix_channels)
 
         def step(lane: int, block: int) -> Samples:
-            return _placed(readers[lane], min(frames, session.frames - block * frames), session.mix_channels)
+            own = readers[lane].read(min(frames, session.frames - block * frames))
+            outlines[lane].push(own)
+            return _placed(own, session.mix_channels)
 
         for block, row in enumerate(walk(step, lanes=len(readers), blocks=-(-session.frames // frames))):
             total = summed(row)
@@ -97,13 +108,38 @@ def deliver_cut(session: Session, folder: OutputFolder, on_progress: OnProgress)
             spilled.append(total)
             on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
         repaired = tuple(reader.repaired_frames for reader in readers)
-        mix = bus.deliver(folder.work / "mix.wav", spilled, session.delivery, session.settings.limiter, on_progress)
-    return Finished(session, mix, repaired, folder.path)
+        seen = _Outlined(spilled, session.rate_hz)
+        mix = bus.deliver(folder.work / "mix.wav", seen, session.delivery, session.settings.limiter, on_progress)
+    peaks = seen.outline.result()
+    return Finished(session, mix, repaired, folder.path, tuple(outline.result() for outline in outlines),
+                    peaks, _limiter_per_hop(mix, len(peaks), session.rate_hz))
 
 
-def _placed(reader: TrackReader, frames: int, channels: int) -> Samples:
-    """The next block of a file with the channels of the mix."""
-    block = reader.read(frames)
+class _Outlined:
+    """A programme whose delivered blocks are outlined as they pass."""
+
+    def __init__(self, programme: Programme, rate_hz: int) -> None:
+        self.frames, self._programme, self._rate_hz = programme.frames, programme, rate_hz
+        self.outline = hop_outline(self.frames, rate_hz)
+
+    def delivered(self, make_up: MakeUp) -> Iterator[Samples]:
+        """As `Programme`; each walk makes the outline anew."""
+        self.outline = hop_outline(self.frames, self._rate_hz)
+        for block in self._programme.delivered(make_up):
+            self.outline.push(block)
+            yield block
+
+
+def _limiter_per_hop(mix: Mix, hops: int, rate_hz: int) -> Outlined:
+    """The limiter's deepest gain in each hop, in dB."""
+    edges = hop_to_frame(np.arange(hops + 1), rate_hz) // round(mix.cell_s * rate_hz)
+    edges = np.minimum(edges, len(mix.limiter_db) - 1)
+    within = np.minimum.reduceat(mix.limiter_db, edges[:-1])
+    return np.asarray(np.minimum(within, mix.limiter_db[edges[1:]]), np.float32)
+
+
+def _placed(block: Samples, channels: int) -> Samples:
+    """A block of a file with the channels of the mix."""
     if channels == 1:
         return block if block.ndim == 1 else np.asarray(block.mean(axis=1))
     return block if block.ndim == 2 else np.repeat(block[:, None], 2, axis=1)

@@ -46,6 +46,11 @@ class Place:
     reason: str
     doubt: float  # 0 .. 1, of a word lost for certain
 
+    @property
+    def sentence(self) -> str:
+        """For the console."""
+        return f"{self.track}: {self.decided}, could be {self.could_be}; {self.reason}"
+
 
 def places_to_hear(activity: Activity, plan: GainPlan, session: Session) -> tuple[Place, ...]:
     """Places ranked by doubt, the most doubtful first; none where nothing is in doubt."""

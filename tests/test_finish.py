@@ -16,7 +16,7 @@ import pyebur128
 import pytest
 import soundfile as sf
 
-from leveller import pipeline
+from leveller import audio, pipeline
 from leveller.errors import InputError, LevellerError, OutputError, SettingsError
 from leveller.settings import DELIVERIES
 
@@ -24,6 +24,7 @@ LUFS_BAND = 0.1  # of the target; EBU R 128 allows 0.2 LU
 PEAK_BAND_DB = 0.01
 RATE_HZ = 16_000
 PCM24_STEP = 2.0**-23
+OUTLINE_BAND = 0.02  # linear, of ours: of each peak cell of 1 ms the highest gain counts; measured 0.0096
 
 
 @pytest.fixture(scope="module")
@@ -74,9 +75,10 @@ def test_every_delivery_is_met(place: Path, tmp_path: Path, name: str) -> None:
 
 
 def test_the_folder_holds_mix_and_reports_only(place: Path, tmp_path: Path) -> None:
-    """mix.wav, mix.csv, report.json; mix.csv has a row every 0.1 s."""
+    """mix.wav, mix.csv, report.json, report.html; mix.csv has a row every 0.1 s."""
     pipeline.finish(place / "cut.wav", out=tmp_path / "f")
-    assert sorted(path.name for path in (tmp_path / "f").iterdir()) == ["mix.csv", "mix.wav", "report.json"]
+    assert sorted(path.name for path in (tmp_path / "f").iterdir()) == [
+        "mix.csv", "mix.wav", "report.html", "report.json"]
     with open(tmp_path / "f" / "mix.csv", encoding="utf-8", newline="") as file:
         rows = list(csv.DictReader(file))
     assert len(rows) == 210
@@ -92,6 +94,41 @@ def test_nothing_but_gain_is_done_where_nothing_is_limited(place: Path, tmp_path
     expected = source * 10 ** (finished.mix.make_up_db / 20)
     assert np.abs(out[:, 0] - expected).max() <= PCM24_STEP
     assert np.array_equal(out[:, 0], out[:, 1])
+
+
+@pytest.mark.parametrize(("delivery", "least_db"), [("r128", 0.0), ("podcast-stereo", 3.0)])
+def test_the_drawn_outlines_are_those_of_the_files(
+    place: Path, tmp_path: Path, delivery: str, least_db: float
+) -> None:
+    """Per 10 ms the outlines have the peak of the given file, and of mix.wav as written, limited or not."""
+    cut, rate_hz = sf.read(place / "cut.wav")
+    if least_db:
+        for at in range(rate_hz, len(cut), 3 * rate_hz):
+            cut[at : at + rate_hz // 50] *= 1 / np.abs(cut[at : at + rate_hz // 50]).max()  # a knock of 20 ms
+    sf.write(tmp_path / "knocks.wav", cut, rate_hz, subtype="PCM_24")
+    finished = pipeline.finish(tmp_path / "knocks.wav", out=tmp_path / "f", delivery=delivery)
+    assert finished.mix.limiting.most_db >= least_db
+    assert -finished.limiter_db.min() == pytest.approx(finished.mix.limiting.most_db, abs=1e-3)
+    drawn = {tmp_path / "knocks.wav": finished.file_peaks[0], tmp_path / "f" / "mix.wav": finished.mix_peaks}
+    for path, outline in drawn.items():
+        samples, rate_hz = sf.read(path, always_2d=True)
+        peaks = np.abs(samples).max(axis=1)
+        hop = rate_hz // 100
+        expected = np.array([peaks[at : at + hop].max() for at in range(0, len(peaks), hop)])
+        assert outline.shape == expected.shape
+        assert (outline - expected).min() > -1e-6  # never lower than what is heard, but for the rounding of 24 bit
+        assert (outline - expected).max() < OUTLINE_BAND
+
+
+def test_the_files_are_read_once(place: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Each file of a cut is decoded once, whole, for sum, outline and page; the sum is read back once for the mix."""
+    decoded, spilled = [], []
+    close, blocks = audio.TrackReader.close, audio.FloatSpill.blocks
+    monkeypatch.setattr(audio.TrackReader, "close", lambda own: (decoded.append(own.blocks_read), close(own)))
+    monkeypatch.setattr(audio.FloatSpill, "blocks", lambda own, n: (spilled.append(n), blocks(own, n))[1])
+    finished = pipeline.finish(place / "cut.wav", out=tmp_path / "f", delivery="r128")
+    assert decoded == [-(-finished.session.frames // audio.CHUNK_FRAMES)]
+    assert len(spilled) == 1
 
 
 def test_stems_of_process_finish_to_its_mix(place: Path, tmp_path: Path) -> None:
@@ -234,3 +271,19 @@ def test_the_command_says_what_the_mix_reads(place: Path, tmp_path: Path) -> Non
     assert (ran.returncode, ran.stderr) == (0, "")
     assert ran.stdout.startswith("Delivery met: -23.0")
     assert (tmp_path / "levelled" / "cut finished" / "mix.wav").is_file()
+
+
+def test_the_command_says_where_to_listen(tmp_path: Path) -> None:
+    """What stands out is printed as a session's places are, the strongest first; no figure of speech is left blank."""
+    wave = np.random.default_rng(5).uniform(-0.1, 0.1, 30 * RATE_HZ)
+    wave[10 * RATE_HZ : 16 * RATE_HZ] = 0
+    wave[20 * RATE_HZ : 20 * RATE_HZ + 320] = 1.0
+    sf.write(tmp_path / "cut.wav", wave, RATE_HZ, subtype="PCM_24")
+    ran = subprocess.run([sys.executable, "-m", "leveller", "finish", "cut.wav", "--delivery", "r128"],
+                         capture_output=True, text=True, check=False, cwd=tmp_path)
+    lines = ran.stdout.splitlines()
+    at = lines.index("Listen here first")
+    assert lines[at + 1 : at + 3] == [
+        "  0:00:10 mix: silence, under -63 LUFS for 6.0 s",
+        "  0:00:20 cut: full scale, maybe clipped, for 0.02 s in all"]
+    assert not [line for line in lines if line.startswith("  speech")]

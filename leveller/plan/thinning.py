@@ -11,7 +11,6 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-
 CORNER_DB = 0.5  # a curve that turns by more from one hop to the next has a corner there
 
 

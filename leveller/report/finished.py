@@ -1,4 +1,4 @@
-"""A finished cut -> the same kind of report as a session has: delivery, mix, what was said of the files."""
+"""A finished cut -> the same kinds of report as a session has: delivery, mix, what was said of the files, the page."""
 
 from __future__ import annotations
 
@@ -6,10 +6,13 @@ import dataclasses
 
 from leveller.cut import Finished
 from leveller.folder import OutputFolder
+from leveller.report.cut_page import write_cut_page
 from leveller.report.faults import mix_left_open
 from leveller.report.figures import delivery_figures, mix_figures
 from leveller.report.records import Fault, Report
 from leveller.report.tables import write_mix, write_report
+from leveller.report.text import summary_blocks
+from leveller.spots import spots_to_hear
 
 
 def finished_figures(finished: Finished) -> Report:
@@ -21,10 +24,11 @@ def finished_figures(finished: Finished) -> Report:
 
 
 def write_finished(folder: OutputFolder, finished: Finished) -> Report:
-    """Write mix.csv and report.json; returns the report they were made from."""
+    """Write mix.csv, report.json and report.html; returns the report they were made from."""
     report = finished_figures(finished)
     write_mix(folder.file("mix.csv"), finished)
     write_report(folder.file("report.json"), report, finished, stages=("limiter",))
+    write_cut_page(folder.file("report.html"), finished, spots_to_hear(finished), summary_blocks(report))
     return report
 
 

@@ -3,17 +3,14 @@
 const KEYS = [
   ["Left, Right", "a tenth of a second at close range, a second else; with Ctrl ten times as far"],
   ["Up, Down", "the line above, the line below"],
-  ["Home, End", "start and end of the line; with Ctrl of the session"],
-  ["with Shift", "marks a stretch of the chosen track"],
-  ["T, Shift+T", "next track, track before"],
-  ["Enter", "marks the whole stretch of one state at the position"],
+  ["Home, End", "start and end of the line; with Ctrl of it all"],
+  ["with Shift", KIND.marks],
+  ...(record.tracks.length > 1 ? [["T, Shift+T", `next ${KIND.track}, ${KIND.track} before`]] : []),
   ["Space", "plays, or pauses; a marked stretch alone"],
-  ["1, 2, 3", "hear the source, the stem, the mix"],
-  ["N, P", "next doubtful place, place before: jumps and plays"],
-  ["O, B, S", "it is own voice, bleed, silence"],
-  ["G", "to the gain field"],
+  [KIND.hear.map((_, i) => i + 1).join(", "), `hear ${KIND.hear.map(([, text]) => `the ${text}`).join(", ")}`],
+  ["N, P", "next place worth a listen, place before: jumps and plays"],
+  ...KIND.keys,
   ["+, \u2212, 0", "shorter lines, longer lines, all on one line"],
-  ["Ctrl+Z, Ctrl+Y", "undo, redo"],
   ["Escape", "unmarks"],
 ];
 const LEAD_S = 1; // heard before and behind a doubtful place
@@ -31,8 +28,7 @@ function moveTo(time, {quiet = false} = {}) {
 function choose(track) {
   view.track = track;
   byId("track").selectedIndex = track.index;
-  byId("mend-track").selectedIndex = track.index;
-  countShort();
+  choseTrack(track);
   if (sound.playing && sound.what !== "mix") playFrom(view.time, sound.until); else shownPlaying();
   show(view.time);
   describe();
@@ -43,9 +39,7 @@ function pick(track, from, to, {jump = false} = {}) {
   const picked = {track, from: Math.max(0, Math.min(from, to)), to: Math.min(record.length_s, Math.max(from, to))};
   view.picked = picked.to - picked.from < HOP_S / 2 ? null : picked;
   if (track !== view.track) choose(track);
-  byId("scope-one").checked = true;
-  byId("mend-from").value = view.picked ? clock(view.picked.from) : "";
-  byId("mend-to").value = view.picked ? clock(view.picked.to) : "";
+  pickedStretch();
   if (jump) moveTo(from);
   else describe();
   wantDrawing();
@@ -53,7 +47,7 @@ function pick(track, from, to, {jump = false} = {}) {
 
 function unpick() {
   view.picked = view.anchor = null;
-  byId("mend-from").value = byId("mend-to").value = "";
+  pickedStretch();
   describe();
   wantDrawing();
 }
@@ -61,15 +55,14 @@ function unpick() {
 // The position in words: beside the score for all, and aloud for who cannot see it.
 function describe(quiet = false) {
   byId("clock").textContent = clock(view.time);
-  const lufs = loudnessAt(view.time);
-  const parts = record.tracks.map((track) => `${track.name} ${stateWord(track, view.time)} ${signed(gainAt(track, view.time))} dB`);
+  const lufs = loudnessAt(view.time), parts = wordsAt(view.time);
   if (lufs !== null) parts.push(`mix ${plain(lufs)} LUFS short-term`);
   byId("reading").textContent = `At ${clock(view.time)}: ${parts.join(" \u00b7 ")}`;
   if (quiet) return;
   clearTimeout(saying);
   saying = setTimeout(() => {
     const picked = view.picked ? `, marked ${clock(view.picked.from)} to ${clock(view.picked.to)} on ${view.picked.track.name}` : "";
-    byId("said").textContent = `${clock(view.time)}, ${view.track.name}: ${stateWord(view.track, view.time)}, gain ${signed(gainAt(view.track, view.time))} dB${picked}`;
+    byId("said").textContent = `${clock(view.time)}, ${saidAt(view.time)}${picked}`;
   }, 300);
 }
 
@@ -81,7 +74,7 @@ function toPlace(i) {
   const item = byId("places").children[place];
   if (document.activeElement?.closest("#places")) item.firstElementChild.focus();
   item.scrollIntoView({block: "nearest"});
-  if (found.owner) pick(found.owner, found.from_s, found.to_s, {jump: true}); else moveTo(found.from_s);
+  pick(found.owner ?? view.track, found.from_s, found.to_s, {jump: true});
   playFrom(Math.max(0, found.from_s - LEAD_S), Math.min(record.length_s, found.to_s + LEAD_S));
 }
 
@@ -92,11 +85,6 @@ function step(time, marking) {
   if (!marking) { if (view.picked) unpick(); view.anchor = null; return; }
   pick(view.track, anchor, view.time);
   view.anchor = anchor;
-}
-
-function takeRun() {
-  const run = runAt(view.track, view.time);
-  pick(view.track, view.track.runStart[run] * HOP_S, view.track.runStart[run + 1] * HOP_S);
 }
 
 function turnTrack(by) {
@@ -119,24 +107,15 @@ function scoreKey(event) {
 }
 
 function letterKey(event) {
+  const heard = KIND.hear.map(([what], i) => [i + 1, () => hear(what)]);
   const keys = {
-    " ": playOrPause, enter: takeRun, escape: unpick, t: () => turnTrack(event.shiftKey ? -1 : 1),
-    1: () => hear("source"), 2: () => hear("stem"), 3: () => hear("mix"), n: () => toPlace(place + 1), p: () => toPlace(place < 0 ? -1 : place - 1),
-    o: () => decide("own"), b: () => decide("bleed"), s: () => decide("silence"), g: () => byId("gain").focus(),
+    " ": playOrPause, escape: unpick, t: () => turnTrack(event.shiftKey ? -1 : 1), n: () => toPlace(place + 1), p: () => toPlace(place < 0 ? -1 : place - 1),
     "+": () => nextSpan(false), "=": () => nextSpan(false), "-": () => nextSpan(true), 0: () => setSpan(wholeSpan()),
+    ...Object.fromEntries(heard), ...KIND.letters,
   };
   const act = keys[event.key.toLowerCase()];
   if (act) act();
   return Boolean(act);
-}
-
-function anyKey(event) {
-  if (!(event.ctrlKey || event.metaKey) || event.target.matches("input:not([type=radio])")) return;
-  const key = event.key.toLowerCase();
-  if (key === "z" || key === "y") {
-    event.preventDefault();
-    if (key === "y" || event.shiftKey) redo(); else undo();
-  }
 }
 
 let pressed = null;
@@ -178,32 +157,26 @@ function wheeled(event) {
   setSpan(view.span * Math.exp(event.deltaY / 400), spot(event).time);
 }
 
-function countShort() {
-  byId("short-count").textContent = String(shortAnswers(view.track, secondsOf(byId("short-s").value)).length);
-}
-
 function fill() {
   const {delivery} = record, silent = delivery.reads_lufs === null || delivery.peak_dbtp === null;
   byId("title").textContent = record.title;
-  byId("facts").textContent = [clock(record.length_s, 0), `${record.tracks.length} ${record.tracks.length === 1 ? "track" : "tracks"}`,
+  byId("facts").textContent = [clock(record.length_s, 0), `${record.tracks.length} ${KIND.track}${record.tracks.length === 1 ? "" : "s"}`,
     `${delivery.name}: wanted ${plain(delivery.target_lufs)} LUFS under ${plain(delivery.ceiling_dbtp)} dBTP`,
     silent ? "reads silent" : `reads ${plain(delivery.reads_lufs)} LUFS, ${plain(delivery.peak_dbtp)} dBTP`,
     delivery.met ? "on target" : `not on target${delivery.reason ? `: ${delivery.reason}` : ""}`].join(" \u00b7 ");
-  for (const id of ["track", "mend-track"])
-    byId(id).append(...record.tracks.map((track) => make("option", {}, track.name)));
+  byId("track").append(...record.tracks.map((track) => make("option", {}, track.name)));
+  fillKind();
   fillHear();
   fillPlaces();
   byId("keys-list").append(...KEYS.flatMap(([key, does]) => [make("dt", {}, key), make("dd", {}, does)]));
   byId("summary-box").hidden = !record.summary.length;
   for (const {heading, lines: texts} of record.summary)
     byId("summary").append(make("h3", {}, heading), make("ul", {}, ...texts.map((text) => make("li", {}, text))));
-  const legend = [["own", "own voice: filled"], ["bleed", "bleed: hatched"], ["silence", "silence: a line"],
-    ["gain", "gain before make-up: hangs from its highest, named at the left beside its lowest"], ["loud", "mix: short-term loudness, target dashed"]];
-  byId("legend").append(...legend.map(([kind, text]) => make("li", {class: kind}, text)));
+  byId("legend").append(...KIND.legend.map(([kind, text]) => make("li", {class: kind}, text)));
 }
 
 function fillHear() {
-  for (const [what, text] of [["source", "source"], ["stem", "stem"], ["mix", "mix"]]) {
+  for (const [what, text] of KIND.hear) {
     const radio = make("input", {type: "radio", name: "hear", id: `hear-${what}`, "aria-describedby": `hear-${what}-why`});
     radio.addEventListener("change", () => hear(what));
     byId("hear").append(make("label", {}, radio, ` ${text} `, make("small", {id: `hear-${what}-why`})));
@@ -214,9 +187,7 @@ function fillPlaces() {
   byId("places-none").hidden = record.places.length > 0;
   record.places.forEach((found, i) => {
     found.owner = trackNamed(found.track);
-    const button = make("button", {type: "button", class: "entry"},
-      make("b", {}, `${clock(found.from_s, 1)} ${found.track}`), make("span", {}, ` ${found.decided}, could be ${found.could_be}`),
-      make("small", {}, `${found.reason} \u00b7 doubt ${plain(found.doubt, 2)}`));
+    const button = make("button", {type: "button", class: "entry"}, ...placeWords(found));
     button.addEventListener("click", () => toPlace(i));
     button.addEventListener("keydown", (event) => {
       const by = {ArrowDown: 1, ArrowUp: -1}[event.key];
@@ -234,25 +205,13 @@ function wire() {
   on("longer", "click", () => nextSpan(true));
   on("shorter", "click", () => nextSpan(false));
   on("whole", "click", () => setSpan(wholeSpan()));
-  for (const id of ["track", "mend-track"]) on(id, "change", () => choose(record.tracks[byId(id).selectedIndex]));
+  on("track", "change", () => choose(record.tracks[byId("track").selectedIndex]));
   on("keys-open", "click", () => {
     byId("keys").hidden = !byId("keys").hidden;
     byId("keys-open").setAttribute("aria-expanded", String(!byId("keys").hidden));
   });
-  for (const what of ["own", "bleed", "silence"]) on(`decide-${what}`, "click", () => decide(what));
-  on("decide-gain", "click", decideGain);
-  on("gain", "keydown", (event) => { if (event.key === "Enter") decideGain(); });
-  on("short-s", "input", countShort);
-  on("undo", "click", undo);
-  on("redo", "click", redo);
-  on("save", "click", save);
-  for (const id of ["mend-from", "mend-to"]) on(id, "change", typedStretch);
+  wireKind(on);
   wireScore(on);
-}
-
-function typedStretch() {
-  const from = secondsOf(byId("mend-from").value), to = secondsOf(byId("mend-to").value);
-  if (from < to) pick(view.track, from, to, {jump: true});
 }
 
 function wireScore(on) {
@@ -267,7 +226,7 @@ function wireScore(on) {
     const {time, track} = spot(event);
     if (track) choose(track);
     moveTo(time);
-    takeRun();
+    takeAround();
     playOrPause();
   });
   on("map", "click", (event) => {
@@ -275,19 +234,16 @@ function wireScore(on) {
     if (sound.playing) playFrom(time);
     moveTo(time);
   });
-  document.addEventListener("keydown", anyKey);
   new ResizeObserver(wantDrawing).observe(score);
   for (const query of ["(prefers-color-scheme: dark)", "(forced-colors: active)", "(prefers-contrast: more)"])
     matchMedia(query).addEventListener("change", mixInk);
 }
 
-recall();
 fill();
 wire();
 mixInk();
 setSpan(record.length_s <= 40 ? wholeSpan() : record.length_s <= 600 ? 20 : 60);
 choose(record.tracks[0]);
-listMends();
 describe(true);
 draw();
 document.documentElement.setAttribute("data-ready", "");

@@ -1,6 +1,7 @@
 """report.html: one page that opens from disk, shows every decision, plays it, and takes corrections.
 
-The page is one file. `page.html` holds its bones, `page.css` its look, and the scripts of `SCRIPTS` what it does; all
+The page is one file. `page.html` holds its bones, `page.css` its look, and scripts what it does. Most of them serve a
+session and a finished cut alike; a `PageKind` says which belong to one alone (`cut_page` has the other). All
 are inlined here, and the record of the run goes in as JSON in a block that no browser runs, with `<`, `>` and `&`
 escaped. The content security policy admits exactly this script and this style (by hash), media beside the page, and
 no network. A name from a file reaches the document as text only.
@@ -21,7 +22,8 @@ import html
 import json
 import math
 import os
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Protocol
 from urllib.parse import quote
@@ -31,14 +33,15 @@ import numpy.typing as npt
 
 from leveller.measure.levels import SILENT, level_to_db
 from leveller.plan import STATES, TrackGain
-from leveller.session import Track
+from leveller.render.mix import Mix
+from leveller.session import Session, Track
 from leveller.sessionfile import GAIN_BOUNDS
 from leveller.units import HOPS_PER_S, Bools
 
 if TYPE_CHECKING:
     from leveller.pipeline import Result
 
-SCRIPTS = ("page_record.js", "page_sound.js", "page_score.js", "page_drawing.js", "page_mend.js", "page.js")
+SHARED_SCRIPTS = ("page_record.js", "page_sound.js", "page_score.js", "page_drawing.js")
 MOST_CELLS = 3_000_000  # bytes of drawn levels over all tracks; an hour of three tracks has 1 080 000
 LOWEST_DB = -127.0  # byte 0; half a dB a step from here
 STEPS_PER_DB = 2
@@ -47,6 +50,21 @@ LOUDNESS_EVERY_HOPS = 10
 SHORT_TERM_HOPS = 300  # EBU Tech 3341, 2.2: window of 3 s
 NO_LOUDNESS = -32768
 PLAYED_BY_BROWSERS = frozenset({".wav", ".wave", ".bwf", ".flac", ".ogg", ".oga", ".opus", ".mp3"})
+
+
+@dataclass(frozen=True)
+class PageKind:
+    """What a page of one kind is made of besides what all share."""
+
+    scripts: tuple[str, ...]  # its own
+    mend: str  # file of bones for what can be mended; empty where nothing can
+    words: Mapping[str, str]  # for the bones
+
+
+SESSION = PageKind(
+    ("page_staff.js", "page_mend.js"), "page_mend.html",
+    {"TRACK": "Track", "PIECE": "session", "NOTHING": "Nothing is in doubt.",
+     "ASIDE": "Places, corrections, summary"})
 
 
 class Place(Protocol):
@@ -89,11 +107,17 @@ def write_page(
 
 def page_html(result: Result, places: Sequence[Place], summary: Sequence[tuple[str, Sequence[str]]]) -> str:
     """The whole page as text; the same result gives the same text."""
+    return assembled(result.session.title, _record(result, places, summary), SESSION)
+
+
+def assembled(title: str, record: dict[str, Any], kind: PageKind) -> str:
+    """A page of some kind about a record."""
     style = _part("page.css")
-    script = '(() => {\n"use strict";\n' + "\n".join(_part(name) for name in SCRIPTS) + "})();\n"
+    names = (*SHARED_SCRIPTS, *kind.scripts, "page.js")
+    script = '(() => {\n"use strict";\n' + "\n".join(_part(name) for name in names) + "})();\n"
     inserts = {
-        "POLICY": _policy(script, style), "TITLE": html.escape(result.session.title), "STYLE": style, "SCRIPT": script,
-        "RECORD": _escaped_json(_record(result, places, summary))}
+        **kind.words, "POLICY": _policy(script, style), "TITLE": html.escape(title), "STYLE": style, "SCRIPT": script,
+        "MEND": _part(kind.mend) if kind.mend else "", "RECORD": _escaped_json(record)}
     pieces = _part("page.html").split("%%")  # bones, key, bones, key, ...
     return "".join(inserts[piece] if i % 2 else piece for i, piece in enumerate(pieces))
 
@@ -126,27 +150,38 @@ def _record(
     result: Result, places: Sequence[Place], summary: Sequence[tuple[str, Sequence[str]]]) -> dict[str, Any]:
     """All that the page knows."""
     session, mix = result.session, result.mix
-    cell_hops = _cell_hops(result.measurements.hops, len(session.tracks))
+    cell_hops = hops_per_cell(result.measurements.hops, len(session.tracks))
     return {
         "title": session.title, "length_s": session.frames / session.rate_hz, "hops": result.measurements.hops,
         "cell_hops": cell_hops, "lowest_db": LOWEST_DB, "steps_per_db": STEPS_PER_DB, "states": STATES,
         "gain_bounds_db": GAIN_BOUNDS[:2],
-        "delivery": {"name": mix.delivery.name, "target_lufs": mix.delivery.target_lufs,
-                     "ceiling_dbtp": mix.delivery.ceiling_dbtp, "reads_lufs": _finite(mix.loudness.integrated_lufs),
-                     "peak_dbtp": _finite(mix.true_peak_dbtp), "met": mix.met, "reason": mix.reason},
+        **mix_record(mix),
         "tracks": [_track(result, i, cell_hops) for i in range(len(session.tracks))],
-        "loudness": _loudness(mix.short_term_lufs), "loudness_from_s": SHORT_TERM_HOPS / HOPS_PER_S,
-        "loudness_every_s": LOUDNESS_EVERY_HOPS / HOPS_PER_S,
         "skips": [{"from_s": skip.from_s, "to_s": skip.to_s, "why": skip.why} for skip in session.skips],
         "places": [_place(place) for place in places],
-        "summary": [{"heading": heading, "lines": list(lines)} for heading, lines in summary],
+        "summary": summary_record(summary),
         "corrections": [{"track": c.track, "from_s": c.from_s, "to_s": c.to_s, "decide": c.decide, "gain_db": c.gain_db}
                         for c in session.corrections]}
 
 
-def _cell_hops(hops: int, tracks: int) -> int:
-    """Hops that one drawn cell covers: a power of two, so that all cells together stay under `MOST_CELLS`."""
-    return int(2 ** max(0, math.ceil(math.log2(max(1, hops * tracks) / MOST_CELLS))))
+def mix_record(mix: Mix) -> dict[str, Any]:
+    """What every page knows of the mix: what was asked for, what it reads, its loudness over time."""
+    delivery = {
+        "name": mix.delivery.name, "target_lufs": mix.delivery.target_lufs, "ceiling_dbtp": mix.delivery.ceiling_dbtp,
+        "reads_lufs": _finite(mix.loudness.integrated_lufs), "peak_dbtp": _finite(mix.true_peak_dbtp), "met": mix.met,
+        "reason": mix.reason}
+    return {"delivery": delivery, "loudness": _loudness(mix.short_term_lufs),
+            "loudness_from_s": SHORT_TERM_HOPS / HOPS_PER_S, "loudness_every_s": LOUDNESS_EVERY_HOPS / HOPS_PER_S}
+
+
+def summary_record(summary: Sequence[tuple[str, Sequence[str]]]) -> list[dict[str, Any]]:
+    """Headings with their lines."""
+    return [{"heading": heading, "lines": list(lines)} for heading, lines in summary]
+
+
+def hops_per_cell(hops: int, rows: int, most_cells: int = MOST_CELLS) -> int:
+    """Hops that one drawn cell covers: a power of two, so that the cells of all rows together are not too many."""
+    return int(2 ** max(0, math.ceil(math.log2(max(1, hops * rows) / most_cells))))
 
 
 def _track(result: Result, i: int, cell_hops: int) -> dict[str, Any]:
@@ -154,12 +189,12 @@ def _track(result: Result, i: int, cell_hops: int) -> dict[str, Any]:
     track, activity = result.session.tracks[i], result.activity
     cells = _cells(result.measurements.k_levels[:, i], cell_hops)
     hop, gain_cdb = _gain(result.plan.tracks[i])
-    url, why = _source_url(track, result)
+    url, why = source_url(track, result.out)
     return {
         "name": track.name, "role": track.role, "levels": base64.b64encode(cells.tobytes()).decode(),
         "top_db": _top_db(cells), "runs": _runs(activity.own[:, i], activity.bleed[:, i]), "gain_hop_steps": hop,
         "gain_cdb": gain_cdb, "stem": f"stems/{quote(track.name, safe='')}.wav", "source": url, "source_why": why,
-        "source_note": _source_note(track, result), "offset_s": track.offset_frames / result.session.rate_hz}
+        "source_note": source_note(track, result.session), "offset_s": track.offset_frames / result.session.rate_hz}
 
 
 def _cells(levels: npt.NDArray[np.int16], cell_hops: int) -> npt.NDArray[np.uint8]:
@@ -210,19 +245,19 @@ def _place(place: Place) -> dict[str, Any]:
             "could_be": place.could_be, "reason": place.reason, "doubt": float(place.doubt)}
 
 
-def _source_url(track: Track, result: Result) -> tuple[str | None, str]:
+def source_url(track: Track, out: Path) -> tuple[str | None, str]:
     """The source's address from the page, or None and why there is none."""
     suffix = track.path.suffix.lower()
     if suffix not in PLAYED_BY_BROWSERS:
         return None, f"browsers do not play {suffix or 'a file without a suffix'}"
     try:
-        relative = os.path.relpath(os.path.abspath(track.path), os.path.abspath(result.out))
+        relative = os.path.relpath(os.path.abspath(track.path), os.path.abspath(out))
     except ValueError:  # another drive
         return None, "the source lies on another drive"
     return "/".join(quote(step, safe="") for step in Path(relative).parts), ""
 
 
-def _source_note(track: Track, result: Result) -> str:
+def source_note(track: Track, session: Session) -> str:
     """A word where the source's file holds more than this track."""
-    sharing = sum(other.path == track.path for other in result.session.tracks) > 1
+    sharing = sum(other.path == track.path for other in session.tracks) > 1
     return "all channels of the file" if sharing or track.channels not in ((0,), (0, 1)) else ""

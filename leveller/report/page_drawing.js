@@ -11,13 +11,13 @@ function boxOf(g, n, y) {
 function drawLine(pen, g, box) {
   drawSkips(pen, g, box);
   drawClock(pen, g, box);
-  for (const track of record.tracks) drawStaff(pen, g, box, track, staffTop(g, box, track));
+  drawStaves(pen, g, box);
   drawLoudness(pen, g, box, box.foot - g.band.loudness);
   drawPlaces(pen, g, box);
 }
 
 function drawMarks(pen, g, box) {
-  drawMends(pen, g, box);
+  drawKindMarks(pen, g, box);
   drawPicked(pen, g, box);
   drawPosition(pen, g, box);
 }
@@ -72,134 +72,11 @@ function drawClock(pen, g, box) {
   pen.stroke();
 }
 
-function drawStaff(pen, g, box, track, y) {
-  const base = y + g.band.ridge, ribbon = base + 1, ice = base + g.band.ribbon + 3 * g.u;
-  if (track === view.track) {
-    pen.fillStyle = view.ink.ink;
-    pen.fillRect(2 * g.u, y + 4 * g.u, 4 * g.u, g.band.ridge + g.band.ribbon + g.band.icicles - 6 * g.u);
-  }
-  pen.textAlign = "right";
-  pen.fillStyle = view.ink.ink;
-  font(pen, g, 14, track === view.track ? "700" : "500");
-  pen.fillText(cut(pen, track.name, g.left - 22 * g.u), g.left - 10 * g.u, base - 10 * g.u);
-  font(pen, g, 11);
-  pen.fillStyle = view.ink.gain;
-  pen.fillText(`${signed(track.gainHighest / 100)} / ${signed(track.gainLowest / 100)} dB`, g.left - 10 * g.u, ice + 3 * g.u);
-  const runs = visibleRuns(track, g, box);
-  drawRidges(pen, g, track, runs, box, y, base);
-  drawRibbon(pen, g, runs, ribbon);
-  drawIcicles(pen, g, box, track, ice);
-}
-
 function cut(pen, text, width) {
   if (pen.measureText(text).width <= width) return text;
   const letters = Array.from(text);
   while (letters.length > 1 && pen.measureText(letters.join("") + "\u2026").width > width) letters.pop();
   return letters.join("") + "\u2026";
-}
-
-// Runs of one state as [state, first column, column after]; where many share a column the longest names it.
-function visibleRuns(track, g, box) {
-  const found = [], first = runAt(track, box.from);
-  let current = null, column = -1, kept = 0;
-  for (let i = first; i < track.runState.length && track.runStart[i] * HOP_S < box.to; i++) {
-    const a = Math.max(0, (track.runStart[i] * HOP_S - box.from) * g.perSecond);
-    const b = Math.min(box.columns, (track.runStart[i + 1] * HOP_S - box.from) * g.perSecond);
-    if (Math.ceil(b) - Math.floor(a) <= 1 && Math.floor(a) === column && b - a <= kept) continue;
-    [column, kept] = [Math.floor(a), b - a];
-    if (current && current.state === track.runState[i]) { current.to = b; continue; }
-    if (current) current.to = Math.min(current.to, a);
-    current = {state: track.runState[i], from: a, to: b};
-    found.push(current);
-  }
-  for (let i = 0; i + 1 < found.length; i++) found[i].to = found[i + 1].from;
-  return found;
-}
-
-// One path a state: thousands of short runs cost three fills, not thousands.
-function drawRidges(pen, g, track, runs, box, y, base) {
-  record.states.forEach((state, n) => {
-    const mine = runs.filter((run) => run.state === n), shape = new Path2D();
-    if (!mine.length) return;
-    for (const run of mine) addRidge(shape, g, track, run, box, y, base);
-    if (state === "own") { pen.fillStyle = view.ink.own; pen.fill(shape); return; }
-    if (state === "bleed") { pen.fillStyle = view.patterns.bleed; pen.fill(shape); }
-    pen.strokeStyle = view.ink[state];
-    pen.lineWidth = runs.length > box.columns / 4 ? 0.5 : 1;
-    pen.stroke(shape);
-  });
-}
-
-function addRidge(shape, g, track, run, box, y, base) {
-  const height = g.band.ridge - 2, step = Math.max(1, g.perSecond * HOP_S * record.cell_hops);
-  shape.moveTo(g.left + run.from, base);
-  for (let at = Math.floor(run.from / step) * step; at < run.to; at += step) {
-    const time = box.from + at / g.perSecond;
-    const level = loudest(track, time, time + step / g.perSecond) / record.steps_per_db + record.lowest_db;
-    const top = base - height * Math.max(0, Math.min(1, (level - track.top_db + RIDGE_DB) / RIDGE_DB));
-    shape.lineTo(g.left + Math.max(run.from, at), top);
-    shape.lineTo(g.left + Math.min(run.to, at + step), top);
-  }
-  shape.lineTo(g.left + run.to, base);
-}
-
-function drawRibbon(pen, g, runs, y) {
-  const high = g.band.ribbon - 2, bands = {own: [0, high], bleed: [high * 0.3, high * 0.4], silence: [high / 2, 1]};
-  record.states.forEach((state, n) => {
-    pen.beginPath();
-    for (const run of runs) if (run.state === n)
-      pen.rect(g.left + run.from, y + bands[state][0], Math.max(0.5, run.to - run.from), bands[state][1]);
-    pen.fillStyle = state === "bleed" ? view.patterns.bleed : view.ink[state];
-    pen.fill();
-  });
-  pen.textAlign = "left";
-  font(pen, g, 10.5);
-  for (const run of runs) nameRun(pen, g, run, y, high);
-}
-
-// The state's word, where the run has room for it.
-function nameRun(pen, g, run, y, high) {
-  const state = record.states[run.state], x = g.left + run.from;
-  if (run.to - run.from < 30) return;
-  const room = pen.measureText(state).width + 8 * g.u;
-  if (run.to - run.from < room + 6) return;
-  if (state !== "own") { pen.fillStyle = view.ink.sheet; pen.fillRect(x + 3 * g.u, y, room - 4 * g.u, high); }
-  pen.fillStyle = state === "own" ? view.ink.sheet : view.ink[state === "bleed" ? "bleed" : "faint"];
-  pen.fillText(state, x + 5 * g.u, y + high / 2 + 0.5);
-}
-
-// The gain hangs from the track's highest; the deeper, the softer. One point a column, lowest and highest kept.
-function drawIcicles(pen, g, box, track, y) {
-  const high = g.band.icicles - 3, deep = Math.max(600, track.gainHighest - track.gainLowest);
-  const down = (cdb) => y + high * (track.gainHighest - cdb) / deep;
-  const points = gainPoints(g, box, track);
-  pen.strokeStyle = pen.fillStyle = view.ink.gain;
-  pen.lineWidth = 1.3;
-  pen.beginPath();
-  points.forEach(([x, cdb], i) => (i ? pen.lineTo(x, down(cdb)) : pen.moveTo(x, down(cdb))));
-  pen.stroke();
-  pen.lineTo(box.right, y);
-  pen.lineTo(g.left, y);
-  pen.globalAlpha = 0.16;
-  pen.fill();
-  pen.globalAlpha = 1;
-}
-
-function gainPoints(g, box, track) {
-  const points = [[g.left, gainAt(track, box.from) * 100]], {gainHop, gainCdb} = track;
-  let column = -1, low = 0, high = 0;
-  const keep = () => { if (column >= 0) points.push([g.left + column, low], ...(high > low ? [[g.left + column, high]] : [])); };
-  const dense = (lastNotAfter(gainHop, box.to / HOP_S) - lastNotAfter(gainHop, box.from / HOP_S)) > 2 * g.across;
-  for (let i = lastNotAfter(gainHop, box.from / HOP_S) + 1; i < gainHop.length && gainHop[i] * HOP_S <= box.to; i++) {
-    const x = (gainHop[i] * HOP_S - box.from) * g.perSecond;
-    if (!dense) { points.push([g.left + x, gainCdb[i]]); continue; }
-    if (Math.floor(x) !== column) { keep(); column = Math.floor(x); low = high = gainCdb[i]; }
-    low = Math.min(low, gainCdb[i]);
-    high = Math.max(high, gainCdb[i]);
-  }
-  if (dense) keep();
-  points.push([box.right, gainAt(track, box.to) * 100]);
-  return points;
 }
 
 function drawLoudness(pen, g, box, y) {
@@ -208,7 +85,7 @@ function drawLoudness(pen, g, box, y) {
   font(pen, g, 14, "500");
   pen.textAlign = "right";
   pen.fillStyle = view.ink.ink;
-  pen.fillText("Mix", g.left - 10 * g.u, y + high - 4 * g.u);
+  pen.fillText(KIND.loudness, g.left - 10 * g.u, y + high - 4 * g.u);
   font(pen, g, 11);
   pen.fillStyle = view.ink.loud;
   pen.fillText(`${plain(target, 0)} LUFS`, g.left - 10 * g.u, at(target));
@@ -246,14 +123,14 @@ function bracket(pen, x, to, y, high) {
   pen.stroke();
 }
 
-// Doubtful places: their number in the list, over a short roof.
+// Places to hear: their number in the list, over a short roof.
 function drawPlaces(pen, g, box) {
   font(pen, g, 10.5);
   pen.textAlign = "center";
   const taken = {};
   record.places.forEach((place, i) => {
-    if (!meets(box, place.from_s, place.to_s) || !place.owner) return;
-    const x = xOf(g, box, place.from_s), to = Math.max(x + 2, xOf(g, box, place.to_s)), y = staffTop(g, box, place.owner) - 1;
+    if (!meets(box, place.from_s, place.to_s)) return;
+    const x = xOf(g, box, place.from_s), to = Math.max(x + 2, xOf(g, box, place.to_s)), y = placeTop(g, box, place) - 1;
     pen.strokeStyle = pen.fillStyle = view.ink.ink;
     pen.lineWidth = 2;
     pen.beginPath();
@@ -271,36 +148,17 @@ function drawPlaces(pen, g, box) {
   });
 }
 
-function drawMends(pen, g, box) {
-  font(pen, g, 11);
-  pen.textAlign = "left";
-  for (const mend of mends.list) {
-    const track = trackNamed(mend.track);
-    if (!track || !meets(box, mend.from_s, mend.to_s)) continue;
-    const x = xOf(g, box, mend.from_s), to = xOf(g, box, mend.to_s), y = staffTop(g, box, track) + 14 * g.u;
-    pen.strokeStyle = view.ink.mend;
-    pen.lineWidth = 2;
-    bracket(pen, x, Math.max(x + 3, to), y, g.band.ridge + g.band.ribbon - 15 * g.u);
-    const text = mendText(mend), wide = pen.measureText(text).width + 8 * g.u;
-    if (mend.from_s < box.from) continue;
-    pen.fillStyle = view.ink.mend;
-    pen.fillRect(x, y, wide, 14 * g.u);
-    pen.fillStyle = view.ink.sheet;
-    pen.fillText(text, x + 4 * g.u, y + 7.5 * g.u);
-  }
-}
-
 function drawPicked(pen, g, box) {
   const picked = view.picked;
   if (!picked || !meets(box, picked.from, picked.to)) return;
-  const x = xOf(g, box, picked.from), to = xOf(g, box, picked.to), y = staffTop(g, box, picked.track) - 2;
+  const x = xOf(g, box, picked.from), to = xOf(g, box, picked.to), [y, high] = pickedBand(g, box, picked);
   pen.globalAlpha = 0.45;
   pen.fillStyle = view.patterns.pick;
-  pen.fillRect(x, y, to - x, g.staff - 2);
+  pen.fillRect(x, y, to - x, high);
   pen.globalAlpha = 1;
   pen.strokeStyle = view.ink.ink;
   pen.lineWidth = 2;
-  bracket(pen, x, to, y, g.staff - 2);
+  bracket(pen, x, to, y, high);
 }
 
 function drawPosition(pen, g, box) {
@@ -321,12 +179,12 @@ function drawPosition(pen, g, box) {
   }
 }
 
-// The whole session in one thin row: who speaks, what is in doubt, which part the score shows.
+// All of it in one thin row: what sounds, where to listen, which part the score shows.
 function drawMap(g) {
   const frame = getComputedStyle(map.parentElement);
-  const width = map.parentElement.clientWidth - parseFloat(frame.paddingLeft) - parseFloat(frame.paddingRight), row = Math.max(2, Math.min(6, 30 / record.tracks.length)) * g.u;
-  const high = row * record.tracks.length + 12 * g.u, pen = fitted(map, width, high), perSecond = width / record.length_s;
-  pen.drawImage(mapBars(g, width, row, high), 0, 0, width, high);
+  const width = map.parentElement.clientWidth - parseFloat(frame.paddingLeft) - parseFloat(frame.paddingRight);
+  const high = mapHeight(g), pen = fitted(map, width, high), perSecond = width / record.length_s;
+  pen.drawImage(mapGround(g, width, high), 0, 0, width, high);
   pen.fillStyle = view.ink.ink;
   for (const place of record.places) pen.fillRect(place.from_s * perSecond - 1, 0, 2, 5 * g.u);
   const first = score.scrollTop / g.line * view.span, last = (score.scrollTop + g.height) / g.line * view.span;
@@ -337,16 +195,11 @@ function drawMap(g) {
 }
 
 // The part of the map that stays, drawn once a size and once a colour.
-function mapBars(g, width, row, high) {
+function mapGround(g, width, high) {
   const key = [width, high, view.ink.own, window.devicePixelRatio].join();
   if (view.map.key === key) return view.map.canvas;
-  const canvas = document.createElement("canvas"), pen = fitted(canvas, width, high), own = record.states.indexOf("own");
-  const perSecond = width / record.length_s;
-  pen.fillStyle = view.ink.own;
-  for (const track of record.tracks) for (let i = 0; i < track.runState.length; i++) if (track.runState[i] === own) {
-    const x = track.runStart[i] * HOP_S * perSecond;
-    pen.fillRect(x, 6 * g.u + track.index * row, Math.max(0.6, track.runStart[i + 1] * HOP_S * perSecond - x), row - 1);
-  }
+  const canvas = document.createElement("canvas");
+  fillMap(fitted(canvas, width, high), g, width, high);
   view.map = {key, canvas};
   return canvas;
 }

@@ -1,13 +1,29 @@
-// Corrections: made on a stretch or on all short answers, undone, kept over a reload, saved as corrections.csv.
+// A session's page beyond the score: what it is called and what its keys do, and corrections. These are made on a
+// stretch or on all short answers, undone, kept over a reload, saved as corrections.csv.
 
 const COLUMNS = ["track", "from_s", "to_s", "decide", "gain_db"];
 const KEPT_UNDER = `leveller corrections ${record.digest}`;
 
-const mends = {list: record.corrections.map((mend) => ({...mend})), before: [], after: []};
+const KIND = {
+  track: "track", loudness: "Mix", marks: "marks a stretch of the chosen track",
+  bands: {ridge: 38, ribbon: 12, icicles: 20, mixRidge: 0, mixIcicles: 0},
+  hear: [["source", "source"], ["stem", "stem"], ["mix", "mix"]],
+  keys: [
+    ["Enter", "marks the whole stretch of one state at the position"],
+    ["O, B, S", "it is own voice, bleed, silence"],
+    ["G", "to the gain field"],
+    ["Ctrl+Z, Ctrl+Y", "undo, redo"],
+  ],
+  letters: {
+    enter: () => takeAround(), o: () => decide("own"), b: () => decide("bleed"), s: () => decide("silence"),
+    g: () => byId("gain").focus(),
+  },
+  legend: [["own", "own voice: filled"], ["bleed", "bleed: hatched"], ["silence", "silence: a line"],
+    ["gain", "gain before make-up: hangs from its highest, named at the left beside its lowest"],
+    ["loud", "mix: short-term loudness, target dashed"]],
+};
 
-function trackNamed(name) {
-  return record.tracks.find((track) => track.name === name) ?? null;
-}
+const mends = {list: record.corrections.map((mend) => ({...mend})), before: [], after: []};
 
 function change(list) {
   mends.before.push(mends.list);
@@ -141,4 +157,89 @@ function save() {
   link.remove();
   setTimeout(() => URL.revokeObjectURL(url), 10000);
   word("corrections.csv is in your downloads.");
+}
+
+function drawKindMarks(pen, g, box) {
+  font(pen, g, 11);
+  pen.textAlign = "left";
+  for (const mend of mends.list) {
+    const track = trackNamed(mend.track);
+    if (!track || !meets(box, mend.from_s, mend.to_s)) continue;
+    const x = xOf(g, box, mend.from_s), to = xOf(g, box, mend.to_s), y = staffTop(g, box, track) + 14 * g.u;
+    pen.strokeStyle = view.ink.mend;
+    pen.lineWidth = 2;
+    bracket(pen, x, Math.max(x + 3, to), y, g.band.ridge + g.band.ribbon - 15 * g.u);
+    const text = mendText(mend), wide = pen.measureText(text).width + 8 * g.u;
+    if (mend.from_s < box.from) continue;
+    pen.fillStyle = view.ink.mend;
+    pen.fillRect(x, y, wide, 14 * g.u);
+    pen.fillStyle = view.ink.sheet;
+    pen.fillText(text, x + 4 * g.u, y + 7.5 * g.u);
+  }
+}
+
+function wordsAt(time) {
+  return record.tracks.map((track) => `${track.name} ${stateWord(track, time)} ${signed(gainAt(track, time))} dB`);
+}
+
+function saidAt(time) {
+  return `${view.track.name}: ${stateWord(view.track, time)}, gain ${signed(gainAt(view.track, time))} dB`;
+}
+
+function placeWords(found) {
+  return [make("b", {}, `${clock(found.from_s, 1)} ${found.track}`), make("span", {}, ` ${found.decided}, could be ${found.could_be}`),
+    make("small", {}, `${found.reason} \u00b7 doubt ${plain(found.doubt, 2)}`)];
+}
+
+function choseTrack(track) {
+  byId("mend-track").selectedIndex = track.index;
+  countShort();
+}
+
+function pickedStretch() {
+  if (view.picked) byId("scope-one").checked = true;
+  byId("mend-from").value = view.picked ? clock(view.picked.from) : "";
+  byId("mend-to").value = view.picked ? clock(view.picked.to) : "";
+}
+
+function takeAround() {
+  const run = runAt(view.track, view.time);
+  pick(view.track, view.track.runStart[run] * HOP_S, view.track.runStart[run + 1] * HOP_S);
+}
+
+function countShort() {
+  byId("short-count").textContent = String(shortAnswers(view.track, secondsOf(byId("short-s").value)).length);
+}
+
+function typedStretch() {
+  const from = secondsOf(byId("mend-from").value), to = secondsOf(byId("mend-to").value);
+  if (from < to) pick(view.track, from, to, {jump: true});
+}
+
+function anyKey(event) {
+  if (!(event.ctrlKey || event.metaKey) || event.target.matches("input:not([type=radio])")) return;
+  const key = event.key.toLowerCase();
+  if (key === "z" || key === "y") {
+    event.preventDefault();
+    if (key === "y" || event.shiftKey) redo(); else undo();
+  }
+}
+
+function fillKind() {
+  recall();
+  byId("mend-track").append(...record.tracks.map((track) => make("option", {}, track.name)));
+  listMends();
+}
+
+function wireKind(on) {
+  for (const what of ["own", "bleed", "silence"]) on(`decide-${what}`, "click", () => decide(what));
+  on("mend-track", "change", () => choose(record.tracks[byId("mend-track").selectedIndex]));
+  on("decide-gain", "click", decideGain);
+  on("gain", "keydown", (event) => { if (event.key === "Enter") decideGain(); });
+  on("short-s", "input", countShort);
+  on("undo", "click", undo);
+  on("redo", "click", redo);
+  on("save", "click", save);
+  for (const id of ["mend-from", "mend-to"]) on(id, "change", typedStretch);
+  document.addEventListener("keydown", anyKey);
 }

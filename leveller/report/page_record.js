@@ -1,7 +1,6 @@
 // The record of the run, unpacked once, and questions to it. Times in seconds, levels in dB, hops of 10 ms.
 
 const HOP_S = 0.01;
-const WORDS = {own: "own voice", bleed: "bleed", silence: "silence"};
 const PYRAMID_STEP = 4;
 
 const record = unpacked(JSON.parse(document.getElementById("record").textContent));
@@ -10,12 +9,9 @@ function unpacked(raw) {
   raw.tracks.forEach((track, i) => {
     track.index = i;
     track.pyramid = pyramid(bytesOf(track.levels));
-    track.gainHop = running(track.gain_hop_steps);
-    track.gainCdb = Int32Array.from(track.gain_cdb);
-    [track.gainLowest, track.gainHighest] = bounds(track.gainCdb);
-    unpackRuns(track);
     delete track.levels;
   });
+  unpackKind(raw);
   const bytes = bytesOf(raw.loudness);
   const view = new DataView(bytes.buffer);
   raw.loudness = Float32Array.from({length: bytes.length / 2}, (_, i) => view.getInt16(2 * i, true) / 100);
@@ -43,31 +39,6 @@ function pyramid(base) {
   return storeys;
 }
 
-function running(steps) {
-  let sum = 0;
-  return Int32Array.from(steps, (step) => (sum += step));
-}
-
-function bounds(values) {
-  let low = Infinity, high = -Infinity;
-  for (const value of values) {
-    if (value < low) low = value;
-    if (value > high) high = value;
-  }
-  return values.length ? [low, high] : [0, 0];
-}
-
-function unpackRuns(track) {
-  const count = track.runs.length / 2;
-  track.runStart = new Int32Array(count + 1);
-  track.runState = new Uint8Array(count);
-  for (let i = 0; i < count; i++) {
-    track.runState[i] = track.runs[2 * i];
-    track.runStart[i + 1] = track.runStart[i] + track.runs[2 * i + 1];
-  }
-  delete track.runs;
-}
-
 // Index of the last value that is not greater; -1 where all are.
 function lastNotAfter(sorted, value) {
   let low = 0, high = sorted.length;
@@ -78,32 +49,13 @@ function lastNotAfter(sorted, value) {
   return low - 1;
 }
 
-function runAt(track, time) {
-  const run = lastNotAfter(track.runStart, Math.floor(time / HOP_S + 1e-6));
-  return Math.max(0, Math.min(run, track.runState.length - 1));
-}
-
-function stateAt(track, time) {
-  return record.states[track.runState[runAt(track, time)]] ?? "silence";
-}
-
-// The state in words; a track that is no voice has its role instead.
-function stateWord(track, time) {
-  return track.role === "voice" ? WORDS[stateAt(track, time)] : track.role;
-}
-
-function gainAt(track, time) {
-  const hop = time / HOP_S, {gainHop, gainCdb} = track;
-  const i = lastNotAfter(gainHop, hop);
-  if (i < 0) return (gainCdb[0] ?? 0) / 100;
-  if (i + 1 >= gainHop.length) return gainCdb[i] / 100;
-  const part = (hop - gainHop[i]) / (gainHop[i + 1] - gainHop[i]);
-  return (gainCdb[i] + part * (gainCdb[i + 1] - gainCdb[i])) / 100;
-}
-
 function loudnessAt(time) {
   const value = record.loudness[Math.floor((time - record.loudness_from_s) / record.loudness_every_s)];
   return value === undefined || value < -300 ? null : value;
+}
+
+function trackNamed(name) {
+  return record.tracks.find((track) => track.name === name) ?? null;
 }
 
 // Loudest byte between two times, from the storey that needs few looks.
@@ -118,17 +70,6 @@ function loudest(track, from, to) {
   let most = 0;
   for (let i = Math.max(0, Math.floor(from / cell)); i <= last; i++) if (values[i] > most) most = values[i];
   return most;
-}
-
-// Own stretches of a track that are no longer than so many seconds, as [from, to] in seconds.
-function shortAnswers(track, mostSeconds) {
-  const own = record.states.indexOf("own"), found = [];
-  for (let i = 0; i < track.runState.length; i++) {
-    const hops = track.runStart[i + 1] - track.runStart[i];
-    if (track.runState[i] === own && hops * HOP_S <= mostSeconds + 1e-9)
-      found.push([track.runStart[i] * HOP_S, Math.min(track.runStart[i + 1] * HOP_S, record.length_s)]);
-  }
-  return found;
 }
 
 function clock(time, digits = 2) {

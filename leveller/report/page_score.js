@@ -1,12 +1,12 @@
-// The score: the session set in lines like a text, every track a staff of three bands - the ridge (level of the source), the
-// ribbon (what was decided), the icicles (how far the gain hangs below the track's highest). Drawn on one canvas, only what is seen.
+// The score: set in lines like a text, every track a staff, below them the mix and its loudness. Drawn on one canvas, only
+// what is seen. What a staff is made of hangs on the kind of page: page_staff.js for a session, page_cut.js for a cut.
 
 const SPANS_S = [2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200];
-const RIDGE_DB = 50; // from a staff's upper edge down to its base line
 const LOUDNESS_DB = 18; // height of the loudness staff
 const LOUDNESS_OVER_DB = 6; // of which above the target
 const GUTTER = 116, RIGHT = 14;
-const BANDS = {time: 24, ridge: 38, ribbon: 12, icicles: 20, between: 9, loudness: 36, below: 20};
+const BANDS = {time: 24, between: 9, loudness: 36, below: 20}; // those of staves and mix: KIND.bands
+const STRETCHED = ["ridge", "icicles", "mixRidge", "mixIcicles", "loudness"];
 
 const view = {time: 0, track: record.tracks[0], span: 30, picked: null, anchor: null, ink: {}, patterns: {}, wanted: false, map: {}, drawn: "", inks: 0};
 const lines = byId("lines"), marks = byId("marks"), score = byId("score"), map = byId("map");
@@ -17,10 +17,10 @@ function unit() {
 
 function geometry() {
   const u = unit(), width = score.clientWidth, height = score.clientHeight, count = lineCount();
-  const band = Object.fromEntries(Object.entries(BANDS).map(([name, high]) => [name, high * u]));
-  const lineHigh = () => band.time + band.loudness + band.below + record.tracks.length * (band.ridge + band.ribbon + band.icicles + band.between);
+  const band = Object.fromEntries(Object.entries({...BANDS, ...KIND.bands}).map(([name, high]) => [name, high * u]));
+  const lineHigh = () => band.time + band.mixRidge + band.mixIcicles + band.loudness + band.below + record.tracks.length * (band.ridge + band.ribbon + band.icicles + band.between);
   const taller = Math.min(2.2, height / (count * lineHigh()));
-  if (taller > 1) for (const name of ["ridge", "icicles", "loudness"]) band[name] *= taller;
+  if (taller > 1) for (const name of STRETCHED) band[name] *= taller;
   const across = Math.max(40, width - (GUTTER + RIGHT) * u);
   return {u, width, height, band, staff: band.ridge + band.ribbon + band.icicles + band.between, line: lineHigh(), left: GUTTER * u,
     across, count, perSecond: across / view.span};

@@ -101,7 +101,7 @@ function shownPlaying() {
   const play = byId("play");
   play.textContent = sound.playing ? "Pause" : "Play";
   play.setAttribute("aria-pressed", String(Boolean(sound.playing)));
-  for (const what of ["source", "stem", "mix"]) {
+  for (const [what] of KIND.hear) {
     const radio = byId(`hear-${what}`), why = whyNot(what, view.track);
     radio.disabled = Boolean(why);
     radio.checked = sound.what === what;

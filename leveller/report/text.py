@@ -13,8 +13,8 @@ import textwrap
 import unicodedata
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
+from typing import Protocol
 
-from leveller.listen import Place as Doubtful
 from leveller.report.origins import DEFAULT, Row
 from leveller.report.quantities import shown
 from leveller.report.records import TWO_CHANNELS_LU, Fault, FileReading, MixFigures, Place, Report, VoiceFigures
@@ -23,12 +23,24 @@ from leveller.units import clock
 
 HEAD, GOOD, BAD, DIM, PLAIN = "head", "good", "bad", "dim", "plain"
 MOST_TO_HEAR = 5
+LISTED_IN = "listen.csv and report.html"
 MOST_PLACES = 4  # printed of a fault; report.json has them all
 LONG_S = 1.0  # a place longer than this is printed with its end
 SHORTEST_NAME = 8
 LEGEND = ("in: the source; out: its stem, before the limiter",
           "others: while only others speak, against own speech; noise: while nobody speaks")
 _HIDDEN = ("Cc", "Cf", "Cs", "Zl", "Zp")  # control, format (text direction too), surrogates, line ends
+
+
+class ToHear(Protocol):
+    """A place worth a listen, of whatever kind."""
+
+    @property
+    def from_s(self) -> float: ...
+    @property
+    def to_s(self) -> float: ...
+    @property
+    def sentence(self) -> str: ...
 
 
 @dataclass(frozen=True)
@@ -48,12 +60,12 @@ class Column:
 
 
 def format_summary(
-    report: Report, *, out: str, places: Sequence[Doubtful] = (), width: int | None = None
+    report: Report, *, out: str, places: Sequence[ToHear] = (), listed_in: str = LISTED_IN, width: int | None = None
 ) -> list[Line]:
     """The summary of a run: delivery first, then voices, mix, where to listen, sources, what is left open."""
     blocks = [
         _delivery_lines(report, width), _voice_lines(report, width), _other_lines(report, width),
-        _mix_lines(report.mix), _listen_lines(places, width),
+        _mix_lines(report.mix), _listen_lines(places, listed_in, width),
         _list_lines("Sources", map(fault_text, report.faults), width),
         _list_lines("Left open", report.left_open, width), [Line(f"Written to {visible(out)}")],
     ]
@@ -195,9 +207,10 @@ def _other_lines(report: Report, width: int | None) -> list[Line]:
 def _mix_lines(mix: MixFigures) -> list[Line]:
     """The mix, a figure a line: name, number, unit, when."""
     two = "" if mix.two_channels_lufs is None else f"{shown(mix, 'two_channels_lufs')} on two channels"
+    spoken = [] if mix.speech_lufs is None else [("speech", shown(mix, "speech_lufs"), "LUFS", "")]
     rows = [
         ("integrated", shown(mix, "integrated_lufs"), "LUFS", two),
-        ("speech", shown(mix, "speech_lufs"), "LUFS", ""),
+        *spoken,
         ("range", shown(mix, "range_lu"), "LU", ""),
         ("short-term, most", shown(mix, "max_short_term_lufs"), "LUFS", f"at {shown(mix, 'max_short_term_s')}"),
         ("momentary, most", shown(mix, "max_momentary_lufs"), "LUFS", f"at {shown(mix, 'max_momentary_s')}"),
@@ -217,13 +230,12 @@ def _limiting(mix: MixFigures) -> str:
             f"{shown(mix, 'limiting_heavy_pct', unit=True)}")
 
 
-def _listen_lines(places: Sequence[Doubtful], width: int | None) -> list[Line]:
-    """The most doubtful places; listen.csv has them all."""
-    texts = [f"{clock(place.from_s)} {place.track}: {place.decided}, could be {place.could_be}; {place.reason}"
-             for place in places[:MOST_TO_HEAR]]
+def _listen_lines(places: Sequence[ToHear], listed_in: str, width: int | None) -> list[Line]:
+    """The places at the head of the list; `listed_in` has them all."""
+    texts = [f"{clock(place.from_s)} {place.sentence}" for place in places[:MOST_TO_HEAR]]
     if len(places) > MOST_TO_HEAR:
         seconds = sum(place.to_s - place.from_s for place in places)
-        texts.append(f"{len(places)} places, {seconds:.0f} s in all: listen.csv and report.html")
+        texts.append(f"{len(places)} places, {seconds:.0f} s in all: {listed_in}")
     return _list_lines("Listen here first", texts, width)
 
 

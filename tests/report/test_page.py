@@ -413,7 +413,7 @@ const seen = document.getElementById('lines'), canvas = document.createElement('
 const pen = canvas.getContext('2d', {willReadFrequently: true});
 pen.drawImage(seen, 0, 0);
 const left = 116, width = canvas.width - left - 14;  // GUTTER and RIGHT of page_score.js
-const bands = 24 + 36 + 20 + 3 * (38 + 12 + 20 + 9);  // BANDS of page_score.js: one line of three tracks
+const bands = 24 + 36 + 20 + 3 * (38 + 12 + 20 + 9);  // BANDS of page_score.js, KIND.bands of page_mend.js
 const base = 24 + 38 * Math.min(2.2, document.getElementById('score').clientHeight / bands);
 const row = pen.getImageData(left, Math.round(base) - 6, width, 1).data, out = [];
 for (let x = 0; x < width; x++) {
