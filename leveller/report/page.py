@@ -33,6 +33,7 @@ from leveller.measure.levels import SILENT, level_to_db
 from leveller.plan import STATES, TrackGain
 from leveller.session import Track
 from leveller.sessionfile import GAIN_BOUNDS
+from leveller.timeline import timeline_of
 from leveller.units import HOPS_PER_S, Bools
 
 if TYPE_CHECKING:
@@ -130,7 +131,7 @@ def _record(
     return {
         "title": session.title, "length_s": session.frames / session.rate_hz, "hops": result.measurements.hops,
         "cell_hops": cell_hops, "lowest_db": LOWEST_DB, "steps_per_db": STEPS_PER_DB, "states": STATES,
-        "gain_bounds_db": GAIN_BOUNDS[:2],
+        "gain_bounds_db": GAIN_BOUNDS[:2], "timeline": timeline_of(session),
         "delivery": {"name": mix.delivery.name, "target_lufs": mix.delivery.target_lufs,
                      "ceiling_dbtp": mix.delivery.ceiling_dbtp, "reads_lufs": _finite(mix.loudness.integrated_lufs),
                      "peak_dbtp": _finite(mix.true_peak_dbtp), "met": mix.met, "reason": mix.reason},

@@ -1,6 +1,6 @@
 // Corrections: made on a stretch or on all short answers, undone, kept over a reload, saved as corrections.csv.
 
-const COLUMNS = ["track", "from_s", "to_s", "decide", "gain_db"];
+const COLUMNS = ["track", "from_s", "to_s", "decide", "gain_db", "timeline"];
 const KEPT_UNDER = `leveller corrections ${record.digest}`;
 
 const mends = {list: record.corrections.map((mend) => ({...mend})), before: [], after: []};
@@ -129,7 +129,7 @@ function cell(text) {
 
 function csv() {
   const rows = mends.list.map((mend) => [
-    cell(mend.track), mend.from_s.toFixed(2), mend.to_s.toFixed(2), mend.decide ?? "", mend.gain_db === null ? "" : String(mend.gain_db)]);
+    cell(mend.track), mend.from_s.toFixed(2), mend.to_s.toFixed(2), mend.decide ?? "", mend.gain_db === null ? "" : String(mend.gain_db), record.timeline]);
   return [COLUMNS, ...rows].map((row) => row.join(",") + "\r\n").join("");
 }
 
