@@ -102,7 +102,8 @@ def find_alignment(
     while new := _next_found(session, heard, known, [i for i in looked_at if i not in known]):
         known |= new
         heard |= {i: dataclasses.replace(heard[i], offset_s=c.offset_s, drift=c.drift) for i, c in new.items()}
-    return tuple(_record(session, i, known.get(i), reference) for i in tracks)
+    signs = signs_of(heights_of(m.arrivals, m.levels.shape[1]), reference=reference)
+    return tuple(_record(session, i, _with_sign(known.get(i), signs[i], signs[reference]), reference) for i in tracks)
 
 
 def aligned(session: Session, found: Sequence[Alignment]) -> Session:
@@ -246,6 +247,13 @@ def _without_way(fit: Fit) -> float:
         return fit.offset_s
     side = max(voices)
     return fit.offset_s - side * min(USUAL_WAY_S, max(side * fit.offset_s, 0.0))
+
+
+def _with_sign(clock: _Clock | None, sign: int | None, reference_sign: int | None) -> _Clock | None:
+    """The clock with the polarity that the arrivals show, where the places read do not."""
+    if clock is None or clock.polarity is not None or sign is None or reference_sign is None:
+        return clock
+    return dataclasses.replace(clock, polarity=sign * reference_sign)
 
 
 def _record(session: Session, i: int, clock: _Clock | None, reference: int) -> Alignment:
