@@ -140,8 +140,8 @@ def aligned(session: Session, found: Sequence[Alignment]) -> Session:
         zero_s=zero / session.rate_hz if moved else session.zero_s)
 
 
-def alignment_notes(session: Session, m: Measurements) -> tuple[str, ...]:
-    """Sentences for a run without correction: tracks that were found not to line up.
+def alignment_notes(session: Session, m: Measurements, *, polarity: bool = True) -> tuple[str, ...]:
+    """Sentences for a run without correction: tracks that do not line up, and those that are only upside down.
 
     Costs next to nothing where the arrivals behave: where the voice of each track comes first there and stays so.
     """
@@ -150,7 +150,7 @@ def alignment_notes(session: Session, m: Measurements) -> tuple[str, ...]:
     turned = _turned(found)
     notes = tuple(f"{line}. --align corrects it" for a in found if a.offset_s is not None
                   for line in _said(a, session, a.track in turned, done=False))
-    return notes + _polarity_notes(session, m, known=turned)
+    return notes + (_polarity_notes(session, m, known=turned) if polarity else ())
 
 
 def _polarity_notes(session: Session, m: Measurements, *, known: set[str]) -> tuple[str, ...]:

@@ -21,7 +21,7 @@ import numpy.typing as npt
 
 from leveller.advice import AIR_MOST_S, advise
 from leveller.align import Alignment as TrackAlignment
-from leveller.align import aligned, find_alignment
+from leveller.align import aligned, alignment_notes, find_alignment
 from leveller.attribute import Activity, attribute
 from leveller.attribute.coupling import LEAST_EVER, NONE_DB
 from leveller.attribute.tone import steady_tone
@@ -83,6 +83,9 @@ def inspect(
         as_opened, session = session, retimed(session, aligned(session, found), align=True)
         if session.tracks != as_opened.tracks:
             measurements = measure(session, on_progress=on_progress)
+    else:
+        notes = alignment_notes(session, measurements, polarity=False)  # of that alone there is advice
+        session = dataclasses.replace(session, notes=(*session.notes, *notes))
     activity = attribute(measurements, session)
     inspected = inspect_session(session, measurements, activity, heard=listen(session, measurements, activity))
     return dataclasses.replace(inspected, alignment=found)

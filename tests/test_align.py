@@ -319,6 +319,30 @@ def test_tracks_without_common_sound_have_no_polarity(tmp_path: Path) -> None:
     assert m.arrivals.signed.tolist() == [0.0]
 
 
+def test_inspect_shows_the_tracks_lined_up(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """`inspect --align` says how each track lay, and looks at the session as it is lined up."""
+    mics = talk()
+    folder = written(tmp_path / "in", mics[:, 0], -clocked(mics[:, 1], offset_s=2.0, ppm=100.0))
+    with pytest.raises(SystemExit) as left:
+        cli.main(["inspect", str(folder), "--align", "--json"])
+    assert left.value.code == 0
+    found = json.loads(capsys.readouterr().out)
+    first, second = found["alignment"]
+    assert (first["track"], first["against"], first["offset_s"], first["polarity"]) == ("first", "", 0, 1)
+    assert (second["track"], second["against"], second["polarity"]) == ("second", "first", -1)
+    assert second["offset_s"] == pytest.approx(2.0, abs=OFFSET_BAND_S)
+    assert second["drift_ppm"] == pytest.approx(100.0, abs=5.0)
+    assert second["confidence"] > 0.5
+    assert found["polarity"] == [1, 1]
+    assert [line["kind"] for line in found["advice"] if line["kind"] in ("clock", "polarity")] == []
+    assert found["length_s"] == pytest.approx(62.0, abs=0.01)
+    with pytest.raises(SystemExit):
+        cli.main(["inspect", str(folder), "--align"])
+    rows = [line.split() for line in capsys.readouterr().out.splitlines()]
+    assert next(r for r in rows if r[:2] == ["second", "first"])[4:5] == ["turned"]
+    assert ["first", "reference", "0.0000", "0.0", "+", "1.00"] in rows
+
+
 def test_kept_measurements_tell_aligned_from_unaligned(tmp_path: Path) -> None:
     """Measurements kept of a session are not taken for those of the same session with another clock, or offset."""
     mics = talk()[: 4 * RATE_HZ]

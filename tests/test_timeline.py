@@ -172,8 +172,9 @@ def test_tables_of_another_alignment_are_refused(
     """Where the session is lined up otherwise than when a table was written, the table is refused."""
     file = corrections(tmp_path / "c.csv", f"host,25,26,,{BY_DB},aligned+4.2000")
     line = refused(capsys, tmp_path / "out", "process", talk / "in", "--align", "--corrections", file)
-    assert re.fullmatch(rf"leveller: correction of host, from_s = 25: its times \(aligned\+4\.2000\) are of a "
-                        rf"session lined up otherwise, now it is {ALIGNED}\. Make it again from this session's own report\n", line)
+    assert re.fullmatch(r"leveller: correction of host, from_s = 25: its times \(aligned\+4\.2000\) are of a "
+                        rf"session lined up otherwise, now it is {ALIGNED}\. Make it again from this "
+                        r"session's own report\n", line)
     file = corrections(tmp_path / "c.csv", f"host,25,26,,{BY_DB},moved")
     line = refused(capsys, tmp_path / "out", "process", talk / "in", "--align", "--corrections", file)
     assert line == ("leveller: c.csv, line 2: timeline = 'moved': expected opened (as the files lie), or aligned (as "
