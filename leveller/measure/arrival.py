@@ -34,7 +34,7 @@ PAIRS_PER_S = 30
 ENOUGH_WINDOWS = 3000
 _BATCH = 32
 _SCALE = _BACK / (2 * (BAND_HZ[1] * WINDOW // ANALYSIS_HZ - BAND_HZ[0] * WINDOW // ANALYSIS_HZ))
-CLEAR = 0.025  # of the mean correlation; the lowest true peak was 0.057 (42 sessions of a minute, measured)
+CLEAR = 0.025  # of the mean correlation; the lowest true peak was 0.057 (118 pairs in 34 minutes of sessions, measured)
 CHANCE = 1.0  # over the root of the windows; without a common sound 0.17 was the most (measured)
 OTHER_SIGN = 0.75  # the highest of the other sign against it; at most 0.64 (measured there)
 

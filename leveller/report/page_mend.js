@@ -98,6 +98,8 @@ function mendText(mend) {
   return [mend.decide, mend.gain_db === null ? null : `${signed(mend.gain_db)} dB`].filter(Boolean).join(", ");
 }
 
+if (record.timeline !== "opened") byId("again").append(" --align");
+
 function listMends() {
   byId("count").textContent = mends.list.length ? `(${mends.list.length})` : "(none yet)";
   byId("undo").disabled = !mends.before.length;
