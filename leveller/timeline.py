@@ -84,7 +84,8 @@ def retimed(opened: Session, session: Session, *, align: bool) -> Session:
     SettingsError, AutomationError
         where a skip or correction cannot be placed for sure.
     """
-    skips, corrections, notes = [], [], []
+    skips, corrections = [], []
+    notes: list[str] = []
     for skip in session.skips:
         _check_said(skip, session, align=align)
         by_s = 0.0 if skip.timeline.startswith(ALIGNED) else session.zero_s or 0.0
@@ -93,11 +94,12 @@ def retimed(opened: Session, session: Session, *, align: bool) -> Session:
         _check_said(correction, session, align=align)
         moved = correction if correction.timeline.startswith(ALIGNED) else _moved(correction, opened, session)
         corrections += [] if moved is None else [moved]
+        notes += [] if moved else [f"{_where(correction)}: lies before anything sounds once lined up, left out"]
     if session.zero_s is not None:
         counts = [sum(not row.timeline.startswith(ALIGNED) for row in rows)
                   for rows in (session.skips, session.corrections)]
         said = " and ".join(_counted(n, what) for n, what in zip(counts, ("skip", "correction"), strict=True) if n)
-        notes = [f"{said}: given in times of the session as opened, moved along with the tracks"] if said else []
+        notes += [f"{said}: given in times of the session as opened, moved along with the tracks"] if said else []
     return dataclasses.replace(session, skips=tuple(skips), corrections=tuple(corrections),
                                notes=(*session.notes, *notes))
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import dataclasses
 import json
 import re
 import shutil
@@ -14,6 +15,9 @@ import soundfile as sf
 from conversations import ConversationSpec, simulate
 
 from leveller import cli
+from leveller.session import open_session
+from leveller.sessionfile import Correction, Skip
+from leveller.timeline import retimed
 
 RATE_HZ = 16_000
 EARLY_S = 5.0  # guest's recorder was started so much before host's
@@ -202,3 +206,27 @@ def test_an_aligned_speech_table_is_taken_as_it_is(talk: Path, tmp_path: Path) -
     assert run("process", talk / "in", "--align", "--corrections", tmp_path / "speech.csv", "--out", tmp_path / "out",
                "--quiet") == 0
     assert (tmp_path / "out" / "mix.wav").read_bytes() == (talk / "aligned" / "mix.wav").read_bytes()
+
+
+def test_a_correction_follows_the_clock_of_its_track(tmp_path: Path) -> None:
+    """Late in a long session a track whose clock is fast takes its correction along; a skip follows the reference."""
+    for name in ("first", "second"):
+        sf.write(tmp_path / f"{name}.wav", np.zeros(RATE_HZ, np.float32), RATE_HZ)
+    opened = open_session([tmp_path])
+    opened = dataclasses.replace(
+        opened, frames=4000 * RATE_HZ, skips=(Skip(3000.0, 3001.0, ""),),
+        corrections=tuple(Correction(name, 3000.0, 3001.0, "own", None, "opened") for name in ("first", "second")))
+    second = dataclasses.replace(opened.tracks[1], offset_frames=2 * RATE_HZ, clock_ppm=300.0)
+    lined_up = dataclasses.replace(opened, tracks=(opened.tracks[0], second), zero_s=0.0)
+    placed = retimed(opened, lined_up, align=True)
+    assert placed.skips[0].from_s == placed.corrections[0].from_s == 3000.0
+    assert placed.corrections[1].from_s == pytest.approx(2 + 3000 / 1.0003)
+    assert placed.corrections[1].to_s == pytest.approx(2 + 3001 / 1.0003)
+    early = dataclasses.replace(opened.tracks[1], offset_frames=0, clock_ppm=0.0)
+    late = dataclasses.replace(early, offset_frames=4 * RATE_HZ)
+    later = dataclasses.replace(opened, tracks=(opened.tracks[0], late))
+    before = dataclasses.replace(later, corrections=(Correction("second", 0.5, 1.5, "own", None, "opened"),))
+    gone = dataclasses.replace(before, tracks=opened.tracks, zero_s=0.0)
+    placed = retimed(before, gone, align=True)
+    assert placed.corrections == ()
+    assert "correction of second, from_s = 0.5: lies before anything sounds once lined up, left out" in placed.notes
