@@ -29,6 +29,7 @@ from leveller.measure.claps import CLAP_HEIGHT, common_clap
 from leveller.measure.clocks import Fit, Heard, clock_of
 from leveller.measure.levels import level_to_db
 from leveller.measure.onsets import ENOUGH_SCORE, Line, common_line, onsets
+from leveller.measure.polarity import agreement, heights_of, signs_of
 from leveller.session import Session, Track
 
 LEAST_S = 0.006  # two metres of air: microphones that stand differently look that far apart without any fault
@@ -43,6 +44,7 @@ STEADY_SHARE = 0.15  # chance is 0.05
 STEADY_S = 0.0015  # what the commonest lag may move from the first half to the second
 LEAST_ARRIVALS = 40
 AHEAD_DB = 6.0
+SURE_OF_SIGN = 0.9  # of what a track has in common with others, its sign must explain so much
 
 
 @dataclass(frozen=True)
@@ -100,7 +102,8 @@ def find_alignment(
     while new := _next_found(session, heard, known, [i for i in looked_at if i not in known]):
         known |= new
         heard |= {i: dataclasses.replace(heard[i], offset_s=c.offset_s, drift=c.drift) for i, c in new.items()}
-    return tuple(_record(session, i, known.get(i), reference) for i in tracks)
+    signs = signs_of(heights_of(m.arrivals, m.levels.shape[1]), reference=reference)
+    return tuple(_record(session, i, _with_sign(known.get(i), signs[i], signs[reference]), reference) for i in tracks)
 
 
 def aligned(session: Session, found: Sequence[Alignment]) -> Session:
@@ -127,27 +130,46 @@ def aligned(session: Session, found: Sequence[Alignment]) -> Session:
     tracks = [dataclasses.replace(track, offset_frames=round(start * session.rate_hz) + zero)
               for track, start in zip(tracks, starts, strict=True)]
     if zero:
-        notes.append(f"the session begins {zero / session.rate_hz:.3f} s earlier, with the earliest track; times in "
-                     "session.toml and in corrections count from there")
+        notes.append(f"the session begins {zero / session.rate_hz:.3f} s earlier, with the earliest track")
+    moved = [(t.offset_frames, t.clock_ppm) for t in tracks] != [(t.offset_frames, t.clock_ppm) for t in session.tracks]
     day = 86400 * session.rate_hz
     time_reference = None if session.time_reference is None else (session.time_reference - zero) % day
     return dataclasses.replace(
         session, tracks=tuple(tracks), frames=max(t.offset_frames + t.frames for t in tracks),
-        notes=(*session.notes, *notes), time_reference=time_reference)
+        notes=(*session.notes, *notes), time_reference=time_reference,
+        zero_s=zero / session.rate_hz if moved else session.zero_s)
 
 
-def alignment_notes(session: Session, m: Measurements) -> tuple[str, ...]:
-    """Sentences for a run without correction: tracks that were found not to line up.
+def alignment_notes(session: Session, m: Measurements, *, polarity: bool = True) -> tuple[str, ...]:
+    """Sentences for a run without correction: tracks that do not line up, and those that are only upside down.
 
     Costs next to nothing where the arrivals behave: where the voice of each track comes first there and stays so.
     """
     suspects = _suspects(session, m)
-    if not suspects:
-        return ()
-    found = find_alignment(session, m, suspects=suspects)
+    found = find_alignment(session, m, suspects=suspects) if suspects else ()
     turned = _turned(found)
-    return tuple(f"{line}. --align corrects it" for a in found if a.offset_s is not None
-                 for line in _said(a, session, a.track in turned, done=False))
+    notes = tuple(f"{line}. --align corrects it" for a in found if a.offset_s is not None
+                  for line in _said(a, session, a.track in turned, done=False))
+    return notes + (_polarity_notes(session, m, known=turned) if polarity else ())
+
+
+def _polarity_notes(session: Session, m: Measurements, *, known: set[str]) -> tuple[str, ...]:
+    """Sentences on tracks that are upside down, but those that have one already; from what is measured anyway."""
+    heights = heights_of(m.arrivals, m.levels.shape[1])
+    beds = [i for i, track in enumerate(session.tracks) if track.role == "bed"]
+    heights[beds], heights[:, beds] = 0, 0
+    if not (heights < 0).any():
+        return ()
+    reference = _reference(session, [i for i in range(len(session.tracks)) if i not in beds])
+    signs = signs_of(heights, reference=reference)
+    notes = []
+    for i, track in enumerate(session.tracks):
+        if signs[i] != -1 or track.name in known or agreement(heights, signs, i) < SURE_OF_SIGN:
+            continue
+        other = session.tracks[int(heights[i].argmin())].name
+        notes.append(f"{track.name}: upside down against {other} (correlation {heights[i].min():.2f}), so their sum "
+                     f"partly cancels. --align corrects it, or polarity = {-track.polarity} for it in session.toml")
+    return tuple(notes)
 
 
 def misaligned(session: Session, found: Alignment) -> bool:
@@ -225,6 +247,13 @@ def _without_way(fit: Fit) -> float:
         return fit.offset_s
     side = max(voices)
     return fit.offset_s - side * min(USUAL_WAY_S, max(side * fit.offset_s, 0.0))
+
+
+def _with_sign(clock: _Clock | None, sign: int | None, reference_sign: int | None) -> _Clock | None:
+    """The clock with the polarity that the arrivals show, where the places read do not."""
+    if clock is None or clock.polarity is not None or sign is None or reference_sign is None:
+        return clock
+    return dataclasses.replace(clock, polarity=sign * reference_sign)
 
 
 def _record(session: Session, i: int, clock: _Clock | None, reference: int) -> Alignment:

@@ -21,6 +21,7 @@ from leveller.errors import AutomationError, nearest
 from leveller.plan import CAUSES, GAIN_LIMITS_DB, PARTS, STATES, GainPlan, TrackGain
 from leveller.session import Session
 from leveller.spreadsheet import number, read_rows
+from leveller.timeline import TIMELINE_COLUMN, timeline_of
 from leveller.units import HOPS_PER_S, hop_to_frame
 
 PART_COLUMNS = tuple(f"{part}_db" for part in PARTS)
@@ -66,12 +67,14 @@ def write_automation(path: Path, plan: GainPlan, session: Session) -> None:
     order = order[np.lexsort((order[:, 2], order[:, 1], order[:, 0]))]
     names = [text_cell(track.name) for track in session.tracks]
     with open(path, "w", encoding="utf-8", newline="") as file:
-        file.write(",".join(COLUMNS) + "\r\n")
+        aligned = session.zero_s is not None
+        end = f",{timeline_of(session)}\r\n" if aligned else "\r\n"
+        file.write(",".join((*COLUMNS, TIMELINE_COLUMN) if aligned else COLUMNS) + "\r\n")
         for hop, track, row in order.tolist():
             gain = plan.tracks[track]
             levels = ",".join(_db(value) for value in (gain.gain_cdb[row], *gain.parts_cdb[row]))
             file.write(f"{hop / HOPS_PER_S:.2f},{_clock(hop)},{hop_to_frame(hop, session.rate_hz)},{names[track]},"
-                       f"{levels},{STATES[gain.state[row]]},{CAUSES[gain.cause[row]]}\r\n")
+                       f"{levels},{STATES[gain.state[row]]},{CAUSES[gain.cause[row]]}{end}")
 
 
 def row_keys(plan: GainPlan) -> Ints:

@@ -71,6 +71,7 @@ def batch(
     stems: str | None = None,
     settings: Mapping[str, Any] | None = None,
     accept_short: bool = False,
+    align: bool = False,
     cluster: str | None = None,
     on_season: OnSeason | None = None,
 ) -> SeasonReport:
@@ -86,7 +87,7 @@ def batch(
         Episodes at once on this computer; by default by its processors and free memory.
     again : bool
         Process unchanged and edited episodes too.
-    delivery, stems, settings, accept_short
+    delivery, stems, settings, accept_short, align
         As for `pipeline.process`, for all episodes; stronger than a list and session.toml.
     cluster : str, optional
         Address of a Dask scheduler, whose workers take the episodes.
@@ -109,7 +110,7 @@ def batch(
     _check_place(found, Path(season), folder)
     with Desk(folder) as desk:
         options: dict[str, Any] = {"delivery": delivery, "stems": stems, "settings": tuple((settings or {}).items()),
-                   "accept_short": accept_short, "again": again, "made_by": tuple(made_by().items())}
+                   "accept_short": accept_short, "align": align, "again": again, "made_by": tuple(made_by().items())}
         tasks = [Task(e, str(folder / e.name), str(desk.path), **options) for e in found.episodes]
         with _workers(cluster, jobs or default_jobs(), len(tasks), desk) as workers:
             run = _Run(workers, desk, tasks, on_season)

@@ -165,7 +165,7 @@ def inspect(
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
     picture: Annotated[Path | None, typer.Option(
         metavar="FILE", help="Draw the table and what each microphone hears, as SVG.", show_default=False)] = None,
-    accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
+    accept_short: AcceptShort = False, align: Align = False, quiet: Quiet = False, debug: Debug = False,
 ) -> None:
     """Look at a session before anything is rendered: levels, faults, bleed, room tone, advice."""
     with _reported(debug):
@@ -174,7 +174,7 @@ def inspect(
         from leveller.report.text import Line
 
         with console.progress(console.INSPECT_SHARES, quiet=quiet) as on_progress:
-            found = inspection.inspect(sources, accept_short=accept_short, on_progress=on_progress)
+            found = inspection.inspect(sources, align=align, accept_short=accept_short, on_progress=on_progress)
         if picture is not None:
             write_picture(picture, found)
         if as_json:
@@ -197,7 +197,7 @@ def batch(
     delivery: DeliveryName = None,
     stems: Annotated[str | None, typer.Option(
         metavar="LEVEL", help="before-limiter (default) or limited, for all episodes.", show_default=False)] = None,
-    assignments: Assignments = None, accept_short: AcceptShort = False,
+    assignments: Assignments = None, accept_short: AcceptShort = False, align: Align = False,
     cluster: Annotated[str | None, typer.Option(
         metavar="ADDRESS", help="Hand the episodes to a Dask scheduler, such as tcp://10.0.0.5:8786.",
         show_default=False)] = None,
@@ -212,7 +212,7 @@ def batch(
         with console.season_progress(quiet=quiet) as on_season:
             report = run_batch(
                 season, out=out, jobs=jobs, again=again, delivery=delivery, stems=stems,
-                settings=parse_assignments(assignments or []), accept_short=accept_short, cluster=cluster,
+                settings=parse_assignments(assignments or []), accept_short=accept_short, align=align, cluster=cluster,
                 on_season=on_season)
         width = console.terminal_width(sys.stdout)
         if not quiet:

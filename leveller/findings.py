@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from leveller.align import Alignment
 from leveller.measure.hum import Hum
 
 Matrix = npt.NDArray[np.float64]
@@ -79,6 +80,7 @@ class Inspection:
     set_aside: tuple[tuple[str, str], ...]  # (name, why)
     notes: tuple[str, ...]  # the session's own
     advice: tuple[Advice, ...] = ()
+    alignment: tuple[Alignment, ...] = ()  # of the tracks as opened, where they were lined up; the rest is as aligned
 
     def of_voices(self) -> Inspection:
         """The same with the tracks alone that somebody may speak into: who sits at the table."""

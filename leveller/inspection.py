@@ -20,6 +20,8 @@ import numpy as np
 import numpy.typing as npt
 
 from leveller.advice import AIR_MOST_S, advise
+from leveller.align import Alignment as TrackAlignment
+from leveller.align import aligned, alignment_notes, find_alignment
 from leveller.attribute import Activity, attribute
 from leveller.attribute.coupling import LEAST_EVER, NONE_DB
 from leveller.attribute.tone import steady_tone
@@ -29,9 +31,11 @@ from leveller.measure.alignment import CLEAR, LEAST_WINDOWS, Alignment, read_ali
 from leveller.measure.arrival import LAG_S
 from leveller.measure.hum import Hum, read_hum
 from leveller.measure.loudness import OFFSET_LU, power_to_lufs
+from leveller.measure.polarity import heights_of, signs_of
 from leveller.plan.levels import AUDIBLE_DB, k_power, level_lufs, own_speech
 from leveller.quiet import floor_lufs, gaps, pauses, quiet_seconds, room_tone, runs
 from leveller.session import Session, open_session
+from leveller.timeline import check_asked, retimed
 from leveller.units import HOP_S, HOPS_PER_S, Bools, db_to_power, frames_to_hops
 
 __all__ = ["Heard", "Inspection", "inspect", "inspect_session", "listen"]
@@ -54,9 +58,12 @@ class Heard:
 
 
 def inspect(
-    sources: Sequence[Path | str], *, on_progress: OnProgress = no_progress, **opening: Any
+    sources: Sequence[Path | str], *, align: bool = False, on_progress: OnProgress = no_progress, **opening: Any
 ) -> Inspection:
     """Open, measure, attribute and inspect a session; nothing is written.
+
+    With `align` it is looked at as `process --align` would take it, and what was found of every track's start, clock
+    and polarity comes along.
 
     Parameters
     ----------
@@ -68,9 +75,20 @@ def inspect(
     InputError, SettingsError
     """
     session = open_session(sources, **opening)
+    check_asked(session, (), align=align)
     measurements = measure(session, on_progress=on_progress)
+    found: tuple[TrackAlignment, ...] = ()
+    if align:
+        found = find_alignment(session, measurements)
+        as_opened, session = session, retimed(session, aligned(session, found), align=True)
+        if session.tracks != as_opened.tracks:
+            measurements = measure(session, on_progress=on_progress)
+    else:
+        notes = alignment_notes(session, measurements, polarity=False)  # of that alone there is advice
+        session = dataclasses.replace(session, notes=(*session.notes, *notes))
     activity = attribute(measurements, session)
-    return inspect_session(session, measurements, activity, heard=listen(session, measurements, activity))
+    inspected = inspect_session(session, measurements, activity, heard=listen(session, measurements, activity))
+    return dataclasses.replace(inspected, alignment=found)
 
 
 def listen(session: Session, m: Measurements, activity: Activity) -> Heard:
@@ -97,7 +115,7 @@ def inspect_session(
     ----------
     session, m, activity : from `open_session`, `measure`, `attribute`
     heard : Heard, optional
-        from `listen`; without it hum and polarity are unknown, and delays come from the arrivals (within 12 ms)
+        from `listen`; without it hum is unknown, and delays and polarity come from the arrivals (within 12 ms)
     """
     tone = steady_tone(m.levels)
     quiet = pauses(activity, tone)
@@ -109,7 +127,8 @@ def inspect_session(
     found = Inspection(
         title=session.title, rate_hz=session.rate_hz, length_s=session.frames / session.rate_hz, tracks=tracks,
         coupling_db=coupling, bleed_db=_bleed(m, counted, tracks), delay_s=alignment.delay_s,
-        correlation=alignment.correlation, late_s=_late(alignment.delay_s), polarity=_polarity(alignment.correlation),
+        correlation=alignment.correlation, late_s=_late(alignment.delay_s),
+        polarity=_polarity(alignment.correlation, heights_of(m.arrivals, len(tracks))),
         tone=_spans(tone), set_aside=tuple((aside.name, aside.why) for aside in session.set_aside), notes=session.notes)
     return dataclasses.replace(found, advice=advise(found))
 
@@ -221,18 +240,11 @@ def _late(delay_s: Matrix) -> tuple[float | None, ...]:
     return tuple(None if value is None else value - least for value in late)
 
 
-def _polarity(correlation: Matrix) -> tuple[int | None, ...]:
-    """Signs that agree best with all correlations; most tracks are +1, and of two alike the first."""
+def _polarity(correlation: Matrix, arrivals: Matrix) -> tuple[int | None, ...]:
+    """Signs that agree best with all correlations; with the arrivals where the waveforms say nothing."""
     strength = np.nan_to_num(correlation) * (np.abs(np.nan_to_num(correlation)) > CLEAR)
     both = strength + strength.T
-    if not both.any():
-        return (None,) * len(both)
-    signs = np.sign(np.linalg.eigh(both)[1][:, -1])
-    known = np.asarray(both.any(axis=0))
-    total = signs[known].sum()
-    if total < 0 or (total == 0 and signs[known][0] < 0):
-        signs = -signs
-    return tuple(int(sign) if there and sign else None for sign, there in zip(signs, known, strict=True))
+    return signs_of(np.where(both, both, arrivals))
 
 
 def _spans(flags: Bools) -> Spans:

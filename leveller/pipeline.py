@@ -33,6 +33,7 @@ from leveller.report.page import write_page
 from leveller.report.tables import write_tables
 from leveller.report.text import summary_blocks
 from leveller.session import Session, open_session
+from leveller.timeline import check_asked, check_table, retimed
 from leveller.units import frames_to_hops
 
 __all__ = ["Finished", "Result", "finish", "process", "render_again"]
@@ -105,16 +106,14 @@ def process(
     LevellerError
         With one line that says what, where and the way out; nothing is written then.
     """
-    session = _opened(sources, delivery, stems, settings, accept_short, corrections, season)
-    mark = _mark(sources, delivery, stems, settings, accept_short, corrections, season)
+    session = _opened(sources, delivery, stems, settings, accept_short, align, corrections, season)
+    mark = _mark(sources, delivery, stems, settings, accept_short, align, corrections, season)
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
     with folder:
-        as_opened = session
         session, measurements = _measured([folder.path], session, align, on_progress)
-        mark = mark if session.tracks == as_opened.tracks else f"{mark} aligned"
         activity = attribute(measurements, session)
-        session = _with_table(session, activity, corrections)
+        session = _with_table(session, activity, corrections, align)
         plan = make_plan(measurements, activity, session)
         result = _delivered(folder, session, measurements, activity, plan, stems, mark, on_progress)
         if corrections is not None:
@@ -161,13 +160,14 @@ def render_again(
         `AutomationError` for a row that cannot be rendered, with file and line.
     """
     automation = Path(automation)
-    session = _opened(sources, delivery, stems, settings, accept_short, corrections)
+    session = _opened(sources, delivery, stems, settings, accept_short, align, corrections, tables=[automation])
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
     homes = dict.fromkeys((automation.parent, folder.path, _out(None, session)))
-    as_opened, measurements = session, None
+    measurements = None
     if align:  # the rows of the file belong to the session as it was lined up
         session, measurements = _measured(homes, session, align, on_progress)
+        check_table(automation, session, align=align)
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
     read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)
@@ -175,14 +175,13 @@ def render_again(
         if measurements is None:
             session, measurements = _measured(homes, session, align, on_progress)
         activity = attribute(measurements, session)
-        session = _with_table(session, activity, corrections)
+        session = _with_table(session, activity, corrections, align)
         if written is None:
             planned = make_plan(measurements, activity, session)
             read = read_automation(automation, session, hops=hops, written=row_keys(planned))
         notes = (*differences(automation.parent, session), *without_effect(settings, corrections), *read.notes)
         session = dataclasses.replace(session, notes=(*session.notes, *notes))
-        by_hand = notes or session.tracks != as_opened.tracks
-        mark = "" if by_hand else _mark(sources, delivery, stems, settings, accept_short, corrections)
+        mark = "" if notes else _mark(sources, delivery, stems, settings, accept_short, align, corrections)
         result = _delivered(folder, session, measurements, activity, read.plan, stems, mark, on_progress)
         keep_file(folder, automation)
     return result
@@ -234,7 +233,7 @@ def finish(
 
 def _opened(
     sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
-    accept_short: bool, corrections: Path | None, season: Path | None = None,
+    accept_short: bool, align: bool, corrections: Path | None, season: Path | None = None, tables: Sequence[Path] = (),
 ) -> Session:
     """The session, with its options checked."""
     if stems not in LEVELS:
@@ -244,6 +243,7 @@ def _opened(
     session = open_session(paths, delivery=delivery, assignments=settings, accept_short=accept_short,
                            corrections=None if table else corrections, season=season)
     check_corrections(session)
+    check_asked(session, [*tables, *([Path(corrections)] if corrections is not None and table else [])], align=align)
     return session
 
 
@@ -261,7 +261,7 @@ def _measured(
     if not align:
         notes = alignment_notes(session, measurements)
         return dataclasses.replace(session, notes=(*session.notes, *notes)), measurements
-    lined_up = aligned(session, find_alignment(session, measurements))
+    lined_up = retimed(session, aligned(session, find_alignment(session, measurements)), align=align)
     return lined_up, measurements if lined_up.tracks == session.tracks else measurements_of(lined_up)
 
 
@@ -272,17 +272,18 @@ def _listed(sources: Sequence[Path | str] | Path | str) -> list[Path | str]:
 
 def _mark(
     sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
-    accept_short: bool, corrections: Path | None, season: Path | None = None,
+    accept_short: bool, align: bool, corrections: Path | None, season: Path | None = None,
 ) -> str:
     """The fingerprint of the run, for report.json."""
     return fingerprint(_listed(sources), delivery=delivery, stems=stems, settings=settings,
-                       corrections=corrections, accept_short=accept_short, season=season)
+                       corrections=corrections, accept_short=accept_short, align=align, season=season)
 
 
-def _with_table(session: Session, activity: Activity, corrections: Path | None) -> Session:
+def _with_table(session: Session, activity: Activity, corrections: Path | None, align: bool) -> Session:
     """The session with the corrections of an edited speech.csv, where that is what was given."""
     if corrections is None or not is_speech_table(Path(corrections)):
         return session
+    check_table(Path(corrections), session, align=align)
     return with_speech_table(session, activity, Path(corrections))
 
 

@@ -4,7 +4,8 @@
   it (a polyphonic recording); hidden ones, and output folders of leveller's own, are not. A season.toml in it that
   names episodes is the list instead.
 * A TOML list: `[[episode]]` tables beside the show's defaults (`defaults`): `session` (a path, or a list of audio
-  files), `name`, `delivery`, `stems`, `corrections`, `accept_short`, and a table per stage.
+  files), `name`, `delivery`, `stems`, `corrections`, `accept_short`, `align`, and a table
+  per stage.
 * A CSV list: the same as columns, settings by dotted name (`expander.range_db`); an empty cell says nothing.
 
 Paths in a list count from where the list lies. What a row says is stronger than session.toml. Whether an episode can be
@@ -29,7 +30,7 @@ from leveller.settings import STAGES, Settings
 from leveller.spreadsheet import columns_of, number, read_rows
 
 REPORTS = ("season.csv", "season.json", "season.html")
-EPISODE_KEYS = ("session", "name", "delivery", "stems", "corrections", "accept_short")
+EPISODE_KEYS = ("session", "name", "delivery", "stems", "corrections", "accept_short", "align")
 SWITCH_WORDS = {"": False, "no": False, "false": False, "off": False, "yes": True, "true": True, "on": True}
 
 
@@ -43,6 +44,7 @@ class Episode:
     stems: str | None = None
     corrections: str | None = None
     accept_short: bool = False
+    align: bool = False
     settings: tuple[tuple[str, Any], ...] = ()
     season: str | None = None  # the season.toml that counts; None: the one beside the session
 
@@ -231,7 +233,8 @@ def _episode(said: Mapping[str, Any], base: Path, season: str | None, where: str
         name=name or safe_name(_name_of(base, sources)),
         sources=tuple(os.path.abspath(base / source) for source in sources), delivery=said.get("delivery"),
         stems=said.get("stems"), corrections=None if corrections is None else os.path.abspath(base / corrections),
-        accept_short=_switch(said.get("accept_short", False), where), settings=settings, season=season,
+        accept_short=_switch(said, "accept_short", where), align=_switch(said, "align", where), settings=settings,
+        season=season,
     ), name is not None
 
 
@@ -253,9 +256,10 @@ def _value(value: Any) -> Any:
         return value
 
 
-def _switch(value: Any, where: str) -> bool:
-    """On or off."""
+def _switch(said: Mapping[str, Any], key: str, where: str) -> bool:
+    """On or off; off where nothing is said."""
+    value = said.get(key, False)
     word = str(value).strip().lower()
     if word not in SWITCH_WORDS:
-        raise SettingsError(f"{where}: accept_short = {value!r}: expected yes or no")
+        raise SettingsError(f"{where}: {key} = {value!r}: expected yes or no")
     return SWITCH_WORDS[word]

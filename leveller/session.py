@@ -25,7 +25,15 @@ from leveller.drafts import Draft, SourceFile, drafts_of
 from leveller.duplicates import find_duplicates
 from leveller.errors import AutomationError, InputError, LevellerError, SettingsError, nearest
 from leveller.names import safe_name
-from leveller.sessionfile import Correction, SessionFile, Skip, TrackEntry, read_corrections, read_session_file
+from leveller.sessionfile import (
+    OPENED,
+    Correction,
+    SessionFile,
+    Skip,
+    TrackEntry,
+    read_corrections,
+    read_session_file,
+)
 from leveller.settings import DEFAULT_DELIVERY, Delivery, Settings, delivery_named
 from leveller.takes import session_reference
 
@@ -89,6 +97,7 @@ class Session:
     settings: Settings
     notes: tuple[str, ...]  # sentences for the user: padded, split, joined, delayed, resampled, taken short
     time_reference: int | None = None  # of session zero, frames since midnight at the session's rate
+    zero_s: float | None = None  # where the zero of the session as opened lies, once `align` has moved tracks
     origination: tuple[str, str] = ("", "")  # date and time that the recorder gave the first file of session zero
 
 
@@ -307,7 +316,7 @@ def _mix_channels(said: SessionFile, delivery: Delivery, tracks: tuple[Track, ..
 def _check_skips(said: SessionFile, length_s: float) -> None:
     """A skip must start within the session."""
     for skip in said.skips:
-        if skip.from_s >= length_s:
+        if skip.from_s >= length_s and skip.timeline in ("", OPENED):
             raise SettingsError(f"{said.where}: [[skip]] from_s = {skip.from_s:g} lies behind the session's end "
                                 f"at {length_s:.3f} s")
 
@@ -316,7 +325,8 @@ def _corrections(
     said: SessionFile, path: Path | None, tracks: Sequence[Track], set_aside: Sequence[SetAside], length_s: float
 ) -> tuple[Correction, ...]:
     """All corrections, each for a track and a time that exist; later ones are stronger."""
-    out = [_checked(c, tracks, set_aside, length_s, said.where, SettingsError) for c in said.corrections]
+    out = [dataclasses.replace(c, timeline=c.timeline or OPENED) for c in said.corrections]
+    out = [_checked(c, tracks, set_aside, length_s, said.where, SettingsError) for c in out]
     if path is not None:
         out += [_checked(c, tracks, set_aside, length_s, path.name, AutomationError) for c in read_corrections(path)]
     return tuple(out)
@@ -335,6 +345,6 @@ def _checked(
         raise kind(f"{where}: track {name!r} was set aside and is not processed")
     if name not in names:
         raise kind(f"{where}: unknown track {name!r}{nearest(name, names)}; known: {', '.join(names)}")
-    if correction.from_s >= length_s:
+    if correction.from_s >= length_s and correction.timeline in ("", OPENED):  # else `timeline` knows the length
         raise kind(f"{where}: {name}, from_s = {correction.from_s:g} lies behind the session's end at {length_s:.3f} s")
     return dataclasses.replace(correction, track=name)

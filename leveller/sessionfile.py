@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import csv
 import io
+import re
 import tomllib
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
@@ -45,8 +46,10 @@ TIME_BOUNDS = (0.0, LONGEST_S, "s")
 
 SESSION_KEYS = ("title", "delivery", *SESSION_BOUNDS, "track", "skip", "correction", *STAGES)
 TRACK_KEYS = ("file", "channels", "name", "role", "polarity", *TRACK_BOUNDS)
-SKIP_KEYS = ("from_s", "to_s", "why")
-CORRECTION_KEYS = ("track", "from_s", "to_s", "decide", "gain_db")
+SKIP_KEYS = ("from_s", "to_s", "why", "timeline")
+CORRECTION_KEYS = ("track", "from_s", "to_s", "decide", "gain_db", "timeline")
+OPENED = "opened"  # times of the session as its files lie, before any alignment
+TIMELINE = re.compile(r"opened|aligned(\+\d+(\.\d+)?)?")  # (by how much its zero lies earlier, in seconds)
 
 
 @dataclass(frozen=True)
@@ -56,6 +59,7 @@ class Skip:
     from_s: float
     to_s: float
     why: str
+    timeline: str = ""  # which times these are (`timeline`); "" where it is not said
 
 
 @dataclass(frozen=True)
@@ -67,6 +71,7 @@ class Correction:
     to_s: float
     decide: str | None  # own | bleed | silence
     gain_db: float | None
+    timeline: str = ""  # as of a skip
 
 
 @dataclass(frozen=True)
@@ -233,7 +238,7 @@ def _track_entry(table: dict[str, Any], where: str) -> TrackEntry:
 def _skip(table: dict[str, Any], where: str) -> Skip:
     """One `[[skip]]`."""
     _known(table, SKIP_KEYS, where)
-    return Skip(*_span(table, where), _string(table, "why", where) or "")
+    return Skip(*_span(table, where), _string(table, "why", where) or "", _timeline(table, where))
 
 
 def _correction(table: dict[str, Any], where: str) -> Correction:
@@ -245,7 +250,16 @@ def _correction(table: dict[str, Any], where: str) -> Correction:
     decide, gain_db = _choice(table, "decide", DECISIONS, where), _number(table, "gain_db", GAIN_BOUNDS, where)
     if decide is None and gain_db is None:
         raise SettingsError(f"{where}: needs decide ({', '.join(DECISIONS)}) or gain_db")
-    return Correction(track, *_span(table, where), decide, gain_db)
+    return Correction(track, *_span(table, where), decide, gain_db, _timeline(table, where))
+
+
+def _timeline(table: Mapping[str, Any], where: str) -> str:
+    """Which times a table means, or '' where it does not say."""
+    said = _string(table, "timeline", where) or ""
+    if said and not TIMELINE.fullmatch(said):
+        raise SettingsError(f"{where}: timeline = {said!r}: expected {OPENED} (as the files lie), or aligned (as in "
+                            "the tables of a run with --align)")
+    return said
 
 
 def _span(table: Mapping[str, Any], where: str) -> tuple[float, float]:

@@ -25,7 +25,6 @@ from leveller.season import Episode
 
 MOST_TRIES = 2  # a worker that is lost takes its episode along once, not twice
 EDITED_S = 2.0  # a table this much younger than the report was saved by somebody
-ALIGNED = " aligned"  # what `process --align` adds to a fingerprint: more than was asked for here, not less
 TABLES = ("automation.csv", "speech.csv", "corrections.csv")
 LOST = (f"its worker was lost {MOST_TRIES} times (killed, or out of memory). Try it alone with --jobs 1, or on a "
         "computer with more memory")
@@ -45,6 +44,7 @@ class Task:
     stems: str | None = None
     settings: tuple[tuple[str, Any], ...] = ()
     accept_short: bool = False
+    align: bool = False
     again: bool = False
 
     @property
@@ -56,6 +56,7 @@ class Task:
             "settings": {**dict(episode.settings), **dict(self.settings)},
             "corrections": None if episode.corrections is None else Path(episode.corrections),
             "accept_short": self.accept_short or episode.accept_short,
+            "align": self.align or episode.align,
             "season": None if episode.season is None else Path(episode.season)}
 
 
@@ -125,7 +126,7 @@ def _kept(task: Task, folder: Path, said: Mapping[str, Any]) -> str:
     if not said.get("fingerprint") or _edited(folder):
         return EDITED
     sources = task.episode.sources
-    if said["fingerprint"].removesuffix(ALIGNED) != fingerprint(sources, **task.options):
+    if said["fingerprint"] != fingerprint(sources, **task.options):
         return ""
     files = source_files(sources)
     if not same_sources(files, folder, said.get("sources", ())):

@@ -191,6 +191,9 @@ REFUSED: dict[str, Builder] = {
     "corrections of an unknown track": corrections("track,from_s,to_s,decide\nAnna,1,2,own\n"),
     "corrections that end before they begin": corrections("track,from_s,to_s,decide\nAna,2,1,own\n"),
     "corrections with a cell without end": corrections(f'track,from_s,to_s,decide\n"{"a" * 200_000}",1,2,own\n'),
+    "corrections of a timeline that is not known": corrections("track,from_s,to_s,decide,timeline\nAna,1,2,own,mine\n"),
+    "corrections of a run with `--align`, without it": corrections(
+        "track,from_s,to_s,decide,timeline\nAna,1,2,own,aligned+5.0000\n"),
     "automation with a gain out of range": automation("0,Ana,0", "0,Odo,0", "20,Ana,80", "20,Odo,0"),
     "automation with a gain that is no number": automation("0,Ana,0", "0,Odo,1e999", "20,Ana,0", "20,Odo,0"),
     "automation without a row at the end": automation("0,Ana,0", "0,Odo,0", "3,Ana,0", "20,Odo,0"),

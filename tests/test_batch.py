@@ -22,7 +22,7 @@ import pytest
 import soundfile as sf
 from conversations import ConversationSpec, simulate
 
-from leveller import cluster, worker
+from leveller import cli, cluster, worker
 from leveller.batch import Standing, batch
 from leveller.errors import InputError, OutputError, SettingsError
 from leveller.fingerprint import made_by
@@ -355,6 +355,35 @@ def test_a_list_gives_each_episode_its_settings(season: Path, tmp_path: Path, in
     assert (one["delivery"]["name"], one["settings"]["expander.range_db"], one["stems"]) == ("a85", 8, "before-limiter")
     assert (two["delivery"]["name"], two["settings"]["expander.range_db"], two["stems"]) == ("a85", "auto", "limited")
     assert read_season(season).episodes[1].name == "ep 2"
+
+
+def test_align_is_for_all_or_for_one_episode(
+    tmp_path: Path, in_process: None, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """--align lines up all episodes, `align` in a list its own; where it changes, the episode is processed again."""
+    mics = simulate(ConversationSpec(seed=5, seconds=60, rate_hz=16_000, room="desk", people=2)).mics
+    for name in ("ep 1", "ep 2"):
+        (tmp_path / "season" / name).mkdir(parents=True)
+        for track, samples in (("host", mics[:, 0]), ("guest", mics[2 * 16_000 :, 1])):
+            sf.write(tmp_path / "season" / name / f"{track}.wav", samples, 16_000, subtype="PCM_24")
+    listed = tmp_path / "season" / "list.csv"
+
+    def said(*words: str, align: tuple[str, str] = ("", "")) -> list[tuple[str, bool]]:
+        listed.write_text("session,align\n" + "".join(f"ep {n},{word}\n" for n, word in enumerate(align, 1)))
+        with pytest.raises(SystemExit) as left:
+            cli.main(["batch", str(listed), "--out", str(tmp_path / "out"), *words])
+        assert left.value.code == 0
+        capsys.readouterr()
+        report = json.loads((tmp_path / "out" / "season.json").read_text())
+        lines = [json.loads((tmp_path / "out" / e["episode"] / "report.json").read_text())["timeline"]
+                 for e in report["episodes"]]
+        return [(e["outcome"], line != "opened") for e, line in zip(report["episodes"], lines, strict=True)]
+
+    assert said() == [("finished", False)] * 2
+    assert said(align=("yes", "no")) == [("finished", True), ("unchanged", False)]
+    assert said("--align") == [("unchanged", True), ("finished", True)]
+    assert said("--align") == [("unchanged", True)] * 2
+    assert said(align=("", "yes")) == [("finished", False), ("unchanged", True)]
 
 
 @pytest.mark.long

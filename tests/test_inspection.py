@@ -110,7 +110,7 @@ def test_delay_is_the_way_over_the_speed_of_sound(free_field):
 
 
 def test_arrivals_alone_give_the_same_delays(free_field, tmp_path):
-    """Without reading waveforms again the delays come from the arrivals, within 0.1 ms; polarity is unknown."""
+    """Without reading waveforms again the delays come from the arrivals, within 0.1 ms, and the polarity."""
     found, conversation = free_field
     session = open_session([written(tmp_path, conversation.mics, conversation.names)])
     m = measure(session)
@@ -118,7 +118,7 @@ def test_arrivals_alone_give_the_same_delays(free_field, tmp_path):
     way = distances_m(conversation)
     expected_s = (way - np.diag(way)[:, None]) / SPEED_M_S
     assert off_diagonal(bare.delay_s) == pytest.approx(off_diagonal(expected_s), abs=DELAY_BAND_S)
-    assert bare.polarity == (None, None, None)
+    assert bare.polarity == (1, 1, 1)
     assert np.array_equal(bare.bleed_db, found.bleed_db)
 
 

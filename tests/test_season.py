@@ -70,6 +70,7 @@ def test_a_session_is_no_season(tmp_path: Path) -> None:
     ("session,name\nep 1,../x\n", "name = '../x' holds a path separator", SettingsError),
     ("session,name\nep 1,x\nep 2,x\n", "the name 'x' stands there twice", SettingsError),
     ("session,name\n,x\n", "list.csv, line 2: needs session, a path or a list of paths, found None", SettingsError),
+    ("session,align\nep 1,2\n", "align = '2': expected yes or no", SettingsError),
     ("session,accept_short\nep 1,maybe\n", "accept_short = 'maybe': expected yes or no", SettingsError),
     ("session\n", "lists no episodes", InputError),
 ])
@@ -88,7 +89,8 @@ def test_a_list_counts_from_where_it_lies(tmp_path: Path) -> None:
     file = tmp_path / "lists" / "spring.toml"
     file.write_text('title = "Spring"\n[[episode]]\nsession = "../ep 1"\n'
                     '[[episode]]\nsession = "../ep 2/session.toml"\n'
-                    '[[episode]]\nsession = "../ep 3.wav"\naccept_short = true\n[episode.ride]\nenabled = false\n')
+                    '[[episode]]\nsession = "../ep 3.wav"\naccept_short = true\n'
+                    'align = true\n[episode.ride]\nenabled = false\n')
     season = read_season(file)
     assert season.title == "Spring"
     assert [episode.name for episode in season.episodes] == ["ep 1", "ep 2", "ep 3"]
@@ -96,6 +98,7 @@ def test_a_list_counts_from_where_it_lies(tmp_path: Path) -> None:
     assert {episode.season for episode in season.episodes} == {str(file)}
     assert season.episodes[2].settings == (("ride.enabled", False),)
     assert season.episodes[2].accept_short
+    assert [episode.align for episode in season.episodes] == [False, False, True]
     file.write_text('[[episode]]\nsession = 3\n')
     with pytest.raises(SettingsError, match=r"spring\.toml: \[\[episode\]\] 1: needs session"):
         read_season(file)

@@ -8,7 +8,8 @@ person who hardly speaks do not disturb it. Measured on simulated rooms (RT60 0.
 `attribute` takes as seeds 999 in a thousand named the right microphone.
 
 Method: windows of 2048 samples at 16 kHz; only 200 to 3700 Hz is kept, so the correlation comes back at 8 kHz; each
-spectrum is set to unit modulus once, then one inverse transform a pair. Lags up to 12 ms count (4 m). The *lead* of
+spectrum is set to unit modulus once, then one inverse transform a pair. Their mean over all windows has a peak whose
+sign is the polarity of the pair. Lags up to 12 ms count (4 m). The *lead* of
 a microphone is the mean over the others of the peak's height, positive where it hears first and negative where it
 hears later. The number of windows is bounded by the number of pairs, so that twelve microphones do not cost thirty
 times three.
@@ -32,6 +33,10 @@ STRIDE = 800  # 50 ms at the most dense
 PAIRS_PER_S = 30
 ENOUGH_WINDOWS = 3000
 _BATCH = 32
+_SCALE = _BACK / (2 * (BAND_HZ[1] * WINDOW // ANALYSIS_HZ - BAND_HZ[0] * WINDOW // ANALYSIS_HZ))
+CLEAR = 0.025  # of the mean correlation; the lowest true peak was 0.057 (118 pairs in 34 minutes of sessions, measured)
+CHANCE = 1.0  # over the root of the windows; without a common sound 0.17 was the most (measured)
+OTHER_SIGN = 0.75  # the highest of the other sign against it; at most 0.64 (measured there)
 
 Samples = npt.NDArray[np.float32]
 
@@ -45,6 +50,7 @@ class Arrivals:
     lag: npt.NDArray[np.int16]  # (windows, pairs) in LAG_S; positive: the second of the pair hears first
     strength: npt.NDArray[np.float32]  # (windows, pairs) height of the peak, 0 .. 1
     pairs: tuple[tuple[int, int], ...]
+    signed: npt.NDArray[np.float32]  # (pairs,) height of the mean correlation, negative: upside down; 0: not clear
 
     def of_tracks(self, tracks: list[int]) -> Arrivals:
         """The same windows between some of the tracks only."""
@@ -52,7 +58,7 @@ class Arrivals:
         kept = [p for p, (i, j) in enumerate(self.pairs) if i in place and j in place]
         pairs = tuple((place[self.pairs[p][0]], place[self.pairs[p][1]]) for p in kept)
         lag, strength = self.lag[:, kept], self.strength[:, kept]
-        return Arrivals(self.hop, leads(lag, strength, pairs, len(tracks)), lag, strength, pairs)
+        return Arrivals(self.hop, leads(lag, strength, pairs, len(tracks)), lag, strength, pairs, self.signed[kept])
 
 
 def leads(
@@ -65,6 +71,21 @@ def leads(
         lead[:, i] -= signed
         lead[:, j] += signed
     return lead / np.float32(max(1, tracks - 1))
+
+
+def signed_heights(around: Samples, windows: int) -> Samples:
+    """Highest peak of each pair's mean correlation with its sign, shape=(pairs,); 0 where it is not clear.
+
+    Parameters
+    ----------
+    around : shape=(pairs, lags)
+    windows : int
+        over which it is the mean
+    """
+    up, down = around.max(axis=1, initial=0.0), -around.min(axis=1, initial=0.0)
+    high, other = np.maximum(up, down), np.minimum(up, down)
+    clear = (high > max(CLEAR, CHANCE / max(windows, 1) ** 0.5)) & (other < OTHER_SIGN * high)
+    return np.where(clear, np.where(up > down, high, -high), 0).astype(np.float32)
 
 
 class ArrivalMeter:
@@ -82,6 +103,7 @@ class ArrivalMeter:
         self._start = 0  # absolute 16 kHz sample at the front of the buffer
         self._next = 0  # where the next window starts
         self._found: list[tuple[npt.NDArray[np.int16], npt.NDArray[np.float32]]] = []
+        self._sums = np.zeros((len(self._pairs), 2 * LAGS + 1), np.float32)
 
     def push(self, blocks: list[Samples]) -> None:
         """Take one block a track, all of one length, shape=(frames,) each."""
@@ -105,7 +127,8 @@ class ArrivalMeter:
         lag = np.concatenate([f[0] for f in self._found]) if count else np.zeros((0, pairs), np.int16)
         strength = np.concatenate([f[1] for f in self._found]) if count else np.zeros((0, pairs), np.float32)
         hop = (np.arange(count) * self._stride + WINDOW // 2) // HOP
-        return Arrivals(hop, leads(lag, strength, self._pairs, self._tracks), lag, strength, self._pairs)
+        return Arrivals(hop, leads(lag, strength, self._pairs, self._tracks), lag, strength, self._pairs,
+                        signed_heights(self._sums / np.float32(max(count, 1)), count))
 
     def _measure(self, count: int) -> None:
         """The next `count` windows."""
@@ -129,8 +152,9 @@ class ArrivalMeter:
         for p, (i, j) in enumerate(self._pairs):
             around = scipy.fft.irfft(spectra[i] * spectra[j].conj(), _BACK, axis=1)
             lags = np.concatenate([around[:, -LAGS:], around[:, : LAGS + 1]], axis=1)
+            self._sums[p] += lags.sum(axis=0) * np.float32(_SCALE)
             lag[:, p] = lags.argmax(axis=1) - LAGS
             strength[:, p] = lags.max(axis=1)
-        strength *= np.float32(_BACK / (2 * (self._high - self._low)))
+        strength *= np.float32(_SCALE)
         self._found.append((lag, strength))
         self._next += count * self._stride

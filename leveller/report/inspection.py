@@ -36,6 +36,8 @@ def format_inspection(inspection: Inspection) -> list[str]:
                                "in speech bands, gains as recorded", _db)]
         lines += ["", *_matrix(table, table.delay_s, "Delay: how much later the microphone hears the voice, in ms "
                                f"(and metres at {SPEED_M_S:.0f} m/s)", _way)]
+    if found.alignment:
+        lines += ["", *_alignment(found)]
     lines += ["", *_room_tone(found)]
     if found.notes:
         lines += ["", "Notes", *(f"  {note}" for note in found.notes)]
@@ -110,6 +112,17 @@ def _matrix(found: Inspection, values: Matrix, title: str, cell: Any) -> list[st
     for k, name in enumerate(names):
         rows.append((name, *("own" if k == m else cell(float(values[k, m])) for m in range(len(names)))))
     return [title, *_table(rows)]
+
+
+def _alignment(found: Inspection) -> list[str]:
+    """How the tracks lay before they were lined up."""
+    rows = [("Track", "against", "late", "clock fast", "polarity", "confidence"), ("", "", "s", "ppm", "", "0 to 1")]
+    for a in found.alignment:
+        late = "-" if a.offset_s is None else f"{round(a.offset_s, 4) + 0.0:.4f}"
+        fast = "-" if a.drift_ppm is None else f"{round(a.drift_ppm, 1) + 0.0:.1f}"
+        rows.append((_short(a.track), _short(a.against) or "reference", late, fast,
+                     {1: "+", -1: "turned", None: "-"}[a.polarity], f"{a.confidence:.2f}"))
+    return ["Alignment: how the tracks lie as recorded; all else here is of the tracks lined up", *_table(rows)]
 
 
 def _room_tone(found: Inspection) -> list[str]:

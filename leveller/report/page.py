@@ -36,6 +36,7 @@ from leveller.plan import STATES, TrackGain
 from leveller.render.mix import Mix
 from leveller.session import Session, Track
 from leveller.sessionfile import GAIN_BOUNDS
+from leveller.timeline import timeline_of
 from leveller.units import HOPS_PER_S, Bools
 
 if TYPE_CHECKING:
@@ -154,7 +155,7 @@ def _record(
     return {
         "title": session.title, "length_s": session.frames / session.rate_hz, "hops": result.measurements.hops,
         "cell_hops": cell_hops, "lowest_db": LOWEST_DB, "steps_per_db": STEPS_PER_DB, "states": STATES,
-        "gain_bounds_db": GAIN_BOUNDS[:2],
+        "gain_bounds_db": GAIN_BOUNDS[:2], "timeline": timeline_of(session),
         **mix_record(mix),
         "tracks": [_track(result, i, cell_hops) for i in range(len(session.tracks))],
         "skips": [{"from_s": skip.from_s, "to_s": skip.to_s, "why": skip.why} for skip in session.skips],

@@ -1,7 +1,7 @@
 // A session's page beyond the score: what it is called and what its keys do, and corrections. These are made on a
 // stretch or on all short answers, undone, kept over a reload, saved as corrections.csv.
 
-const COLUMNS = ["track", "from_s", "to_s", "decide", "gain_db"];
+const COLUMNS = ["track", "from_s", "to_s", "decide", "gain_db", "timeline"];
 const KEPT_UNDER = `leveller corrections ${record.digest}`;
 
 const KIND = {
@@ -114,6 +114,8 @@ function mendText(mend) {
   return [mend.decide, mend.gain_db === null ? null : `${signed(mend.gain_db)} dB`].filter(Boolean).join(", ");
 }
 
+if (record.timeline !== "opened") byId("again").append(" --align");
+
 function listMends() {
   byId("count").textContent = mends.list.length ? `(${mends.list.length})` : "(none yet)";
   byId("undo").disabled = !mends.before.length;
@@ -145,7 +147,7 @@ function cell(text) {
 
 function csv() {
   const rows = mends.list.map((mend) => [
-    cell(mend.track), mend.from_s.toFixed(2), mend.to_s.toFixed(2), mend.decide ?? "", mend.gain_db === null ? "" : String(mend.gain_db)]);
+    cell(mend.track), mend.from_s.toFixed(2), mend.to_s.toFixed(2), mend.decide ?? "", mend.gain_db === null ? "" : String(mend.gain_db), record.timeline]);
   return [COLUMNS, ...rows].map((row) => row.join(",") + "\r\n").join("");
 }
 

@@ -34,10 +34,12 @@ from leveller.report.quantities import quantities, rounded
 from leveller.report.records import Report, Run
 from leveller.report.segments import segments_of
 from leveller.settings import STAGES
+from leveller.timeline import TIMELINE_COLUMN, timeline_of
 from leveller.units import HOPS_PER_S
 
 if TYPE_CHECKING:
     from leveller.pipeline import Result
+    from leveller.session import Session
 
 SPEECH_COLUMNS = ("from_s", "to_s", "track", "state", "sure", "level_lufs")
 LISTEN_COLUMNS = ("from_s", "to_s", "track", "decided", "could_be", "reason", "doubt")
@@ -51,7 +53,7 @@ def write_tables(folder: OutputFolder, result: Result) -> Report:
     report = figures_of(result)
     write_speech(folder.file("speech.csv"), result)
     write_mix(folder.file("mix.csv"), result)
-    write_listen(folder.file("listen.csv"), result.places)
+    write_listen(folder.file("listen.csv"), result.places, result.session)
     write_report(folder.file("report.json"), report, result)
     return report
 
@@ -65,14 +67,14 @@ def write_speech(path: Path, result: Result) -> None:
         for first, end, state, sure, level in zip(*(column.tolist() for column in columns), strict=True):
             rows.append((first, i, f"{first / HOPS_PER_S:.2f},{end / HOPS_PER_S:.2f},{name},{STATES[state]},"
                                    f"{sure:.2f},{_number(level, 1)}\r\n"))
-    _write(path, SPEECH_COLUMNS, [text for _, _, text in sorted(rows)])
+    _write(path, SPEECH_COLUMNS, [text for _, _, text in sorted(rows)], result.session)
 
 
-def write_listen(path: Path, places: Sequence[Place]) -> None:
+def write_listen(path: Path, places: Sequence[Place], session: Session | None = None) -> None:
     """The places to hear, the most doubtful first."""
     _write(path, LISTEN_COLUMNS, [
         f"{place.from_s:.2f},{place.to_s:.2f},{text_cell(place.track)},{place.decided},{place.could_be},"
-        f"{text_cell(place.reason)},{place.doubt:.3f}\r\n" for place in places])
+        f"{text_cell(place.reason)},{place.doubt:.3f}\r\n" for place in places], session)
 
 
 def write_mix(path: Path, result: Run) -> None:
@@ -109,6 +111,7 @@ def write_report(path: Path, report: Report, result: Run, *, stages: Sequence[st
         "made_by": made_by(),
         "fingerprint": getattr(result, "fingerprint", ""),
         **as_json(report),
+        "timeline": timeline_of(result.session),
         "stems": result.stems,
         "trims_asked_db": {track.name: track.trim_db for track in result.session.tracks if track.trim_db},
         "settings": {key: value for key, value, _, _ in result.session.settings.rows()
@@ -150,8 +153,11 @@ def _cells(values: npt.NDArray[np.floating], decimals: int) -> list[str]:
     return [f"{value:.{decimals}f}" if math.isfinite(value) else "" for value in near.tolist()]
 
 
-def _write(path: Path, columns: tuple[str, ...], rows: list[str]) -> None:
-    """A CSV file."""
+def _write(path: Path, columns: tuple[str, ...], rows: list[str], session: Session | None = None) -> None:
+    """A CSV file; it says which times it means where tracks were moved."""
+    if session is not None and session.zero_s is not None:
+        columns = (*columns, TIMELINE_COLUMN)
+        rows = [f"{row.removesuffix(chr(13) + chr(10))},{timeline_of(session)}\r\n" for row in rows]
     with open(path, "w", encoding="utf-8", newline="") as file:
         file.write(",".join(columns) + "\r\n")
         file.writelines(rows)

@@ -53,7 +53,8 @@ def without_arrivals(m: Measurements) -> Measurements:
     """As if the microphones ran on clocks of their own."""
     pairs = m.arrivals.pairs
     none = Arrivals(np.zeros(0, np.int64), np.zeros((0, m.levels.shape[1]), np.float32),
-                    np.zeros((0, len(pairs)), np.int16), np.zeros((0, len(pairs)), np.float32), pairs)
+                    np.zeros((0, len(pairs)), np.int16), np.zeros((0, len(pairs)), np.float32), pairs,
+                    np.zeros(len(pairs), np.float32))
     return dataclasses.replace(m, arrivals=none)
 
 
@@ -91,6 +92,6 @@ def test_silence_has_no_seed() -> None:
     silent = np.full((hops, 2, 14), -32768, np.int16)
     lone = np.full((hops, 2), -32768, np.int16)
     arrivals = Arrivals(np.arange(20) * 10, np.zeros((20, 2), np.float32), np.zeros((20, 1), np.int16),
-                        np.zeros((20, 1), np.float32), ((0, 1),))
+                        np.zeros((20, 1), np.float32), ((0, 1),), np.zeros(1, np.float32))
     m = Measurements(silent, lone, lone, lone, np.zeros((hops, 2), bool), arrivals, (), (0, 0))
     assert (labels_of(m) == NOBODY).all()

@@ -321,6 +321,20 @@ def test_saved_corrections_run_through_the_tool(
     assert len(page.corrections()) == 2  # they stay in the list, so that the next file holds them too
 
 
+def test_saved_corrections_say_which_times_they_mean(
+    page: Page, result: Result, downloads: Path
+) -> None:
+    """Of a session that --align has moved, the page says so in each row, and in the command it gives."""
+    moved = dataclasses.replace(result, session=dataclasses.replace(result.session, zero_s=5.0))
+    for name, one, said, words in (("opened", result, "opened", ""), ("moved", moved, "aligned+5.0000", " --align")):
+        write_page(result.out / f"{name}.html", one, PLACES, SUMMARY)
+        page.open(result.out / f"{name}.html")
+        page.keys("n", "o")
+        assert [c.timeline for c in read_corrections(page.save(downloads))] == [said]
+        assert page.text("#again") == f"leveller process SESSION --corrections corrections.csv{words}"
+        (result.out / f"{name}.html").unlink()
+
+
 def test_all_short_answers_in_one_go(page: Page, result: Result, downloads: Path) -> None:
     """One decision for every short stretch of one person; one undo takes all of them back."""
     page.find("#track").send_keys("=")
