@@ -15,7 +15,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -56,6 +56,7 @@ class Finished:
     mix_peaks: Outlined  # the same of the mix as delivered
     limiter_db: Outlined  # the limiter's deepest gain in each hop, 0 or less
     stems: str = "none"  # as report.json names them
+    digests: Mapping[Path, str] = field(default_factory=dict)  # SHA-256 of every file
 
 
 def open_cut(

@@ -13,7 +13,7 @@ import dataclasses
 import functools
 import hashlib
 import json
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from importlib import metadata
 from pathlib import Path
 from typing import Any
@@ -102,6 +102,11 @@ def _noted(folder: Path) -> Any:
 def _marks(files: Sequence[Path]) -> list[list[Any]]:
     """Name, size and time of change of each file."""
     return [[file.name, file.stat().st_size, file.stat().st_mtime_ns] for file in files]
+
+
+def digests_of(paths: Iterable[Path]) -> dict[Path, str]:
+    """SHA-256 of each file's contents, each named once, in order; raises InputError where one cannot be read."""
+    return {path: sha256(path) for path in dict.fromkeys(paths)}
 
 
 def sha256(path: Path) -> str:

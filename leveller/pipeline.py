@@ -5,9 +5,11 @@
 
 from __future__ import annotations
 
+import contextlib
 import dataclasses
-from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -18,7 +20,7 @@ from leveller.automation import NO_ROWS, read_automation, row_keys, write_automa
 from leveller.cut import Finished, deliver_cut, open_cut
 from leveller.edits import differences, is_speech_table, keep_file, with_speech_table, without_effect
 from leveller.errors import SettingsError
-from leveller.fingerprint import fingerprint
+from leveller.fingerprint import digests_of, fingerprint
 from leveller.folder import OutputFolder
 from leveller.kept import MEASUREMENTS_FILE, ROWS_FILE, keep_measurements, keep_rows, kept_measurements, kept_rows
 from leveller.listen import Place, places_to_hear
@@ -56,6 +58,15 @@ class Result:
     out: Path
     places: tuple[Place, ...] = ()  # worth a listen, the most doubtful first
     fingerprint: str = ""  # of what the run depends on; empty after an edit by hand
+    digests: Mapping[Path, str] = field(default_factory=dict)  # SHA-256 of every source
+
+
+@dataclass(frozen=True)
+class _Beside:
+    """What runs beside the decisions, which are one thread: nothing waits for it until the reports."""
+
+    notes: Future[tuple[str, ...]]  # of tracks that do not line up
+    digests: Future[dict[Path, str]]
 
 
 def process(
@@ -110,12 +121,13 @@ def process(
     mark = _mark(sources, delivery, stems, settings, accept_short, align, corrections, season)
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
-    with folder:
+    with folder, _second_thread() as second:
         session, measurements = _measured([folder.path], session, align, on_progress)
+        beside = _begun(second, session, measurements, align)
         activity = attribute(measurements, session)
         session = _with_table(session, activity, corrections, align)
         plan = make_plan(measurements, activity, session)
-        result = _delivered(folder, session, measurements, activity, plan, stems, mark, on_progress)
+        result = _delivered(folder, session, measurements, activity, plan, stems, mark, beside, on_progress)
         if corrections is not None:
             keep_file(folder, Path(corrections))
     return result
@@ -171,9 +183,10 @@ def render_again(
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
     read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)
-    with folder:
+    with folder, _second_thread() as second:
         if measurements is None:
             session, measurements = _measured(homes, session, align, on_progress)
+        beside = _begun(second, session, measurements, align)
         activity = attribute(measurements, session)
         session = _with_table(session, activity, corrections, align)
         if written is None:
@@ -182,7 +195,7 @@ def render_again(
         notes = (*differences(automation.parent, session), *without_effect(settings, corrections), *read.notes)
         session = dataclasses.replace(session, notes=(*session.notes, *notes))
         mark = "" if notes else _mark(sources, delivery, stems, settings, accept_short, align, corrections)
-        result = _delivered(folder, session, measurements, activity, read.plan, stems, mark, on_progress)
+        result = _delivered(folder, session, measurements, activity, read.plan, stems, mark, beside, on_progress)
         keep_file(folder, automation)
     return result
 
@@ -226,7 +239,8 @@ def finish(
     needed = session.frames * session.mix_channels * (4 + 3) + MARGIN_BYTES
     folder = OutputFolder(wanted, replace, needed_bytes=needed, sources=source_paths(session))
     with folder:
-        finished = deliver_cut(session, folder, on_progress)
+        finished = dataclasses.replace(deliver_cut(session, folder, on_progress),
+                                       digests=digests_of(source_paths(session)))
         write_finished(folder, finished)
     return finished
 
@@ -250,7 +264,7 @@ def _opened(
 def _measured(
     homes: Iterable[Path], session: Session, align: bool, on_progress: OnProgress
 ) -> tuple[Session, Measurements]:
-    """The session and its measurements, kept ones where there are any; its tracks lined up, or the warning."""
+    """The session and its measurements, kept ones where there are any; its tracks lined up where that is asked for."""
     homes = list(homes)
 
     def measurements_of(one: Session) -> Measurements:
@@ -259,10 +273,25 @@ def _measured(
 
     measurements = measurements_of(session)
     if not align:
-        notes = alignment_notes(session, measurements)
-        return dataclasses.replace(session, notes=(*session.notes, *notes)), measurements
+        return session, measurements
     lined_up = retimed(session, aligned(session, find_alignment(session, measurements)), align=align)
     return lined_up, measurements if lined_up.tracks == session.tracks else measurements_of(lined_up)
+
+
+@contextlib.contextmanager
+def _second_thread() -> Iterator[ThreadPoolExecutor]:
+    """A thread that is not waited for longer than what it has begun."""
+    with ThreadPoolExecutor(1, thread_name_prefix="beside") as second:
+        try:
+            yield second
+        finally:
+            second.shutdown(wait=False, cancel_futures=True)
+
+
+def _begun(second: ThreadPoolExecutor, session: Session, measurements: Measurements, align: bool) -> _Beside:
+    """Warnings of tracks that do not line up (unless they were lined up), and the sources' digests, begun."""
+    notes = second.submit(lambda: () if align else alignment_notes(session, measurements))
+    return _Beside(notes, second.submit(digests_of, source_paths(session)))
 
 
 def _listed(sources: Sequence[Path | str] | Path | str) -> list[Path | str]:
@@ -289,13 +318,15 @@ def _with_table(session: Session, activity: Activity, corrections: Path | None, 
 
 def _delivered(
     folder: OutputFolder, session: Session, measurements: Measurements, activity: Activity, plan: GainPlan, stems: str,
-    mark: str, on_progress: OnProgress,
+    mark: str, beside: _Beside, on_progress: OnProgress,
 ) -> Result:
     """Render the plan and write all that belongs to it."""
     mix = render(session, plan, folder.work, stems=stems, on_progress=on_progress)
+    session = dataclasses.replace(session, notes=(*session.notes, *beside.notes.result()))
     activity = overruled(activity, session)
     places = places_to_hear(activity, plan, session)
-    result = Result(session, measurements, activity, plan, mix, stems, folder.path, places, mark)
+    result = Result(session, measurements, activity, plan, mix, stems, folder.path, places, mark,
+                    beside.digests.result())
     mark_files(folder.work, session, mix, places)
     write_automation(folder.file("automation.csv"), plan, session)
     report = write_tables(folder, result)

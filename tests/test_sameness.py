@@ -15,7 +15,6 @@ import runs
 import leveller
 from leveller import cut, lanes, pipeline
 from leveller.pipeline import finish, process, render_again
-from leveller.report import tables
 from leveller.settings import Settings
 
 WAYS = ((2.0, 1), (2.0, 2), (0.5, 4), (3.33, 2))  # block in s, threads
@@ -36,8 +35,7 @@ def results(tmp_path_factory: pytest.TempPathFactory) -> list[Path]:
 def run_all(talk: Path, folder: Path, block_s: float, threads: int) -> None:
     """Everything in blocks of so many seconds on so many threads."""
     with pytest.MonkeyPatch.context() as patch:
-        for module in (lanes, tables):
-            patch.setattr(module, "thread_count", lambda: threads)
+        patch.setattr(lanes, "thread_count", lambda: threads)
         patch.setattr(pipeline, "measure", in_blocks(pipeline.measure, block_s))
         patch.setattr(pipeline, "render", in_blocks(pipeline.render, block_s))
         patch.setattr(cut, "BLOCK_S", block_s)

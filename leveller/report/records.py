@@ -13,6 +13,9 @@ from leveller.measure.loudness import Loudness
 from leveller.report.quantities import quantity
 
 if TYPE_CHECKING:
+    from collections.abc import Mapping
+    from pathlib import Path
+
     from leveller.render.mix import Mix
     from leveller.session import Session
 
@@ -29,6 +32,8 @@ class Run(Protocol):
     def mix(self) -> Mix: ...
     @property
     def stems(self) -> str: ...
+    @property
+    def digests(self) -> Mapping[Path, str]: ...
 
 
 @dataclass(frozen=True)

@@ -13,18 +13,15 @@ import dataclasses
 import json
 import math
 from collections.abc import Sequence
-from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import parts_of
 from leveller.automation import text_cell
-from leveller.fingerprint import made_by, sha256
+from leveller.fingerprint import made_by
 from leveller.folder import OutputFolder
-from leveller.lanes import thread_count
 from leveller.listen import Place
 from leveller.measure.loudness import SHORT_TERM_CELLS
 from leveller.plan import STATES
@@ -134,12 +131,8 @@ def as_json(value: Any) -> Any:
 
 def sources_of(result: Run) -> list[dict[str, Any]]:
     """Name, size and SHA-256 of every file that was read, in session order, then those set aside."""
-    used = [part.path for track in result.session.tracks for part in parts_of(track)]
-    paths = dict.fromkeys([*used, *(aside.path for aside in result.session.set_aside)])
-    with ThreadPoolExecutor(thread_count()) as pool:  # hashing releases the interpreter lock
-        digests = list(pool.map(sha256, paths))
     return [{"file": path.name, "bytes": path.stat().st_size, "sha256": digest}
-            for path, digest in zip(paths, digests, strict=True)]
+            for path, digest in result.digests.items()]
 
 
 def _number(value: float, decimals: int) -> str:
