@@ -306,11 +306,13 @@ def test_every_key_arrives(tmp_path: Path) -> None:
         from_s = 0
         to_s = 1.5
         why = "slate"
+        timeline = "opened"
         [[correction]]
         track = "Guest"
         from_s = 1
         to_s = 2
         decide = "own"
+        timeline = "aligned"
         [expander]
         range_db = 12
         """)
@@ -321,8 +323,8 @@ def test_every_key_arrives(tmp_path: Path) -> None:
     assert session.title == "Kettle talk"
     assert (session.delivery.name, session.delivery.target_lufs, session.delivery.ceiling_dbtp) == (
         "aes-speech", -20.0, -2.5)
-    assert session.skips == (Skip(0.0, 1.5, "slate"),)
-    assert session.corrections == (Correction("Guest", 1.0, 2.0, "own", None),)
+    assert session.skips == (Skip(0.0, 1.5, "slate", "opened"),)
+    assert session.corrections == (Correction("Guest", 1.0, 2.0, "own", None, "aligned"),)
     assert session.settings.expander.range_db == 12.0
 
 
