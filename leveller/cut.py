@@ -96,7 +96,7 @@ def deliver_cut(session: Session, folder: OutputFolder, on_progress: OnProgress)
     length_s = session.frames / session.rate_hz
     with (SpilledSum(folder.work / ".sum", session.rate_hz, session.mix_channels, frames) as spilled,
           open_readers(session) as readers):
-        bus = Bus(session.rate_hz, session.mix_channels)
+        bus = Bus(session.rate_hz, session.mix_channels, session.frames)
 
         def step(lane: int, block: int) -> Samples:
             own = readers[lane].read(min(frames, session.frames - block * frames))

@@ -43,7 +43,7 @@ from leveller.measure.levels import STEP_DB, level_to_db
 from leveller.session import Session
 from leveller.units import HOPS_PER_S, Bools, seconds_to_hops
 
-ROUNDS = 3
+ROUNDS = 3  # of couplings and evidence
 CLEARLY_OWN = 0.6  # mean nats a band: this microphone has its own voice
 CLEARLY_NOT = 0.2  # ... and this one has not
 CLEARLY_AUDIBLE_DB = 6.0
@@ -91,10 +91,12 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
     tail = tail_db_per_hop(m.levels, floor_db)
     lags = find_lags(audible_db, labels_by_level(m, audible_db, programme))
     labels = seeds = first_labels(m, audible_db, programme)
-    for _ in range(ROUNDS):
+    near_voice = programme[:, None] & _near(m.voiced)
+    for _ in range(ROUNDS - 1):
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
-        evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail)
-        labels = _relabelled(evidence, programme[:, None] & _near(m.voiced), seeds)
+        labels = _relabelled(evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail), near_voice, seeds)
+    coupling = estimate_coupling(m.levels, floor_db, labels, lags)
+    evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail)
     voice = without_knocks(with_leads(evidence, m.arrivals, coupling), m.levels)
     margin = margins(np.where(programme[:, None], voice, 0))
     own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)

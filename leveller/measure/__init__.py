@@ -120,12 +120,15 @@ def _collected(session: Session, meters: list[_TrackMeters], arrival: ArrivalMet
     levels = np.full((hops, len(meters), bands), SILENT, np.int16)
     others = np.full((3, hops, len(meters)), SILENT, np.int16)
     voiced = np.zeros((hops, len(meters)), np.bool_)
-    for i, meter in enumerate(meters):
+    peaks, repaired = [], []
+    for i in range(levels.shape[1]):
+        meter = meters.pop(0)  # gone once it is read: its rows are as large as what they are copied to
+        peaks.append(meter.peak.result())
+        repaired.append(meter.reader.repaired_frames)
         found, flags = meter.bands.result()[:hops], meter.voice.result()[:hops]
         levels[: len(found), i] = found[:, :bands]
         others[:, : len(found), i] = found[:, BANDS:].T
         voiced[: len(flags), i] = flags
     return Measurements(
         levels=levels, k_levels=others[0], voice_levels=others[1], rumble=others[2], voiced=voiced,
-        arrivals=arrival.result(),
-        peaks=tuple(m.peak.result() for m in meters), repaired_frames=tuple(m.reader.repaired_frames for m in meters))
+        arrivals=arrival.result(), peaks=tuple(peaks), repaired_frames=tuple(repaired))

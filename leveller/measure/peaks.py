@@ -24,7 +24,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from leveller.measure.pieces import Grown, Piece, Pieces
+from leveller.measure.pieces import Piece, Pieces
 from leveller.units import gain_to_db
 
 FULL_SCALE = 0.9999  # a choice of ours: just under the largest 16-bit sample, 0.99997
@@ -173,17 +173,17 @@ class TruePeakMeter:
     Parameters
     ----------
     rate_hz, channels : int
-    keep_cells : bool
-        Without it only the highest peak is remembered: an hour of cells is 14 MB.
+    frames : int
+        How many will be pushed at most, where the cells are wanted; 0 remembers the highest peak alone. (An hour of
+        cells is 14 MB.)
     """
 
-    def __init__(self, rate_hz: int, channels: int, *, keep_cells: bool = True) -> None:
+    def __init__(self, rate_hz: int, channels: int, *, frames: int = 0) -> None:
         self._rate_hz = rate_hz
         self._between = PeakCells(rate_hz)
         self.cell_frames = self._between.cell_frames
         self._pieces = self._between.pieces(channels)
-        self._keep = keep_cells
-        self._cells = Grown()
+        self._cells = np.zeros(-(-frames // self.cell_frames), np.float32)
         self._count = 0  # cells so far
         self._highest = (0.0, 0)  # linear, cell
 
@@ -192,25 +192,31 @@ class TruePeakMeter:
         for piece in self._pieces.push(block):
             cells = self._between.measure(piece)
             self._highest = self._higher(cells)
+            self._keep(cells)
             self._count += len(cells)
-            if self._keep:
-                self._cells.append(cells)
 
     def cells(self) -> npt.NDArray[np.float32]:
-        """True peak of each peak cell so far, linear, shape=(cells,)."""
-        done = self._cells.rows(
-            *(self._between.measure(piece)[: -(-frames // self.cell_frames)] for piece, frames in self._pieces.rest()))
-        return np.concatenate(done) if done else np.zeros(0, np.float32)
+        """True peak of each peak cell so far, linear, shape=(cells,); empty where none are kept."""
+        count = self._count
+        for piece, frames in self._pieces.rest():
+            self._keep(self._between.measure(piece)[: -(-frames // self.cell_frames)])
+            count += -(-frames // self.cell_frames)
+        return self._cells[:count]
 
     def result(self) -> TruePeakReading:
         """The reading over what was pushed so far; without cells where none are kept."""
         peak, at = self._highest
         for piece, frames in self._pieces.rest():
             peak, at = self._higher(self._between.measure(piece)[: -(-frames // self.cell_frames)])
-        cells = self.cells() if self._keep else np.zeros(0, np.float32)
+        cells = self.cells()
         if not peak:
             return TruePeakReading(-math.inf, 0.0, cells, self.cell_frames)
         return TruePeakReading(gain_to_db(peak), (at + 0.5) * self.cell_frames / self._rate_hz, cells, self.cell_frames)
+
+    def _keep(self, cells: npt.NDArray[np.float32]) -> None:
+        """Write the cells behind those so far, as far as there is room."""
+        room = self._cells[self._count : self._count + len(cells)]
+        room[:] = cells[: len(room)]
 
     def _higher(self, cells: npt.NDArray[np.float32]) -> tuple[float, int]:
         """The highest peak with these cells, and its cell."""

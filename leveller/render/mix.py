@@ -82,7 +82,7 @@ def render(
     frames = round(block_s * session.rate_hz)
     paths = [work / "stems" / f"{track.name}.wav" for track in session.tracks]
     paths[0].parent.mkdir(exist_ok=True)
-    bus = Bus(session.rate_hz, session.mix_channels)
+    bus = Bus(session.rate_hz, session.mix_channels, session.frames)
     _write_stems(session, plan, paths, frames, bus, on_progress)
     kind = ScaledStems if stems == LEVELS[0] else LimitedStems
     with kind(paths, session, frames) as programme:
@@ -94,10 +94,10 @@ def render(
 class Bus:
     """The sum on its way to the mix: measured as it grows, then delivered."""
 
-    def __init__(self, rate_hz: int, channels: int) -> None:
+    def __init__(self, rate_hz: int, channels: int, frames: int) -> None:
         self._rate_hz, self._channels = rate_hz, channels
         self._loudness = LoudnessMeter(rate_hz, channels)
-        self._peaks = TruePeakMeter(rate_hz, channels)
+        self._peaks = TruePeakMeter(rate_hz, channels, frames=frames)
 
     def push(self, block: Samples) -> None:
         """Measure the next block of the sum."""
@@ -109,7 +109,7 @@ class Bus:
     ) -> Mix:
         """Write the mix on target under the ceiling; the reading is of what was written."""
         before = Unlimited(self._loudness.cells(), self._peaks.cells())
-        del self._loudness, self._peaks  # the sum is complete; an hour of peak cells is 14 MB
+        del self._loudness, self._peaks  # the sum is complete
         target, ceiling = delivery.target_lufs, delivery.ceiling_dbtp
         for _ in range(MOST_ROUNDS):
             make_up = find_make_up(before.cells, before.peak_cells, target_lufs=target, ceiling_dbtp=ceiling,

@@ -52,7 +52,7 @@ class Remeter:
         self._peak_gain = np.float32(db_to_gain(make_up_db))
         self._peak_cells = before.peak_cells
         self._between = PeakCells(rate_hz)
-        self._touched_peaks = touched_cells(nodes_db)
+        self._nodes_db = nodes_db
         self._peak_pieces = self._between.pieces(channels)
         self._at = 0  # peak cell of the next piece
         self._highest = (0.0, 0)
@@ -102,21 +102,15 @@ class Remeter:
 
     def _look(self, piece: Piece) -> None:
         """The highest peak with this piece."""
-        places = slice(self._at, self._at + PIECE_CELLS)
-        known = self._peak_cells[places]
-        cells = self._between.measure(piece)[: len(known)] if self._touched_peaks[places].any() else known
+        known = self._peak_cells[self._at : self._at + PIECE_CELLS]
+        reached = self._nodes_db[max(0, self._at - 1) : self._at + PIECE_CELLS + 2]  # by the interpolator, too
+        cells = self._between.measure(piece)[: len(known)] if reached.any() else known
         factor = 1.0 if cells is not known else float(self._peak_gain)
         if len(cells):
             at = int(cells.argmax())
             if float(cells[at]) * factor > self._highest[0]:
                 self._highest = float(cells[at]) * factor, self._at + at
         self._at += PIECE_CELLS
-
-
-def touched_cells(nodes_db: Nodes) -> Bools:
-    """Peak cells in which the limiter works, and their neighbours, into which the interpolator reaches."""
-    working = np.pad((nodes_db[:-1] < 0) | (nodes_db[1:] < 0), 1)
-    return np.asarray(working[:-2] | working[1:-1] | working[2:])
 
 
 def touched_hops(nodes_db: Nodes, hops: int, cell_s: float) -> Bools:

@@ -22,7 +22,7 @@ SAMPLE_16_BIT = 32767 / 32768
 
 
 def true_peak(signal: np.ndarray, rate_hz: int = RATE_HZ) -> peaks.TruePeakReading:
-    meter = TruePeakMeter(rate_hz, 1 if signal.ndim == 1 else signal.shape[1])
+    meter = TruePeakMeter(rate_hz, 1 if signal.ndim == 1 else signal.shape[1], frames=len(signal))
     return run_meter(meter, np.asarray(signal, np.float32), 48_000)
 
 
@@ -119,7 +119,8 @@ def test_peak_after_the_end_counts() -> None:
 def test_block_size_never_changes_true_peak(rate_hz: int) -> None:
     """Blocks of any size give the same cells, to the last bit."""
     signal = noise_bursts(rate_hz, 1.2345, 2)
-    assert_block_parity(lambda: TruePeakMeter(rate_hz, 2), signal, [997, 48_000, 10**9, [1, 20_000, 17]])
+    blocks = [997, 48_000, 10**9, [1, 20_000, 17]]
+    assert_block_parity(lambda: TruePeakMeter(rate_hz, 2, frames=len(signal)), signal, blocks)
 
 
 def test_true_peak_of_silence() -> None:

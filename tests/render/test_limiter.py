@@ -27,7 +27,7 @@ CELL_S = 0.001
 def measured(signal: np.ndarray, rate_hz: int) -> tuple[np.ndarray, np.ndarray]:
     """10 ms cells and peak cells."""
     channels = 1 if signal.ndim == 1 else signal.shape[1]
-    loudness, peaks = LoudnessMeter(rate_hz, channels), TruePeakMeter(rate_hz, channels)
+    loudness, peaks = LoudnessMeter(rate_hz, channels), TruePeakMeter(rate_hz, channels, frames=len(signal))
     loudness.push(signal)
     peaks.push(signal)
     return loudness.cells(), peaks.cells()

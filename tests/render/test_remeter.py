@@ -8,7 +8,7 @@ import pytest
 from leveller.measure.loudness import LoudnessMeter
 from leveller.measure.peaks import TruePeakMeter, peak_cell_frames
 from leveller.render.limiter import apply_nodes, find_make_up
-from leveller.render.remeter import MEMORY_CELLS, Remeter, Unlimited, touched_cells, touched_hops
+from leveller.render.remeter import MEMORY_CELLS, Remeter, Unlimited, touched_hops
 from leveller.settings import Limiter
 
 FLOAT32_DB = float(20 * np.log10(1 + 4 * np.finfo(np.float32).eps))
@@ -30,7 +30,7 @@ def clicking(rate_hz: int, channels: int, *, clicks_s: tuple[float, ...]) -> np.
 def test_reads_what_full_meters_read(rate_hz: int, channels: int, clicks_s: tuple[float, ...]) -> None:
     """Loudness cells and true peak are those of meters that hear every delivered sample, at any block size."""
     signal = clicking(rate_hz, channels, clicks_s=clicks_s)
-    loudness, peaks = LoudnessMeter(rate_hz, channels), TruePeakMeter(rate_hz, channels)
+    loudness, peaks = LoudnessMeter(rate_hz, channels), TruePeakMeter(rate_hz, channels, frames=len(signal))
     loudness.push(signal)
     peaks.push(signal)
     width = peak_cell_frames(rate_hz)
@@ -39,7 +39,7 @@ def test_reads_what_full_meters_read(rate_hz: int, channels: int, clicks_s: tupl
                            cell_s=width / rate_hz)
     assert bool(make_up.nodes_db.any()) == bool(clicks_s)
     out = apply_nodes(signal, make_up.nodes_db, first_frame=0, cell_frames=width, make_up_db=make_up.make_up_db)
-    heard, seen = LoudnessMeter(rate_hz, channels), TruePeakMeter(rate_hz, channels)
+    heard, seen = LoudnessMeter(rate_hz, channels), TruePeakMeter(rate_hz, channels, frames=len(signal))
     heard.push(out)
     seen.push(out)
     for block in (997, rate_hz * 2, len(out)):
@@ -63,9 +63,8 @@ def test_silence_reads_silence() -> None:
 
 
 def test_only_the_limiters_surroundings_are_touched() -> None:
-    """One node at work touches its cells and their neighbours, and the hops that the K-weighting remembers it for."""
+    """One node at work touches its hops and those that the K-weighting remembers it for."""
     nodes = np.zeros(1001, np.float32)
     nodes[500] = -1.0
-    assert np.flatnonzero(touched_cells(nodes)).tolist() == [498, 499, 500, 501]
     assert np.flatnonzero(touched_hops(nodes, 100, 0.001)).tolist() == list(range(49, 51 + MEMORY_CELLS))
     assert not touched_hops(np.zeros(1001, np.float32), 100, 0.001).any()
