@@ -5,8 +5,7 @@ cell and it is one on every peak cell: nothing needs to be measured twice. Where
 round it as the K-weighting remembers and the interpolator reaches, the samples that are written are measured as in
 `measure.loudness` and `measure.peaks`. In conversations that is a sixth of the programme (measured: 0.1 to 0.25).
 
-The K-weighting's slowest pole, the high-pass at 38 Hz, has fallen to e^-24 after `MEMORY_CELLS`: so long before a
-stretch the filter starts from rest, and so long after it the stretch still counts as touched.
+A stretch counts as touched for as long as the K-weighting remembers it.
 """
 
 from __future__ import annotations
@@ -17,7 +16,15 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from leveller.measure.loudness import Cells, Loudness, channel_weights, k_weighting, loudness_of, weighted_cells
+from leveller.measure.loudness import (
+    MEMORY_S,
+    Cells,
+    Loudness,
+    channel_weights,
+    loudness_of,
+    memory_frames,
+    weighted_cells,
+)
 from leveller.measure.peaks import PIECE_CELLS, PeakCells
 from leveller.measure.pieces import Piece, Pieces
 from leveller.render.limiter import Nodes
@@ -25,7 +32,8 @@ from leveller.units import HOPS_PER_S, Bools, db_to_gain, gain_to_db, hop_to_fra
 
 Samples = npt.NDArray[np.float32]
 
-MEMORY_CELLS = 10  # 0.1 s
+MEMORY_CELLS = round(MEMORY_S * HOPS_PER_S)
+STRETCH_CELLS = 25  # stretches are measured in steps of a quarter of a second, so that spectra have few sizes
 
 
 @dataclass(frozen=True)
@@ -57,10 +65,9 @@ class Remeter:
         self._at = 0  # peak cell of the next piece
         self._highest = (0.0, 0)
 
-        self._sos, self._weights = k_weighting(rate_hz), channel_weights(channels)
-        self._state = np.zeros((channels, len(self._sos), 2))  # at rest
+        self._weights = channel_weights(channels)
         self._edges = np.asarray(hop_to_frame(np.arange(HOPS_PER_S + 1), rate_hz))
-        self._lead = rate_hz - int(self._edges[HOPS_PER_S - MEMORY_CELLS])
+        self._lead = memory_frames(rate_hz)
         self._pieces = Pieces(rate_hz, channels, before=self._lead)
         self._touched = touched_hops(nodes_db, len(before.cells), self._between.cell_frames / rate_hz)
         self._cells = before.cells * float(db_to_gain(2 * make_up_db))
@@ -93,12 +100,16 @@ class Remeter:
         touched = np.flatnonzero(self._touched[first : self._hop])
         if not len(touched):
             return
-        start, end = int(touched[0]), int(touched[-1]) + 1
-        lead = self._edges[(start - MEMORY_CELLS) % HOPS_PER_S] - (self._rate_hz if start < MEMORY_CELLS else 0)
-        edges = self._lead + np.concatenate([[lead], self._edges[start : end + 1]])
-        cells, _ = weighted_cells(piece[:, edges[0] : edges[-1]], edges - edges[0], sos=self._sos,
-                                  weights=self._weights, state=self._state)
-        self._cells[first + start : first + end] = cells[1:]
+        start = int(touched[0]) // STRETCH_CELLS * STRETCH_CELLS
+        end = -(-(int(touched[-1]) + 1) // STRETCH_CELLS) * STRETCH_CELLS
+        edges = self._edges[start : end + 1]
+        stretch = piece[:, edges[0] : self._lead + edges[-1]]  # with the memory before it
+        cells = np.zeros(end - start)
+        for channel, weight in zip(stretch, self._weights, strict=True):
+            if weight and channel.any():
+                cells += weight * weighted_cells(channel[None], edges - edges[0], rate_hz=self._rate_hz)[0]
+        room = self._cells[first + start : first + end]
+        room[:] = cells[: len(room)]
 
     def _look(self, piece: Piece) -> None:
         """The highest peak with this piece."""
