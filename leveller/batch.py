@@ -24,6 +24,7 @@ from leveller.desk import Desk
 from leveller.errors import OutputError, SettingsError
 from leveller.fingerprint import made_by
 from leveller.folder import clean_up
+from leveller.lanes import processor_count
 from leveller.render.mix import LEVELS
 from leveller.report.season import FAILED, FINISHED, WAITING, Outcome, SeasonReport, read_json, season_report
 from leveller.report.season_files import write_season
@@ -84,7 +85,8 @@ def batch(
     out : path
         Folder to write, one folder in it for each episode.
     jobs : int, optional
-        Episodes at once on this computer; by default by its processors and free memory.
+        Episodes at once on this computer, each on one processor; by default as many as there are processors and free
+        memory for. Only then, where the episodes are fewer than the processors, they share them.
     again : bool
         Process unchanged and edited episodes too.
     delivery, stems, settings, accept_short, align
@@ -110,7 +112,8 @@ def batch(
     _check_place(found, Path(season), folder)
     with Desk(folder) as desk:
         options: dict[str, Any] = {"delivery": delivery, "stems": stems, "settings": tuple((settings or {}).items()),
-                   "accept_short": accept_short, "align": align, "again": again, "made_by": tuple(made_by().items())}
+                   "accept_short": accept_short, "align": align, "again": again, "made_by": tuple(made_by().items()),
+                   "threads": _threads_each(len(found.episodes), jobs, cluster)}
         tasks = [Task(e, str(folder / e.name), str(desk.path), **options) for e in found.episodes]
         with _workers(cluster, jobs or default_jobs(), len(tasks), desk) as workers:
             run = _Run(workers, desk, tasks, on_season)
@@ -145,6 +148,13 @@ def _check_place(season: Season, path: Path, out: Path) -> None:
         for source in episode.sources:
             if Path(source).resolve().is_relative_to(place):
                 raise OutputError(f"{place}: is or holds the source of {episode.name}. Choose another --out")
+
+
+def _threads_each(episodes: int, jobs: int | None, cluster: str | None) -> int:
+    """Processors for each episode: one, unless nobody said how many at once and there are more than are needed."""
+    if jobs is not None or cluster is not None:
+        return 1
+    return max(1, processor_count() // min(default_jobs(), episodes))
 
 
 def _workers(cluster: str | None, jobs: int, tasks: int, desk: Desk) -> AbstractContextManager[Workers]:

@@ -191,7 +191,7 @@ def batch(
     out: Annotated[Path, typer.Option(
         metavar="DIR", help="Folder to write, one folder in it for each episode.", show_default=False)],
     jobs: Annotated[int | None, typer.Option(
-        metavar="N", help="Episodes at once; by default by the processors and the memory there are.",
+        metavar="N", help="Episodes at once, each on one processor; by default as processors and memory allow.",
         show_default=False)] = None,
     again: Annotated[bool, typer.Option("--again", help="Process unchanged and edited episodes too.")] = False,
     delivery: DeliveryName = None,

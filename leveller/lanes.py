@@ -5,26 +5,75 @@ from one thread at a time), lanes run side by side, and the results come back bl
 whatever follows (a sum, a cross-correlation) sees the same order on any number of threads. At most `AHEAD` blocks a
 lane are in flight, which bounds the memory.
 
+How many threads: the processors there are, at most four; inside `limited_to(threads)` no more than that. Limited to
+one, nothing starts a thread: `walk` and the work of a `second_thread` run where they are called, so that an episode of
+a season takes one processor and no more.
+
 numpy, soundfile and FFTs release the interpreter lock, so two threads pay on two cores. BLAS threads are kept at one:
 its own pool under ours measured twice the time.
 """
 
 from __future__ import annotations
 
+import contextlib
 import os
 from collections import deque
 from collections.abc import Callable, Iterator
-from concurrent.futures import Future, ThreadPoolExecutor
-from typing import TypeVar
+from concurrent.futures import Executor, Future, ThreadPoolExecutor
+from contextvars import ContextVar
+from typing import Any, TypeVar
 
 T = TypeVar("T")
 AHEAD = 2  # blocks in flight per lane; one leaves a thread idle whenever lanes and threads do not divide
+MOST_THREADS = 4  # readers and writers of one disk gain nothing from more
+
+_limit: ContextVar[int] = ContextVar("limit", default=MOST_THREADS)  # two threads of one process have one each
+
+
+def processor_count() -> int:
+    """Processors that this process may use."""
+    return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
 
 
 def thread_count() -> int:
-    """Threads worth having: the processors this process may use, at most four."""
-    cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
-    return max(1, min(4, cores))
+    """Threads worth having: the processors this process may use, at most `MOST_THREADS`, within `limited_to`."""
+    return max(1, min(_limit.get(), MOST_THREADS, processor_count()))
+
+
+@contextlib.contextmanager
+def limited_to(threads: int) -> Iterator[None]:
+    """Use no more threads than these, in what this thread does inside."""
+    before = _limit.set(threads)
+    try:
+        yield
+    finally:
+        _limit.reset(before)
+
+
+@contextlib.contextmanager
+def second_thread() -> Iterator[Executor]:
+    """A thread for what may run beside; on leaving, only what it has begun is still done. None where one is all."""
+    if thread_count() == 1:
+        yield _AtOnce()
+        return
+    with ThreadPoolExecutor(1, thread_name_prefix="beside") as second:
+        try:
+            yield second
+        finally:
+            second.shutdown(wait=False, cancel_futures=True)
+
+
+class _AtOnce(Executor):
+    """An executor that works when it is asked, in the caller's thread."""
+
+    def submit(self, fn: Callable[..., T], /, *args: Any, **kwargs: Any) -> Future[T]:
+        """Run it now; an error waits in the future, as it would with a thread."""
+        future: Future[T] = Future()
+        try:
+            future.set_result(fn(*args, **kwargs))
+        except Exception as error:
+            future.set_exception(error)
+        return future
 
 
 def walk(
@@ -32,9 +81,14 @@ def walk(
 ) -> Iterator[list[T]]:
     """Yield, for every block in order, the lanes' results in order.
 
-    The first exception of a step ends the walk and is raised here; steps not yet begun are dropped.
+    The first exception of a step ends the walk and is raised here; steps not yet begun are dropped. On one thread the
+    steps run here, in the same order.
     """
-    with ThreadPoolExecutor(threads or thread_count(), thread_name_prefix="lane") as pool:
+    count = threads or thread_count()
+    if count == 1:
+        yield from ([step(lane, block) for lane in range(lanes)] for block in range(blocks))
+        return
+    with ThreadPoolExecutor(count, thread_name_prefix="lane") as pool:
         before: list[Future[T] | None] = [None] * lanes
         flight: deque[list[Future[T]]] = deque()
         try:

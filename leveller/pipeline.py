@@ -5,10 +5,9 @@
 
 from __future__ import annotations
 
-import contextlib
 import dataclasses
-from collections.abc import Iterable, Iterator, Mapping, Sequence
-from concurrent.futures import Future, ThreadPoolExecutor
+from collections.abc import Iterable, Mapping, Sequence
+from concurrent.futures import Executor, Future
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -23,6 +22,7 @@ from leveller.errors import SettingsError
 from leveller.fingerprint import digests_of, fingerprint
 from leveller.folder import OutputFolder
 from leveller.kept import MEASUREMENTS_FILE, ROWS_FILE, keep_measurements, keep_rows, kept_measurements, kept_rows
+from leveller.lanes import second_thread
 from leveller.listen import Place, places_to_hear
 from leveller.marks import mark_files
 from leveller.measure import Measurements, OnProgress, measure, no_progress
@@ -63,7 +63,7 @@ class Result:
 
 @dataclass(frozen=True)
 class _Beside:
-    """What runs beside the decisions, which are one thread: nothing waits for it until the reports."""
+    """What may run beside the decisions, which are one thread: nothing waits for it until the reports."""
 
     notes: Future[tuple[str, ...]]  # of tracks that do not line up
     digests: Future[dict[Path, str]]
@@ -121,7 +121,7 @@ def process(
     mark = _mark(sources, delivery, stems, settings, accept_short, align, corrections, season)
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
-    with folder, _second_thread() as second:
+    with folder, second_thread() as second:
         session, measurements = _measured([folder.path], session, align, on_progress)
         beside = _begun(second, session, measurements, align)
         activity = attribute(measurements, session)
@@ -183,7 +183,7 @@ def render_again(
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
     read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)
-    with folder, _second_thread() as second:
+    with folder, second_thread() as second:
         if measurements is None:
             session, measurements = _measured(homes, session, align, on_progress)
         beside = _begun(second, session, measurements, align)
@@ -278,17 +278,7 @@ def _measured(
     return lined_up, measurements if lined_up.tracks == session.tracks else measurements_of(lined_up)
 
 
-@contextlib.contextmanager
-def _second_thread() -> Iterator[ThreadPoolExecutor]:
-    """A thread that is not waited for longer than what it has begun."""
-    with ThreadPoolExecutor(1, thread_name_prefix="beside") as second:
-        try:
-            yield second
-        finally:
-            second.shutdown(wait=False, cancel_futures=True)
-
-
-def _begun(second: ThreadPoolExecutor, session: Session, measurements: Measurements, align: bool) -> _Beside:
+def _begun(second: Executor, session: Session, measurements: Measurements, align: bool) -> _Beside:
     """Warnings of tracks that do not line up (unless they were lined up), and the sources' digests, begun."""
     notes = second.submit(lambda: () if align else alignment_notes(session, measurements))
     return _Beside(notes, second.submit(digests_of, source_paths(session)))

@@ -20,6 +20,7 @@ from typing import Any
 from leveller.desk import ENDED, Seat
 from leveller.errors import LevellerError, OutputError
 from leveller.fingerprint import fingerprint, made_by, note_sources, same_sources, source_files
+from leveller.lanes import limited_to
 from leveller.report.season import EDITED, FAILED, FINISHED, UNCHANGED, Outcome, episode_figures, read_json
 from leveller.season import Episode
 
@@ -46,6 +47,7 @@ class Task:
     accept_short: bool = False
     align: bool = False
     again: bool = False
+    threads: int = 1  # as many processors as it may use
 
     @property
     def options(self) -> dict[str, Any]:
@@ -70,7 +72,8 @@ def work(task: Task) -> Outcome:
             tries = seat.begin()
             if tries > MOST_TRIES:  # a scheduler hands an episode out again by itself
                 return Outcome(task.episode.name, FAILED, LOST, tries=tries - 1)
-            return _outcome(task, seat, tries)
+            with limited_to(task.threads):
+                return _outcome(task, seat, tries)
         except LevellerError as error:
             return Outcome(task.episode.name, FAILED, str(error), tries=tries)
         except Exception as error:  # whatever it is, the other episodes go on

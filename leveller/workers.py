@@ -20,6 +20,7 @@ from concurrent.futures import BrokenExecutor, Future, ProcessPoolExecutor
 from types import FrameType, TracebackType
 from typing import Any
 
+from leveller.lanes import processor_count
 from leveller.worker import busy
 
 JOB_BYTES = 600 << 20  # three hours of eight tracks stay under it
@@ -86,8 +87,7 @@ class LocalWorkers:
 
 def default_jobs() -> int:
     """As many processes as there are processors, unless the free memory is short of that."""
-    cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
-    free = _free_bytes()
+    cores, free = processor_count(), _free_bytes()
     return max(1, cores if free is None else min(cores, free // JOB_BYTES))
 
 

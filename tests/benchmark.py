@@ -4,6 +4,10 @@ Material: a simulated conversation of the development voices (`conversations.py`
 Yardstick: one thread copies the files block by block through soundfile (all tracks read; as many stems and a mono mix
 written, PCM_24). Both run in turn as processes of their own; wall and CPU seconds and peak memory are the operating
 system's. Only ratios carry over from machine to machine. `--stages` times the stages of one run from inside.
+
+`--season N` instead: `leveller batch` over N episodes of that length with one job and with two, in turn. Beside it
+stands what the machine itself gives: a loop of Fourier transforms, twice in a row against two at once. `--keep DIR`
+leaves the material in DIR, so that the next run need not make it.
 """
 
 from __future__ import annotations
@@ -25,6 +29,7 @@ TESTS = Path(__file__).parent
 sys.path[:0] = [str(TESTS), str(TESTS.parent)]  # also without an installed package
 
 RATE_HZ = 48_000
+ENVIRONMENT = {**os.environ, "OPENBLAS_NUM_THREADS": "1", "PYTHONPATH": str(TESTS.parent)}
 COPY = """
 import sys, soundfile
 files = [soundfile.SoundFile(path) for path in sys.argv[2:]]
@@ -35,6 +40,12 @@ while len((blocks := [f.read(4 * rate, dtype="float32") for f in files])[0]):
         out.write(block)
 for out in outs:
     out.close()
+"""
+SPIN = """
+import numpy
+x = numpy.ones(8192)
+for _ in range(24_000):
+    numpy.fft.irfft(numpy.fft.rfft(x))
 """
 STAGES = """
 import sys, time
@@ -69,13 +80,15 @@ def material(folder: Path, minutes: float, tracks: int) -> list[Path]:
     import soundfile
     from conversations import ConversationSpec, simulate
 
+    paths = [folder / f"mic {track + 1}.wav" for track in range(tracks)]
+    if all(path.exists() for path in paths):
+        return paths
+    folder.mkdir(parents=True, exist_ok=True)
     spoken = simulate(ConversationSpec(seconds=120.0, seed=7, rate_hz=RATE_HZ, people=min(tracks, 8)))
     frames = round(minutes * 60 * RATE_HZ)
-    paths = []
     for track in range(tracks):
         mic = np.roll(spoken.mics[:, track % spoken.mics.shape[1]], track // spoken.mics.shape[1] * RATE_HZ * 7)
-        paths.append(folder / f"mic {track + 1}.wav")
-        with soundfile.SoundFile(paths[-1], "w", RATE_HZ, 1, "PCM_24") as file:
+        with soundfile.SoundFile(paths[track], "w", RATE_HZ, 1, "PCM_24") as file:
             for start in range(0, frames, len(mic)):
                 file.write(mic[: min(len(mic), frames - start)])
     return paths
@@ -83,14 +96,45 @@ def material(folder: Path, minutes: float, tracks: int) -> list[Path]:
 
 def cost_of(command: list[str]) -> Cost:
     """Run a command to its end."""
-    environment = {**os.environ, "OPENBLAS_NUM_THREADS": "1", "PYTHONPATH": str(TESTS.parent)}
     start = time.perf_counter()
-    process = subprocess.Popen(command, env=environment, stdout=subprocess.DEVNULL)
+    process = subprocess.Popen(command, env=ENVIRONMENT, stdout=subprocess.DEVNULL)
     _, status, usage = os.wait4(process.pid, 0)
     if status:
         raise SystemExit(f"{command[:3]} ended with status {status}")
     peak = usage.ru_maxrss / (1024 if sys.platform != "darwin" else 1 << 20)
     return Cost(time.perf_counter() - start, usage.ru_utime + usage.ru_stime, peak)
+
+
+def season(room: Path, paths: list[str], episodes: int, runs: int) -> None:
+    """Print what a second job brings, beside what a second processor brings to a mere loop."""
+    listed = room / "season.csv"
+    listed.write_text("session\n" + f"{Path(paths[0]).parent}\n" * episodes)
+    print(f"{episodes} episodes\n{'':10s} {'wall s':>8s} {'CPU s':>8s}")
+    gains = []
+    for _ in range(runs):
+        alone, both = gain_of_a_processor()
+        costs = []
+        for jobs in (1, 2):
+            costs.append(cost_of([sys.executable, "-m", "leveller", "batch", str(listed), "--out", str(room / "out"),
+                                  "--jobs", str(jobs), "--quiet"]))
+            subprocess.run(["rm", "-rf", str(room / "out")], check=True)
+            print(f"{f'--jobs {jobs}':10s} {costs[-1].wall_s:8.2f} {costs[-1].cpu_s:8.2f}", flush=True)
+        gains.append((costs[0].wall_s / costs[1].wall_s, alone / both))
+    two, machine = np.median(gains, axis=0)
+    print(f"two jobs are {two:.2f} times one; the machine runs two loops {machine:.2f} times as fast as one after the "
+          f"other   (median of {runs})")
+
+
+def gain_of_a_processor() -> tuple[float, float]:
+    """Seconds of two loops, one after the other and at once."""
+    command = [sys.executable, "-c", SPIN]
+    start = time.perf_counter()
+    for _ in range(2):
+        cost_of(command)
+    between = time.perf_counter()
+    for process in [subprocess.Popen(command, env=ENVIRONMENT) for _ in range(2)]:
+        process.wait()
+    return between - start, time.perf_counter() - between
 
 
 def main() -> None:
@@ -100,18 +144,23 @@ def main() -> None:
     parser.add_argument("--tracks", type=int, default=3)
     parser.add_argument("--runs", type=int, default=3)
     parser.add_argument("--stages", action="store_true")
+    parser.add_argument("--season", type=int, metavar="N", help="a batch of N episodes instead, one job against two")
+    parser.add_argument("--keep", type=Path, metavar="DIR", help="where the material stays for the next run")
     asked = parser.parse_args()
     with tempfile.TemporaryDirectory() as folder:
         room = Path(folder)
+        talk = asked.keep / f"{asked.minutes:g} min of {asked.tracks}" if asked.keep else room / "talk"
         with ProcessPoolExecutor(1, mp_context=get_context("spawn")) as apart:  # its memory must not count as theirs
-            paths = [str(path) for path in apart.submit(material, room, asked.minutes, asked.tracks).result()]
-        (room / "copy").mkdir()
-        if asked.stages:
-            subprocess.run([sys.executable, "-c", STAGES, str(room / "out"), *paths], check=True,
-                           env={**os.environ, "OPENBLAS_NUM_THREADS": "1", "PYTHONPATH": str(TESTS.parent)})
-            return
+            paths = [str(path) for path in apart.submit(material, talk, asked.minutes, asked.tracks).result()]
         load, processors = os.getloadavg()[0], os.cpu_count()
         print(f"{asked.minutes:g} min, {asked.tracks} tracks; load {load:.1f}, {processors} processors")
+        if asked.season:
+            season(room, paths, asked.season, asked.runs)
+            return
+        (room / "copy").mkdir()
+        if asked.stages:
+            subprocess.run([sys.executable, "-c", STAGES, str(room / "out"), *paths], check=True, env=ENVIRONMENT)
+            return
         print(f"{'':10s} {'wall s':>8s} {'CPU s':>8s} {'peak MB':>8s}")
         ratios = []
         for _ in range(asked.runs):

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import dataclasses
+import importlib
 import json
 import os
 import re
@@ -22,7 +23,7 @@ import pytest
 import soundfile as sf
 from conversations import ConversationSpec, simulate
 
-from leveller import cli, cluster, worker
+from leveller import cli, cluster, lanes, worker, workers
 from leveller.batch import Standing, batch
 from leveller.errors import InputError, OutputError, SettingsError
 from leveller.fingerprint import made_by
@@ -31,6 +32,7 @@ from leveller.report.season import KEPT_LU, SeasonReport
 from leveller.report.season_text import format_season
 from leveller.season import read_season
 
+batch_module = importlib.import_module("leveller.batch")  # leveller.batch may be the function
 COMMAND = [sys.executable, "-m", "leveller"]
 SPEC = ConversationSpec(seconds=24.0, rate_hz=16_000, people=2, gains_db=(4.0, -3.0))
 LONG_S = 300.0  # of noise: long enough to be at work when it is looked for
@@ -98,6 +100,12 @@ def outcomes(report: SeasonReport) -> dict[str, str]:
     return {episode.episode: episode.outcome for episode in report.episodes}
 
 
+def files_of(folder: Path) -> dict[str, bytes]:
+    """All files of a result; .sources.json, which a batch adds, says when the sources were saved."""
+    return {str(path.relative_to(folder)): path.read_bytes() for path in folder.rglob("*")
+            if path.is_file() and path.name != ".sources.json"}
+
+
 def hidden(folder: Path) -> list[str]:
     """What is left half-written in a folder."""
     return [path.name for path in folder.rglob(".*.part-*")] + [path.name for path in folder.rglob(".*.old-*")]
@@ -152,15 +160,61 @@ def test_one_bad_episode_stops_nothing(first: tuple[SeasonReport, Path, list[Sta
 
 
 def test_the_season_counts_like_the_session_alone(
-    made: Path, first: tuple[SeasonReport, Path, list[Standing]], tmp_path: Path
+    made: Path, first: tuple[SeasonReport, Path, list[Standing]]
 ) -> None:
     """An episode of a batch has the same bytes as one that is processed alone, under the same season.toml."""
-    process(made / "ep 1", out=tmp_path / "alone")
-    for file in ("mix.wav", "automation.csv", "report.json", "stems/seat 1.wav"):
-        assert (tmp_path / "alone" / file).read_bytes() == (first[1] / "ep 1" / file).read_bytes(), file
-    said = json.loads((tmp_path / "alone" / "report.json").read_text())
+    process(made / "ep 1", out=made.parent / "alone" / "ep 1")  # as far from its sources, which its page links to
+    alone, here = (files_of(folder / "ep 1") for folder in (made.parent / "alone", first[1]))
+    assert {"mix.wav", "automation.csv", "report.json", "stems/seat 1.wav"} <= set(alone)
+    assert alone == here
+    said = json.loads(alone["report.json"])
     assert said["delivery"]["name"] == "podcast-stereo"
     assert said["settings"]["expander.range_db"] == 12
+
+
+def test_the_number_of_jobs_changes_no_byte(
+    made: Path, first: tuple[SeasonReport, Path, list[Standing]], tmp_path: Path
+) -> None:
+    """One job, two jobs, or nothing said (so that a lone episode has all processors): every file is the same."""
+    one = made.parent / "one"
+    batch(made, out=one, jobs=1)
+    (tmp_path / "list.csv").write_text(f"session\n{made / 'ep 1'}\n")
+    batch(tmp_path / "list.csv", out=tmp_path / "free", delivery="podcast-stereo", settings={"expander.range_db": 12})
+    for name in ("ep 1", "ep 2", "ep 10"):
+        assert files_of(one / name) == files_of(first[1] / name), name
+    sound = [name for name in files_of(first[1] / "ep 1") if name.endswith((".wav", ".csv"))]
+    assert len(sound) >= 6
+    for name in sound:
+        assert (tmp_path / "free" / "ep 1" / name).read_bytes() == (first[1] / "ep 1" / name).read_bytes(), name
+
+
+@pytest.mark.parametrize(("processors", "episodes", "jobs", "cluster", "threads"), [
+    (8, 20, None, None, 1), (8, 3, None, None, 2), (8, 1, None, None, 8), (2, 2, None, None, 1),
+    (8, 3, 3, None, 1), (8, 1, 1, None, 1), (8, 1, None, "tcp://10.0.0.5:8786", 1),
+])
+def test_jobs_say_how_much_of_the_machine_is_used(
+    processors: int, episodes: int, jobs: int | None, cluster: str | None, threads: int,
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    """A job is one processor; only where nobody said how many do a few episodes share all processors."""
+    for module in (batch_module, workers):
+        monkeypatch.setattr(module, "processor_count", lambda: processors)
+    monkeypatch.setattr(workers, "_free_bytes", lambda: None)
+    assert batch_module._threads_each(episodes, jobs, cluster) == threads
+
+
+def test_a_worker_keeps_to_its_threads(made: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The limit of a task holds while its episode is processed, and no longer."""
+    monkeypatch.setattr(lanes, "processor_count", lambda: 4)
+    seen: list[int] = []
+    monkeypatch.setattr(worker, "_outcome", lambda task, *_: seen.append(lanes.thread_count()))
+    (tmp_path / "desk").mkdir()
+    task = worker.Task(read_season(made).episodes[0], str(tmp_path / "x"), str(tmp_path / "desk"),
+                       tuple(made_by().items()))
+    for threads in (1, 3):
+        worker.work(dataclasses.replace(task, threads=threads))
+    assert seen == [1, 3]
+    assert lanes.thread_count() == 4
 
 
 def test_a_season_report_says_it_all(first: tuple[SeasonReport, Path, list[Standing]]) -> None:

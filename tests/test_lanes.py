@@ -4,10 +4,12 @@ from __future__ import annotations
 
 import threading
 import time
+from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 
-from leveller.lanes import AHEAD, thread_count, walk
+from leveller import lanes
+from leveller.lanes import AHEAD, limited_to, second_thread, thread_count, walk
 
 
 @pytest.mark.parametrize("threads", [1, 2, 4, 16])
@@ -79,6 +81,43 @@ def test_no_blocks_no_rows() -> None:
     assert list(walk(lambda *_: None, lanes=2, blocks=0)) == []
 
 
-def test_threads_worth_having() -> None:
-    """At least one, at most four."""
-    assert 1 <= thread_count() <= 4
+def test_threads_worth_having(monkeypatch: pytest.MonkeyPatch) -> None:
+    """As many as there are processors, at most four, and within a limit; a limit raises nothing and ends."""
+    for processors, threads in ((1, 1), (2, 2), (4, 4), (64, 4)):
+        monkeypatch.setattr(lanes, "processor_count", lambda count=processors: count)
+        assert thread_count() == threads
+        with limited_to(2):
+            assert thread_count() == min(2, threads)
+        with limited_to(99):
+            assert thread_count() == threads
+        assert thread_count() == threads
+
+
+def test_a_limit_is_that_of_its_own_thread(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Two episodes in two threads of one process each keep to their own limit."""
+    monkeypatch.setattr(lanes, "processor_count", lambda: 4)
+    with limited_to(1), ThreadPoolExecutor(1) as other:
+        assert other.submit(thread_count).result() == 4
+        assert thread_count() == 1
+
+
+@pytest.mark.parametrize(("threads", "alone"), [(1, True), (2, False)])
+def test_limited_to_one_nothing_starts_a_thread(
+    threads: int, alone: bool, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """With one thread all work is done by the caller; with two it is not."""
+    monkeypatch.setattr(lanes, "processor_count", lambda: 2)
+    with limited_to(threads), second_thread() as second:
+        workers = {second.submit(threading.get_ident).result()}
+        workers |= {one for row in walk(lambda *_: threading.get_ident(), lanes=3, blocks=5) for one in row}
+    assert (workers == {threading.get_ident()}) is alone
+
+
+@pytest.mark.parametrize("threads", [1, 2])
+def test_an_error_beside_waits_until_it_is_asked_for(threads: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Work of the second thread that fails raises where its result is wanted, on one thread as on two."""
+    monkeypatch.setattr(lanes, "processor_count", lambda: 2)
+    with limited_to(threads), second_thread() as second:
+        future = second.submit(int, "none")
+        with pytest.raises(ValueError, match="none"):
+            future.result()
