@@ -44,6 +44,7 @@ STEADY_SHARE = 0.15  # chance is 0.05
 STEADY_S = 0.0015  # what the commonest lag may move from the first half to the second
 LEAST_ARRIVALS = 40
 AHEAD_DB = 6.0
+CORRECTS, LEFT = "--align corrects it", "so it was not aligned"  # how notes on tracks that do not line up end
 SURE_OF_SIGN = 0.9  # of what a track has in common with others, its sign must explain so much
 
 
@@ -140,6 +141,11 @@ def aligned(session: Session, found: Sequence[Alignment]) -> Session:
         zero_s=zero / session.rate_hz if moved else session.zero_s)
 
 
+def warns_of_alignment(note: str) -> bool:
+    """Whether a session's note tells of a track that does not line up with the others now."""
+    return f". {CORRECTS}" in note or note.endswith(LEFT)
+
+
 def alignment_notes(session: Session, m: Measurements, *, polarity: bool = True) -> tuple[str, ...]:
     """Sentences for a run without correction: tracks that do not line up, and those that are only upside down.
 
@@ -148,7 +154,7 @@ def alignment_notes(session: Session, m: Measurements, *, polarity: bool = True)
     suspects = _suspects(session, m)
     found = find_alignment(session, m, suspects=suspects) if suspects else ()
     turned = _turned(found)
-    notes = tuple(f"{line}. --align corrects it" for a in found if a.offset_s is not None
+    notes = tuple(f"{line}. {CORRECTS}" for a in found if a.offset_s is not None
                   for line in _said(a, session, a.track in turned, done=False))
     return notes + (_polarity_notes(session, m, known=turned) if polarity else ())
 
@@ -168,7 +174,7 @@ def _polarity_notes(session: Session, m: Measurements, *, known: set[str]) -> tu
             continue
         other = session.tracks[int(heights[i].argmin())].name
         notes.append(f"{track.name}: upside down against {other} (correlation {heights[i].min():.2f}), so their sum "
-                     f"partly cancels. --align corrects it, or polarity = {-track.polarity} for it in session.toml")
+                     f"partly cancels. {CORRECTS}, or polarity = {-track.polarity} for it in session.toml")
     return tuple(notes)
 
 
@@ -287,7 +293,7 @@ def _moved(track: Track, found: Alignment, session: Session, start_s: float) -> 
 def _said(found: Alignment, session: Session, turned: bool, *, done: bool = True) -> list[str]:
     """One line on a track that is off or unknown."""
     if found.offset_s is None or found.drift_ppm is None:
-        return [f"{found.track}: no sound in common with the other tracks, so it was not aligned"]
+        return [f"{found.track}: no sound in common with the other tracks, {LEFT}"]
     parts = []
     if misaligned(session, found):
         parts.append(f"{abs(found.offset_s):.3f} s {'late' if found.offset_s >= 0 else 'early'}")

@@ -72,7 +72,7 @@ def batch(
     stems: str | None = None,
     settings: Mapping[str, Any] | None = None,
     accept_short: bool = False,
-    align: bool = False,
+    align: bool | None = None,
     cluster: str | None = None,
     on_season: OnSeason | None = None,
 ) -> SeasonReport:

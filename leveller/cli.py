@@ -51,8 +51,8 @@ Corrections = Annotated[Path | None, typer.Option(
     readable=False, metavar="FILE", help="A corrections.csv, or an edited speech.csv.")]
 AcceptShort = Annotated[bool, typer.Option(
     "--accept-short", help="Take what is there of a file that is shorter than its header says.")]
-Align = Annotated[bool, typer.Option(
-    "--align", help="Line up tracks of separate recorders: start, clock and polarity.")]
+Align = Annotated[bool | None, typer.Option(
+    "--align/--no-align", help="Line up tracks of separate recorders: start, clock and polarity.", show_default=False)]
 Quiet = Annotated[bool, typer.Option("--quiet", "-q", help="Print nothing but errors and a delivery that is not met.")]
 Debug = Annotated[bool, typer.Option("--debug", help="Show where in the program an error arose.")]
 
@@ -77,7 +77,7 @@ def _root(
 def process(
     sources: Sources, out: Out = None, replace: Replace = False, delivery: DeliveryName = None,
     stems: Stems = "before-limiter", assignments: Assignments = None, corrections: Corrections = None,
-    accept_short: AcceptShort = False, align: Align = False, quiet: Quiet = False, debug: Debug = False,
+    accept_short: AcceptShort = False, align: Align = None, quiet: Quiet = False, debug: Debug = False,
 ) -> None:
     """Level a conversation: write stems, mix, automation and reports."""
     with _reported(debug):
@@ -100,7 +100,7 @@ def render(
         show_default=False)],
     out: Out = None, replace: Replace = False, delivery: DeliveryName = None, stems: Stems = "before-limiter",
     assignments: Assignments = None, corrections: Corrections = None, accept_short: AcceptShort = False,
-    align: Align = False, quiet: Quiet = False, debug: Debug = False,
+    align: Align = None, quiet: Quiet = False, debug: Debug = False,
 ) -> None:
     """Render a session again, from edited automation; the delivery is met again."""
     with _reported(debug):
@@ -165,7 +165,7 @@ def inspect(
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
     picture: Annotated[Path | None, typer.Option(
         metavar="FILE", help="Draw the table and what each microphone hears, as SVG.", show_default=False)] = None,
-    accept_short: AcceptShort = False, align: Align = False, quiet: Quiet = False, debug: Debug = False,
+    accept_short: AcceptShort = False, align: Align = None, quiet: Quiet = False, debug: Debug = False,
 ) -> None:
     """Look at a session before anything is rendered: levels, faults, bleed, room tone, advice."""
     with _reported(debug):
@@ -197,7 +197,7 @@ def batch(
     delivery: DeliveryName = None,
     stems: Annotated[str | None, typer.Option(
         metavar="LEVEL", help="before-limiter (default) or limited, for all episodes.", show_default=False)] = None,
-    assignments: Assignments = None, accept_short: AcceptShort = False, align: Align = False,
+    assignments: Assignments = None, accept_short: AcceptShort = False, align: Align = None,
     cluster: Annotated[str | None, typer.Option(
         metavar="ADDRESS", help="Hand the episodes to a Dask scheduler, such as tcp://10.0.0.5:8786.",
         show_default=False)] = None,

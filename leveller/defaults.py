@@ -1,7 +1,7 @@
 """A show's defaults: a season.toml beside its episodes, which every session.toml may override.
 
 season.toml holds what session.toml may say of a whole show (`delivery`, `target_lufs`, `ceiling_dbtp`, `sample_rate`,
-`mix_channels`, a table per stage), and may name its episodes (`season`). It counts for `process`, `render` and
+`mix_channels`, `align`, a table per stage), and may name its episodes (`season`). It counts for `process`, `render` and
 `settings` as it does for `batch`: a session folder looks for it in the folder above, a file in its own folder, then
 above. From weakest to strongest: the built-in default, season.toml, session.toml, an episode's row, `--set`.
 
@@ -20,10 +20,10 @@ from leveller.sessionfile import SESSION_BOUNDS, SessionFile, read_session_file
 from leveller.settings import STAGES, Settings, delivery_named
 
 SEASON_FILE = "season.toml"
-DEFAULT_KEYS = ("delivery", *SESSION_BOUNDS, *STAGES)
+DEFAULT_KEYS = ("delivery", *SESSION_BOUNDS, "align", *STAGES)
 SEASON_KEYS = ("title", *DEFAULT_KEYS, "episode")
 _OF_DELIVERY = ("delivery", "target_lufs", "ceiling_dbtp")
-_OF_SESSION = ("sample_rate", "mix_channels")
+_OF_SESSION = ("sample_rate", "mix_channels", "align")
 
 
 def season_file_of(sources: Sequence[Path]) -> Path | None:

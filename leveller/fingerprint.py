@@ -46,7 +46,7 @@ def fingerprint(
     settings: Mapping[str, Any] | None = None,
     corrections: Path | None = None,
     accept_short: bool = False,
-    align: bool = False,
+    align: bool | None = None,
     season: Path | None = None,
 ) -> str:
     """A digest of all that a result depends on but the sources' contents; parameters as of `pipeline.process`.
@@ -63,7 +63,7 @@ def fingerprint(
         made_by(), said.title or title, said.sample_rate, said.mix_channels, said.skips, said.corrections, said.tracks,
         (chosen.name, chosen.target_lufs, chosen.ceiling_dbtp, chosen.channels), stems, accept_short,
         [row[:2] for row in values.rows()], [file.path.name for file in files],
-        "" if corrections is None else sha256(Path(corrections)), align)
+        "" if corrections is None else sha256(Path(corrections)), bool(said.align) if align is None else align)
     return hashlib.sha256(json.dumps(parts, default=dataclasses.asdict).encode()).hexdigest()
 
 

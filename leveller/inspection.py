@@ -32,7 +32,7 @@ from leveller.measure.arrival import LAG_S
 from leveller.measure.hum import Hum, read_hum
 from leveller.measure.loudness import OFFSET_LU, power_to_lufs
 from leveller.measure.polarity import heights_of, signs_of
-from leveller.plan.levels import AUDIBLE_DB, k_power, level_lufs, own_speech
+from leveller.plan.levels import k_power, level_lufs, own_power, own_speech, spoken_alone
 from leveller.quiet import floor_lufs, gaps, pauses, quiet_seconds, room_tone, runs
 from leveller.session import Session, open_session
 from leveller.timeline import check_asked, retimed
@@ -58,12 +58,12 @@ class Heard:
 
 
 def inspect(
-    sources: Sequence[Path | str], *, align: bool = False, on_progress: OnProgress = no_progress, **opening: Any
+    sources: Sequence[Path | str], *, align: bool | None = None, on_progress: OnProgress = no_progress, **opening: Any
 ) -> Inspection:
     """Open, measure, attribute and inspect a session; nothing is written.
 
-    With `align` it is looked at as `process --align` would take it, and what was found of every track's start, clock
-    and polarity comes along.
+    With `align` (by default as session.toml or season.toml say) it is looked at as `process --align` would take it, and
+    what was found of every track's start, clock and polarity comes along.
 
     Parameters
     ----------
@@ -74,7 +74,8 @@ def inspect(
     ------
     InputError, SettingsError
     """
-    session = open_session(sources, **opening)
+    session = open_session(sources, align=align, **opening)
+    align = session.align
     check_asked(session, (), align=align)
     measurements = measure(session, on_progress=on_progress)
     found: tuple[TrackAlignment, ...] = ()
@@ -119,9 +120,9 @@ def inspect_session(
     """
     tone = steady_tone(m.levels)
     quiet = pauses(activity, tone)
-    counted = own_speech(activity)
+    counted = spoken_alone(activity)
     hums = heard.hum if heard else (None,) * len(session.tracks)
-    tracks = tuple(_track(session, m, activity, i, quiet, counted, hums[i]) for i in range(len(session.tracks)))
+    tracks = tuple(_track(session, m, activity, i, quiet, hums[i]) for i in range(len(session.tracks)))
     coupling = _coupling(activity)
     alignment = heard.alignment if heard else _from_arrivals(m, counted)
     found = Inspection(
@@ -134,7 +135,7 @@ def inspect_session(
 
 
 def _track(
-    session: Session, m: Measurements, activity: Activity, i: int, quiet: Bools, counted: Bools, hum: Hum | None
+    session: Session, m: Measurements, activity: Activity, i: int, quiet: Bools, hum: Hum | None
 ) -> TrackFindings:
     """One track by itself."""
     track, peak = session.tracks[i], m.peaks[i]
@@ -142,10 +143,10 @@ def _track(
               (track.offset_frames + track.frames) * HOPS_PER_S // session.rate_hz)
     dropouts, muted = gaps(m, i, inside)
     floor = floor_lufs(m, i, quiet)
-    own = activity.own[:, i] & activity.programme & (activity.audible_db[:, i] > AUDIBLE_DB)
+    own = own_speech(activity)[:, i]
     return TrackFindings(
         name=track.name, role=track.role, speaking_s=np.count_nonzero(own) * HOP_S,
-        own_share=float(own.mean()) if len(own) else 0.0, voice_lufs=level_lufs(k_power(m, i), counted[:, i]),
+        own_share=float(own.mean()) if len(own) else 0.0, voice_lufs=level_lufs(own_power(m, activity, i), own),
         floor_lufs=floor, peak_dbfs=peak.sample_peak_dbfs, peak_s=peak.sample_peak_s, clipped=peak.clipped,
         dc_offset=max(peak.dc_offset, key=abs, default=0.0), hum=hum, dropouts=dropouts, muted=muted,
         silent=floor is None, repaired_frames=m.repaired_frames[i], room_tone=room_tone(m, i, quiet, floor))

@@ -80,7 +80,7 @@ def process(
     corrections: Path | None = None,
     accept_short: bool = False,
     season: Path | None = None,
-    align: bool = False,
+    align: bool | None = None,
     on_progress: OnProgress = no_progress,
 ) -> Result:
     """Level a conversation: write stems, mix, automation and reports.
@@ -104,8 +104,9 @@ def process(
         Take what is there of a file that is shorter than its header says.
     season : path, optional
         The season.toml whose defaults count; by default the one beside the session.
-    align : bool
-        Line up tracks that start or run differently, or are upside down; without it they are only warned of.
+    align : bool, optional
+        Line up tracks that start or run differently, or are upside down; without it they are only warned of. By
+        default what session.toml or season.toml say.
     on_progress : callable (stage, done, total), optional
 
     Returns
@@ -118,7 +119,7 @@ def process(
         With one line that says what, where and the way out; nothing is written then.
     """
     session = _opened(sources, delivery, stems, settings, accept_short, align, corrections, season)
-    mark = _mark(sources, delivery, stems, settings, accept_short, align, corrections, season)
+    mark, align = _mark(sources, delivery, stems, settings, accept_short, align, corrections, season), session.align
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
     with folder, second_thread() as second:
@@ -144,7 +145,7 @@ def render_again(
     settings: Mapping[str, Any] | None = None,
     corrections: Path | None = None,
     accept_short: bool = False,
-    align: bool = False,
+    align: bool | None = None,
     on_progress: OnProgress = no_progress,
 ) -> Result:
     """Render a session from an automation file, edited or not; the delivery is met again.
@@ -173,6 +174,7 @@ def render_again(
     """
     automation = Path(automation)
     session = _opened(sources, delivery, stems, settings, accept_short, align, corrections, tables=[automation])
+    align = session.align
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
                           sources=source_paths(session))
     homes = dict.fromkeys((automation.parent, folder.path, _out(None, session)))
@@ -247,7 +249,8 @@ def finish(
 
 def _opened(
     sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
-    accept_short: bool, align: bool, corrections: Path | None, season: Path | None = None, tables: Sequence[Path] = (),
+    accept_short: bool, align: bool | None, corrections: Path | None, season: Path | None = None,
+    tables: Sequence[Path] = (),
 ) -> Session:
     """The session, with its options checked."""
     if stems not in LEVELS:
@@ -255,9 +258,10 @@ def _opened(
     paths = _listed(sources)
     table = corrections is not None and is_speech_table(Path(corrections))
     session = open_session(paths, delivery=delivery, assignments=settings, accept_short=accept_short,
-                           corrections=None if table else corrections, season=season)
+                           corrections=None if table else corrections, season=season, align=align)
     check_corrections(session)
-    check_asked(session, [*tables, *([Path(corrections)] if corrections is not None and table else [])], align=align)
+    check_asked(session, [*tables, *([Path(corrections)] if corrections is not None and table else [])],
+                align=session.align)
     return session
 
 
@@ -291,7 +295,7 @@ def _listed(sources: Sequence[Path | str] | Path | str) -> list[Path | str]:
 
 def _mark(
     sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
-    accept_short: bool, align: bool, corrections: Path | None, season: Path | None = None,
+    accept_short: bool, align: bool | None, corrections: Path | None, season: Path | None = None,
 ) -> str:
     """The fingerprint of the run, for report.json."""
     return fingerprint(_listed(sources), delivery=delivery, stems=stems, settings=settings,

@@ -44,7 +44,7 @@ class Episode:
     stems: str | None = None
     corrections: str | None = None
     accept_short: bool = False
-    align: bool = False
+    align: bool | None = None  # None: as its session.toml, or the show's season.toml, say
     settings: tuple[tuple[str, Any], ...] = ()
     season: str | None = None  # the season.toml that counts; None: the one beside the session
 
@@ -233,8 +233,8 @@ def _episode(said: Mapping[str, Any], base: Path, season: str | None, where: str
         name=name or safe_name(_name_of(base, sources)),
         sources=tuple(os.path.abspath(base / source) for source in sources), delivery=said.get("delivery"),
         stems=said.get("stems"), corrections=None if corrections is None else os.path.abspath(base / corrections),
-        accept_short=_switch(said, "accept_short", where), align=_switch(said, "align", where), settings=settings,
-        season=season,
+        accept_short=_switch(said, "accept_short", where), settings=settings, season=season,
+        align=_switch(said, "align", where) if "align" in said else None,
     ), name is not None
 
 

@@ -97,6 +97,7 @@ class Session:
     settings: Settings
     notes: tuple[str, ...]  # sentences for the user: padded, split, joined, delayed, resampled, taken short
     time_reference: int | None = None  # of session zero, frames since midnight at the session's rate
+    align: bool = False  # tracks are to be lined up, as session.toml, season.toml or an option say
     zero_s: float | None = None  # where the zero of the session as opened lies, once `align` has moved tracks
     origination: tuple[str, str] = ("", "")  # date and time that the recorder gave the first file of session zero
 
@@ -109,6 +110,7 @@ def open_session(
     accept_short: bool = False,
     corrections: Path | None = None,
     season: Path | None = None,
+    align: bool | None = None,
 ) -> Session:
     """Open and check a session.
 
@@ -126,6 +128,8 @@ def open_session(
         a corrections.csv, after those of session.toml
     season : Path, optional
         the season.toml whose defaults count; by default the one beside the session (`defaults`)
+    align : bool, optional
+        whether tracks are to be lined up; stronger than session.toml
 
     Raises
     ------
@@ -148,7 +152,7 @@ def open_session(
         skips=said.skips, corrections=_corrections(said, corrections, tracks, set_aside, frames / rate_hz),
         delivery=chosen, mix_channels=mix_channels, settings=settings, notes=tuple(notes),
         time_reference=session_reference([(d.take, _offset_frames(d, rate_hz)) for d in drafts], rate_hz),
-        origination=_origination(drafts))
+        origination=_origination(drafts), align=bool(said.align) if align is None else align)
 
 
 def located(

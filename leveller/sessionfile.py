@@ -1,7 +1,7 @@
 """Reads session.toml and corrections.csv into plain records; knows the keys and their bounds, opens no audio.
 
 session.toml holds, all optional but a track's `file`: `title`, `delivery`, `target_lufs`, `ceiling_dbtp`,
-`sample_rate`, `mix_channels`; tables `[[track]]`, `[[skip]]`, `[[correction]]`; and a table per stage for its settings.
+`sample_rate`, `mix_channels`, `align`; tables `[[track]]`, `[[skip]]`, `[[correction]]`; and a table per stage.
 corrections.csv has the columns of `[[correction]]`; semicolons, tabs, decimal commas, a byte-order mark and any line
 ends are understood. An unknown key is refused, with the nearest known one as a hint; so is a value out of bounds.
 Times are in seconds of session time, levels in dB.
@@ -44,7 +44,7 @@ TRACK_BOUNDS = {
 GAIN_BOUNDS = (-120.0, 40.0, "dB")
 TIME_BOUNDS = (0.0, LONGEST_S, "s")
 
-SESSION_KEYS = ("title", "delivery", *SESSION_BOUNDS, "track", "skip", "correction", *STAGES)
+SESSION_KEYS = ("title", "delivery", *SESSION_BOUNDS, "align", "track", "skip", "correction", *STAGES)
 TRACK_KEYS = ("file", "channels", "name", "role", "polarity", *TRACK_BOUNDS)
 SKIP_KEYS = ("from_s", "to_s", "why", "timeline")
 CORRECTION_KEYS = ("track", "from_s", "to_s", "decide", "gain_db", "timeline")
@@ -101,6 +101,7 @@ class SessionFile:
     ceiling_dbtp: float | None = None
     sample_rate: int | None = None
     mix_channels: int | None = None
+    align: bool | None = None
     tracks: tuple[TrackEntry, ...] = ()
     skips: tuple[Skip, ...] = ()
     corrections: tuple[Correction, ...] = ()
@@ -138,7 +139,7 @@ def read_session_file(path: Path, *, known: tuple[str, ...] = SESSION_KEYS) -> S
     return SessionFile(
         where=where, title=_string(data, "title", where), delivery=_string(data, "delivery", where),
         target_lufs=numbers["target_lufs"], ceiling_dbtp=numbers["ceiling_dbtp"],
-        sample_rate=rate, mix_channels=channels,
+        sample_rate=rate, mix_channels=channels, align=_switch(data, "align", where),
         tracks=_each(data, "track", _track_entry, where), skips=_each(data, "skip", _skip, where),
         corrections=_each(data, "correction", _correction, where), settings=settings)
 
@@ -199,6 +200,14 @@ def _table(value: Any, where: str) -> dict[str, Any]:
     """A TOML table, or SettingsError."""
     if not isinstance(value, dict):
         raise SettingsError(f"{where}: expected a table of keys, found {value!r}")
+    return value
+
+
+def _switch(data: Mapping[str, Any], key: str, where: str) -> bool | None:
+    """true or false, None where nothing is said."""
+    value = data.get(key)
+    if value is not None and not isinstance(value, bool):
+        raise SettingsError(f"{where}: {key} = {value!r}: expected true or false")
     return value
 
 

@@ -45,7 +45,7 @@ class Task:
     stems: str | None = None
     settings: tuple[tuple[str, Any], ...] = ()
     accept_short: bool = False
-    align: bool = False
+    align: bool | None = None
     again: bool = False
     threads: int = 1  # as many processors as it may use
 
@@ -58,7 +58,7 @@ class Task:
             "settings": {**dict(episode.settings), **dict(self.settings)},
             "corrections": None if episode.corrections is None else Path(episode.corrections),
             "accept_short": self.accept_short or episode.accept_short,
-            "align": self.align or episode.align,
+            "align": episode.align if self.align is None else self.align,
             "season": None if episode.season is None else Path(episode.season)}
 
 

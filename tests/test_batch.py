@@ -414,7 +414,10 @@ def test_a_list_gives_each_episode_its_settings(season: Path, tmp_path: Path, in
 def test_align_is_for_all_or_for_one_episode(
     tmp_path: Path, in_process: None, capsys: pytest.CaptureFixture[str]
 ) -> None:
-    """--align lines up all episodes, `align` in a list its own; where it changes, the episode is processed again."""
+    """--align lines up all, `align` in season.toml too, in a list its own; a change processes the episode again.
+
+    An episode that does not line up says so in the season's report.
+    """
     mics = simulate(ConversationSpec(seed=5, seconds=60, rate_hz=16_000, room="desk", people=2)).mics
     for name in ("ep 1", "ep 2"):
         (tmp_path / "season" / name).mkdir(parents=True)
@@ -422,7 +425,8 @@ def test_align_is_for_all_or_for_one_episode(
             sf.write(tmp_path / "season" / name / f"{track}.wav", samples, 16_000, subtype="PCM_24")
     listed = tmp_path / "season" / "list.csv"
 
-    def said(*words: str, align: tuple[str, str] = ("", "")) -> list[tuple[str, bool]]:
+    def said(*words: str, align: tuple[str, str] = ("", ""), show: str = "") -> list[tuple[str, bool]]:
+        (tmp_path / "season" / "season.toml").write_text(show)
         listed.write_text("session,align\n" + "".join(f"ep {n},{word}\n" for n, word in enumerate(align, 1)))
         with pytest.raises(SystemExit) as left:
             cli.main(["batch", str(listed), "--out", str(tmp_path / "out"), *words])
@@ -431,6 +435,9 @@ def test_align_is_for_all_or_for_one_episode(
         report = json.loads((tmp_path / "out" / "season.json").read_text())
         lines = [json.loads((tmp_path / "out" / e["episode"] / "report.json").read_text())["timeline"]
                  for e in report["episodes"]]
+        for episode, line in zip(report["episodes"], lines, strict=True):
+            warned = [": 2.000 s " in remark and "--align corrects it" in remark for remark in episode["remarks"]]
+            assert warned == ([True] if line == "opened" else []), episode["remarks"]
         return [(e["outcome"], line != "opened") for e, line in zip(report["episodes"], lines, strict=True)]
 
     assert said() == [("finished", False)] * 2
@@ -438,6 +445,9 @@ def test_align_is_for_all_or_for_one_episode(
     assert said("--align") == [("unchanged", True), ("finished", True)]
     assert said("--align") == [("unchanged", True)] * 2
     assert said(align=("", "yes")) == [("finished", False), ("unchanged", True)]
+    assert said(show="align = true") == [("finished", True), ("unchanged", True)]
+    assert said(align=("no", ""), show="align = true") == [("finished", False), ("unchanged", True)]
+    assert said("--no-align", show="align = true") == [("unchanged", False), ("finished", False)]
 
 
 @pytest.mark.long

@@ -10,6 +10,7 @@ import pytest
 import soundfile as sf
 
 from leveller.errors import AutomationError, InputError, LevellerError, SettingsError
+from leveller.fingerprint import fingerprint
 from leveller.report.origins import delivery_in_force, settings_in_force
 from leveller.season import read_season
 from leveller.session import open_session
@@ -98,13 +99,32 @@ def test_a_list_counts_from_where_it_lies(tmp_path: Path) -> None:
     assert {episode.season for episode in season.episodes} == {str(file)}
     assert season.episodes[2].settings == (("ride.enabled", False),)
     assert season.episodes[2].accept_short
-    assert [episode.align for episode in season.episodes] == [False, False, True]
+    assert [episode.align for episode in season.episodes] == [None, None, True]
     file.write_text('[[episode]]\nsession = 3\n')
     with pytest.raises(SettingsError, match=r"spring\.toml: \[\[episode\]\] 1: needs session"):
         read_season(file)
     file.write_text("title = 'x'\n")
     with pytest.raises(SettingsError, match=r"spring\.toml: names no episodes"):
         read_season(file)
+
+
+@pytest.mark.parametrize(("show", "own", "option", "lined_up"), [
+    ("", "", None, False), ("align = true", "", None, True), ("align = true", "align = false", None, False),
+    ("", "align = true", None, True), ("align = true", "", False, False), ("align = false", "", True, True),
+])
+def test_a_show_says_whether_tracks_are_lined_up(
+    tmp_path: Path, show: str, own: str, option: bool | None, lined_up: bool
+) -> None:
+    """season.toml, over it session.toml, over it the option; and the fingerprint knows what it came to."""
+    sound(tmp_path / "ep 1" / "a.wav")
+    (tmp_path / "season.toml").write_text(show)
+    (tmp_path / "ep 1" / "session.toml").write_text(own)
+    assert open_session([tmp_path / "ep 1"], align=option).align is lined_up
+    assert fingerprint([tmp_path / "ep 1"], align=option) == fingerprint([tmp_path / "ep 1"], align=lined_up)
+    assert fingerprint([tmp_path / "ep 1"], align=option) != fingerprint([tmp_path / "ep 1"], align=not lined_up)
+    (tmp_path / "season.toml").write_text("align = 1\n")
+    with pytest.raises(SettingsError, match=r"season\.toml: align = 1: expected true or false"):
+        open_session([tmp_path / "ep 1"])
 
 
 def test_a_session_overrides_its_season(tmp_path: Path) -> None:

@@ -21,7 +21,7 @@ from leveller.measure.levels import level_to_db
 from leveller.plan.compressor import compressor_nodes_db
 from leveller.plan.corrections import corrected_curves, overruled, spliced
 from leveller.plan.expander import auto_range_db, expander_nodes_db, opened
-from leveller.plan.levels import k_power, level_lufs, own_speech
+from leveller.plan.levels import level_lufs, own_power, own_speech, spoken_alone
 from leveller.plan.ride import ride_nodes_db
 from leveller.plan.trim import trim_nodes_db
 from leveller.session import Session
@@ -60,10 +60,10 @@ class GainPlan:
 
 def make_plan(m: Measurements, activity: Activity, session: Session) -> GainPlan:
     """Decide the gain of every track."""
-    counted = own_speech(activity)
+    counted, alone = own_speech(activity), spoken_alone(activity)
     voices = [i for i, track in enumerate(session.tracks) if track.role == "voice"]
     trims = {
-        i: trim_nodes_db(k_power(m, i), counted[:, i], [step for step in activity.steps if step.track == i],
+        i: trim_nodes_db(own_power(m, activity, i), counted[:, i], [step for step in activity.steps if step.track == i],
                          settings=session.settings.trim)
         for i in voices
     }
@@ -75,7 +75,8 @@ def make_plan(m: Measurements, activity: Activity, session: Session) -> GainPlan
     curves = []
     for i, track in enumerate(session.tracks):
         if i in trims:
-            parts = _voice_parts(m, activity, session, i, counted[:, i], open_[:, i], trims[i], ranges[i])
+            heard = (counted[:, i], alone[:, i], open_[:, i])
+            parts = _voice_parts(m, activity, session, i, heard, trims[i], ranges[i])
         else:
             parts = np.zeros((m.hops + 1, len(PARTS)), np.float32)
         parts[:, 0] += track.trim_db
@@ -97,19 +98,22 @@ def _ranges(activity: Activity, session: Session, voices: list[int], trims: dict
 
 
 def _voice_parts(
-    m: Measurements, activity: Activity, session: Session, i: int, counted: Bools, open_: Bools, trim: Nodes,
+    m: Measurements, activity: Activity, session: Session, i: int, heard: tuple[Bools, Bools, Bools], trim: Nodes,
     range_db: float,
 ) -> Nodes:
-    """All parts of one voice, shape=(hops + 1, parts); the trim makes up for what ride and compressor take."""
-    settings = session.settings
+    """All parts of one voice, shape=(hops + 1, parts); the trim makes up for what ride and compressor take.
+
+    `heard`: own speech, that of it which is spoken alone, and where the microphone is open.
+    """
+    settings, (counted, alone, open_) = session.settings, heard
     expander = expander_nodes_db(open_, activity.own_to_bleed_db[:, i], range_db=range_db, settings=settings.expander)
-    power = k_power(m, i)
+    power = own_power(m, activity, i)
     level = level_lufs(power * _per_hop_gain(trim), counted)
     if level is None:
         return np.stack([trim, expander, np.zeros_like(trim), np.zeros_like(trim)], axis=1)
     speech_db = level_to_db(m.voice_levels[:, i]) + _middles(trim)
-    usual_db = 10 * np.log10(np.mean(10 ** (speech_db[counted] / 10)))
-    ride = ride_nodes_db(speech_db - usual_db, counted, open_ & ~activity.own[:, i], settings=settings.ride)
+    usual_db = 10 * np.log10(np.mean(10 ** (speech_db[alone] / 10)))
+    ride = ride_nodes_db(speech_db - usual_db, alone, open_ & ~activity.own[:, i], settings=settings.ride)
     compressor = compressor_nodes_db(
         speech_db - usual_db + _middles(ride), activity.own[:, i], settings=settings.compressor)
     after = level_lufs(power * _per_hop_gain(trim + ride + compressor), counted)

@@ -1,4 +1,10 @@
-"""Own speech and its K-weighted level, as every levelling step hears it: bleed, pauses and noise are left out."""
+"""Own speech and its K-weighted level, as every levelling step hears it: bleed, pauses and noise are left out.
+
+A voice's level counts all of its own speech, also what is said over others: somebody who says little says much of it
+there, and often otherwise than alone. What the others' bleed adds to the microphone then is taken off by the bleed that
+is predicted (`Activity.own_to_bleed_db`), so that it makes nobody louder. The ride, which follows the voice from hop to
+hop, listens only while nobody else speaks, as long as there is enough of that.
+"""
 
 from __future__ import annotations
 
@@ -20,9 +26,14 @@ Grid = npt.NDArray[np.float32]
 
 
 def own_speech(activity: Activity) -> Bools:
-    """Hops of own, clearly audible speech, shape=(hops, tracks); while nobody else speaks, if there are enough."""
+    """Hops of own, clearly audible speech, shape=(hops, tracks)."""
+    return np.asarray(activity.own & (activity.audible_db > AUDIBLE_DB) & activity.programme[:, None])
+
+
+def spoken_alone(activity: Activity) -> Bools:
+    """Those while nobody else speaks, if there are enough; else all of them."""
     alone = activity.own.sum(axis=1) == 1
-    counted = activity.own & (activity.audible_db > AUDIBLE_DB) & activity.programme[:, None]
+    counted = own_speech(activity)
     for track in range(counted.shape[1]):
         if np.count_nonzero(counted[:, track] & alone) >= ENOUGH_HOPS:
             counted[:, track] &= alone
@@ -32,6 +43,15 @@ def own_speech(activity: Activity) -> Bools:
 def k_power(m: Measurements, track: int) -> Grid:
     """K-weighted power of one track per hop, shape=(hops,)."""
     return np.asarray(10 ** (level_to_db(m.k_levels[:, track]) / 10), np.float32)
+
+
+def own_power(m: Measurements, activity: Activity, track: int) -> Grid:
+    """K-weighted power of one voice per hop, shape=(hops,): less the bleed predicted there, while others speak too."""
+    power = k_power(m, track)
+    over = activity.own[:, track] & (activity.own.sum(axis=1) > 1)
+    bleed = np.minimum(10 ** (-activity.own_to_bleed_db[over, track] / 10), 1)
+    power[over] *= 1 - bleed
+    return power
 
 
 def level_lufs(power: npt.NDArray[np.floating], counted: Bools) -> float | None:

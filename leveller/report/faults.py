@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from leveller.align import warns_of_alignment
 from leveller.measure.peaks import PeakReading
 from leveller.plan import PARTS, TrackGain
 from leveller.plan.levels import k_power, level_lufs
@@ -24,8 +25,9 @@ if TYPE_CHECKING:
     from leveller.pipeline import Result
     from leveller.report.records import VoiceFigures
 
-KINDS = ("set aside", "note", "skip", "tone", "silent", "nobody", "clipped", "over full scale", "DC", "repaired",
-         "knob", "bed")
+NOT_LINED_UP = "not lined up"
+KINDS = ("set aside", "note", NOT_LINED_UP, "skip", "tone", "silent", "nobody", "clipped", "over full scale", "DC",
+         "repaired", "knob", "bed")
 DC_DBFS = -50.0  # a choice of ours: an offset over this costs headroom and clicks at cuts
 SILENT_DBFS = -90.0  # a choice of ours: a track that never gets over the last bit of 16 carries nothing
 HEAVY_LIMITING_DB = 6.0  # common practice, no source: more is heard on speech
@@ -52,7 +54,7 @@ def _session_faults(result: Result) -> Iterator[Fault]:
         yield Fault("set aside", aside.name, f"{aside.name}: set aside and not processed, {aside.why}", ())
     for note in session.notes:
         name = next((track.name for track in session.tracks if note.startswith(f"{track.name}: ")), "")
-        yield Fault("note", name, note, ())
+        yield Fault(NOT_LINED_UP if warns_of_alignment(note) else "note", name, note, ())
     marked = np.zeros(result.measurements.hops, np.bool_)
     for skip in session.skips:
         marked[seconds_to_hops(skip.from_s) : seconds_to_hops(skip.to_s)] = True

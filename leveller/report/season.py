@@ -19,6 +19,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from leveller.report.faults import NOT_LINED_UP
 from leveller.report.quantities import quantity
 
 FINISHED, UNCHANGED, EDITED, FAILED, WAITING = "finished", "unchanged", "edited", "failed", "not reached"
@@ -33,6 +34,7 @@ RECORDED_LOW_DB = 6.0  # source level under the rest: half the amplitude, so the
 OFF_LU = 2.0  # level after make-up from the rest of the voices
 KEPT_LU = 0.5  # a voice's level over the season; a step of 0.5 to 0.9 dB is just noticed (Jesteadt 1977)
 LEAST_REST = 2
+WIDER = "LU wider than the rest"  # how that remark ends
 LEAST_SPEECH_S = 3.0  # a voice heard for less has no level worth a mark
 
 
@@ -64,6 +66,7 @@ class EpisodeFigures:
     range_lu: float | None = quantity("range", "LU", 1, "loudness range, EBU Tech 3342")
     true_peak_dbtp: float | None = quantity("true peak", "dBTP", 2, "ITU-R BS.1770-5, Annex 2")
     listen_s: float | None = quantity("to listen to", "s", 1, "length of all places of listen.csv together")
+    not_lined_up: tuple[str, ...] = ()  # a sentence for each track that is off against the others, or upside down
 
 
 @dataclass(frozen=True)
@@ -140,11 +143,13 @@ def episode_figures(folder: Path, said: Mapping[str, Any]) -> EpisodeFigures:
         delivery=delivery["name"], met=delivery["met"], why_not=delivery["why_not"],
         voices=tuple(_voice(voice, delivery["target_lufs"], asked) for voice in said["voices"]), listen_places=places,
         target_lufs=delivery["target_lufs"], length_s=mix["length_s"], integrated_lufs=mix["integrated_lufs"],
-        range_lu=mix["range_lu"], true_peak_dbtp=mix["true_peak_dbtp"], listen_s=listen_s)
+        range_lu=mix["range_lu"], true_peak_dbtp=mix["true_peak_dbtp"], listen_s=listen_s,
+        not_lined_up=tuple(fault["sentence"] for fault in said.get("faults", ()) if fault["kind"] == NOT_LINED_UP))
 
 
 def marked(outcomes: Sequence[Outcome]) -> tuple[Outcome, ...]:
     """The outcomes with what stands out said."""
+    middles = [None if o.figures is None else _middle(o.figures.voices) for o in outcomes]
     ranges = [None if o.figures is None else o.figures.range_lu for o in outcomes]
     everyone = [(i, k, voice) for i, o in enumerate(outcomes) if o.figures is not None
                 for k, voice in enumerate(o.figures.voices)]
@@ -157,7 +162,9 @@ def marked(outcomes: Sequence[Outcome]) -> tuple[Outcome, ...]:
             voices = tuple(dataclasses.replace(voice, remarks=said[i, k])
                            for k, voice in enumerate(outcome.figures.voices))
             outcome = dataclasses.replace(
-                outcome, figures=dataclasses.replace(outcome.figures, voices=voices), remarks=_wider(ranges, i))
+                outcome, figures=dataclasses.replace(outcome.figures, voices=voices),
+                remarks=(*outcome.figures.not_lined_up, *_wider(ranges, i),
+                         *_all_off(middles, i, outcome.figures.target_lufs)))
         out.append(outcome)
     return tuple(out)
 
@@ -217,7 +224,22 @@ def _wider(ranges: Sequence[float | None], i: int) -> tuple[str, ...]:
     rest, value = _rest(ranges, i), ranges[i]
     if rest is None or value is None or round(value - rest, 2) < WIDER_LU:
         return ()
-    return (f"range {value - rest:.1f} LU wider than the rest",)
+    return (f"range {value - rest:.1f} {WIDER}",)
+
+
+def _middle(voices: Sequence[SeasonVoice]) -> float | None:
+    """Median level of an episode's voices against the target, None where none speaks long enough."""
+    levels = [level for voice in voices if (level := _worth(voice, voice.against_lu)) is not None]
+    return statistics.median(levels) if levels else None
+
+
+def _all_off(middles: Sequence[float | None], i: int, target_lufs: float | None) -> tuple[str, ...]:
+    """Whether an episode's voices lie off the season's level together, which its delivery alone can do."""
+    rest, value = _rest(middles, i), middles[i]
+    if rest is None or value is None or target_lufs is None or round(abs(value - rest), 2) < KEPT_LU:
+        return ()
+    return (f"all voices {abs(value - rest):.1f} LU {'louder' if value > rest else 'softer'} than in the rest, at which "
+            f"its mix meets the target; target_lufs = {target_lufs + rest - value:.1f} would keep their level instead",)
 
 
 def _recorded_low(levels: Sequence[float | None], i: int) -> tuple[str, ...]:

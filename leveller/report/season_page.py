@@ -19,7 +19,7 @@ from pathlib import Path
 from urllib.parse import quote
 
 from leveller.report.quantities import shown
-from leveller.report.season import FAILED, KEPT_LU, WAITING, KeptLevel, Outcome, SeasonReport, SeasonVoice
+from leveller.report.season import FAILED, KEPT_LU, WAITING, WIDER, KeptLevel, Outcome, SeasonReport, SeasonVoice
 from leveller.report.text import visible
 
 COLUMNS = ("Episode", "Outcome", "Delivery", "Length", "LUFS", "Range", "dBTP", "To listen", "Took", "Out of line")
@@ -111,7 +111,7 @@ def _episode_row(episode: Outcome) -> str:
     asked = _safe(figures.delivery)
     delivery = f"{asked} met" if figures.met else f'<span class="off">{asked} NOT met</span>'
     spread = shown(figures, "range_lu")
-    if episode.remarks:
+    if any(remark.endswith(WIDER) for remark in episode.remarks):
         spread = f'<span class="off">{spread}</span>'
     cells = (shown(figures, "length_s"), shown(figures, "integrated_lufs"), spread, shown(figures, "true_peak_dbtp"),
              shown(figures, "listen_s"), shown(episode, "took_s"))

@@ -1,7 +1,7 @@
 """Each voice before and after, from the hop grid alone: levels of the source times the gain of the plan.
 
 *Before* is the source, *after* the stem with make-up gain, before the limiter. Own speech is what levelling itself
-counts (`plan.levels.own_speech`: sure, audible, alone); others are heard where only somebody else's counted speech is;
+counts (`plan.levels`: sure, audible, without the others' bleed); others are heard where only somebody else speaks;
 noise where nobody speaks and nothing of it is heard.
 """
 
@@ -16,7 +16,7 @@ import numpy.typing as npt
 from leveller.measure.levels import SILENT
 from leveller.measure.loudness import power_to_lufs
 from leveller.plan import PARTS, TrackGain
-from leveller.plan.levels import k_power, level_lufs, own_speech
+from leveller.plan.levels import k_power, level_lufs, own_power, own_speech, spoken_alone
 from leveller.render.gain import hop_gains_db
 from leveller.report.records import OtherFigures, VoiceFigures
 from leveller.units import HOPS_PER_S, Bools
@@ -31,9 +31,9 @@ Grid = npt.NDArray[np.float32]
 
 def voice_figures(result: Result) -> tuple[VoiceFigures, ...]:
     """All voices, in session order."""
-    counted = own_speech(result.activity)
+    counted, alone = own_speech(result.activity), spoken_alone(result.activity)
     pause = ~result.activity.own.any(axis=1) & result.activity.programme
-    return tuple(_one_voice(result, i, counted, pause)
+    return tuple(_one_voice(result, i, counted, alone, pause)
                  for i, track in enumerate(result.session.tracks) if track.role == "voice")
 
 
@@ -50,14 +50,15 @@ def gain_db(gain: TrackGain, hops: int) -> Grid:
     return np.asarray((start + end) / 2)
 
 
-def _one_voice(result: Result, i: int, counted: Bools, pause: Bools) -> VoiceFigures:
+def _one_voice(result: Result, i: int, counted: Bools, alone: Bools, pause: Bools) -> VoiceFigures:
     """Figures of one voice."""
     gain, activity, hops = result.plan.tracks[i], result.activity, result.measurements.hops
-    before = k_power(result.measurements, i)
-    after = np.asarray(before * 10 ** ((gain_db(gain, hops) + result.mix.make_up_db) / 10), np.float32)
-    others = np.delete(counted, i, axis=1).any(axis=1) & ~activity.own[:, i]
+    before, own = k_power(result.measurements, i), own_power(result.measurements, activity, i)
+    gained = np.asarray(10 ** ((gain_db(gain, hops) + result.mix.make_up_db) / 10), np.float32)
+    after = before * gained
+    others = np.delete(alone, i, axis=1).any(axis=1) & ~activity.own[:, i]
     quiet = pause & ~activity.bleed[:, i] & (result.measurements.k_levels[:, i] != SILENT)
-    own_before, own_after = level_lufs(before, counted[:, i]), level_lufs(after, counted[:, i])
+    own_before, own_after = level_lufs(own, counted[:, i]), level_lufs(own * gained, counted[:, i])
     trim = _trims(gain, hops, activity.own[:, i])
     furthest = {part: _furthest(gain.parts_cdb[:, k]) for k, part in enumerate(PARTS)}
     return VoiceFigures(

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from types import SimpleNamespace
+from typing import cast
 
 import numpy as np
 import pytest
@@ -12,8 +14,10 @@ from hypothesis import strategies as st
 from leveller.attribute import Activity
 from leveller.attribute.coupling import Coupling
 from leveller.attribute.knobs import Step
+from leveller.measure import Measurements
+from leveller.measure.levels import STEP_DB
 from leveller.measure.loudness import power_to_lufs
-from leveller.plan.levels import QUIET_DB, level_lufs, own_speech
+from leveller.plan.levels import QUIET_DB, level_lufs, own_power, own_speech, spoken_alone
 from leveller.plan.trim import VOICE_LUFS, trim_nodes_db
 from leveller.settings import Trim
 
@@ -91,12 +95,45 @@ def activity_of(own: np.ndarray, audible_db: float = 15.0) -> Activity:
 
 
 @pytest.mark.parametrize(("alone", "counted"), [(199, 299), (200, 200)])
-def test_speech_over_others_counts_only_where_it_must(alone: int, counted: int) -> None:
-    """With two seconds spoken alone, overlapped speech is left out; with less it is needed."""
+def test_the_ride_hears_speech_over_others_only_where_it_must(alone: int, counted: int) -> None:
+    """With two seconds spoken alone, overlapped speech is left out; with less it is needed. The level counts it all."""
     own = np.zeros((1000, 2), bool)
     own[: alone + 100, 0] = True
     own[alone : alone + 100, 1] = True
-    assert np.count_nonzero(own_speech(activity_of(own))[:, 0]) == counted
+    assert np.count_nonzero(spoken_alone(activity_of(own))[:, 0]) == counted
+    assert np.count_nonzero(own_speech(activity_of(own))[:, 0]) == alone + 100
+
+
+def test_bleed_makes_nobody_louder() -> None:
+    """While two speak, the bleed that is predicted is taken off; alone, the power is the microphone's own.
+
+    Own voice and bleed of the same power: 10 log10 2 dB over the bleed, so half the power is its own.
+    """
+    own = np.zeros((1000, 2), bool)
+    own[:600, 0] = True
+    own[300:900, 1] = True
+    activity = replace(activity_of(own), own_to_bleed_db=np.full(own.shape, 10 * np.log10(2), np.float32))
+    levels = np.full(own.shape, round(-30 / STEP_DB), np.int16)
+    m = cast(Measurements, SimpleNamespace(k_levels=levels))
+    power = own_power(m, activity, 0)
+    assert power[:300] == pytest.approx(power[600:].mean(), rel=1e-5)
+    assert power[300:600] == pytest.approx(power[0] / 2, rel=1e-5)
+    beneath = replace(activity, own_to_bleed_db=np.full(own.shape, -3.0, np.float32))
+    assert not own_power(m, beneath, 0)[300:600].any()  # never less than nothing
+
+
+def test_a_voice_lies_where_it_does_over_all_it_says() -> None:
+    """Somebody who says little alone, and that softly, but much over others is not turned up for it."""
+    own = np.zeros((2000, 2), bool)
+    own[:1300, 0] = own[300:1900, 1] = True
+    activity = replace(activity_of(own), own_to_bleed_db=np.full(own.shape, 30.0, np.float32))
+    levels = np.full(own.shape, round(-30 / STEP_DB), np.int16)
+    levels[:300, 0] = round(-40 / STEP_DB)
+    m = cast(Measurements, SimpleNamespace(k_levels=levels))
+    counted = own_speech(activity)[:, 0]
+    trim = trim_nodes_db(own_power(m, activity, 0), counted, [], settings=HOW)
+    expected = 10 * np.log10((300 * 1e-4 + 1000 * 1e-3) / 1300) - 0.691
+    assert trim[0] == pytest.approx(VOICE_LUFS - expected, abs=0.02)
 
 
 def test_faint_speech_and_what_is_no_programme_do_not_count() -> None:

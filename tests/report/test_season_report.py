@@ -19,13 +19,15 @@ from leveller.report.season_text import format_season, last_lines
 VERSIONS = {"leveller": "0.1.0"}
 
 
-def episode(name: str, *, range_lu: float = 5.0, met: bool = True, **voices: tuple[float, float]) -> Outcome:
+def episode(
+    name: str, *, range_lu: float = 5.0, met: bool = True, off: tuple[str, ...] = (), **voices: tuple[float, float]
+) -> Outcome:
     """A finished episode; each voice has its source level and its level against the target."""
     said = tuple(SeasonVoice(voice, 60.0, source, -19 + against, against)
                  for voice, (source, against) in voices.items())
     figures = EpisodeFigures(
         "podcast-mono", met, "" if met else "the mix is silent", said, 3, target_lufs=-19.0, length_s=600.0,
-        integrated_lufs=-19.0, range_lu=range_lu, true_peak_dbtp=-1.2, listen_s=12.5)
+        integrated_lufs=-19.0, range_lu=range_lu, true_peak_dbtp=-1.2, listen_s=12.5, not_lined_up=off)
     return Outcome(name, "finished", figures=figures, tries=1, took_s=2.5, cpu_s=4.0)
 
 
@@ -43,6 +45,18 @@ def test_an_episode_wider_than_the_rest_is_marked() -> None:
     assert report(episode("a"), episode("b", range_lu=9)).episodes[1].remarks == ()  # one episode is no rest
 
 
+def test_tracks_that_do_not_line_up_are_told_of() -> None:
+    """What an episode's report says of them stands on the season's page, in its table and on the console."""
+    words = "guest: 0.200 s late against host (confidence 0.90). --align corrects it"
+    found = report(episode("a", off=(words,), host=(-26.0, 0.0)), episode("b", host=(-26.0, 0.0)))
+    assert [e.remarks for e in found.episodes] == [(words,), ()]
+    assert [row["remarks"] for row in csv.DictReader(io.StringIO(season_csv(found), newline=""))] == [
+        words, "", "", ""]
+    assert season_page(found).count(words) == 2  # what stands out, and the episode's row
+    assert '<span class="off">5.0' not in season_page(found)  # its loudness range does not stand out
+    assert f"  a: {words}" in [line.text for line in format_season(found, out="out")]
+
+
 def test_a_guest_6_db_lower_is_marked() -> None:
     """A voice recorded 6 dB lower than the rest, and one that comes out softer, say so."""
     found = report(episode("a", host=(-26.0, 0.1)), episode("b", host=(-27.0, 0.2), guest=(-33.0, 0.1)),
@@ -51,6 +65,17 @@ def test_a_guest_6_db_lower_is_marked() -> None:
     assert said["host"] == ()
     assert said["guest"] == ("recorded 6.2 dB lower than the rest",)
     assert said["far"] == ("comes out 6.3 LU softer than the rest",)
+
+
+def test_an_episode_whose_voices_lie_off_together_is_marked() -> None:
+    """0.5 LU from the median of the other episodes is marked, with the target that keeps the voices' level."""
+    others = (episode("a", host=(-26, 0.2), odo=(-26, 0.3)), episode("b", host=(-26, 0.2), odo=(-26, 0.1)))
+    near, off = (report(*others, episode("c", host=(-26, level), odo=(-26, level))) for level in (-0.2, -0.6))
+    assert [e.remarks for e in near.episodes] == [(), (), ()]
+    assert [e.remarks for e in off.episodes] == [(), (), (
+        "all voices 0.8 LU softer than in the rest, at which its mix meets the target; target_lufs = -18.2 would keep "
+        "their level instead",)]
+    assert report(others[0], episode("c", host=(-26, -0.6))).episodes[1].remarks == ()  # one episode is no rest
 
 
 def test_each_voice_is_held_against_itself() -> None:
