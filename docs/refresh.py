@@ -11,6 +11,7 @@ from __future__ import annotations
 import ast
 import contextlib
 import io
+import math
 import os
 import re
 from pathlib import Path
@@ -28,6 +29,13 @@ DOCS = Path(__file__).parent
 PACKAGE = Path(leveller.__file__).parent
 COMMANDS = DOCS / "commands.md"
 BLOCK = re.compile(r"<!-- made: (?P<name>[^>]+?) -->\n(?P<body>.*?)<!-- made: end -->", re.DOTALL)
+YARDSTICK = re.compile(r"copying an hour, \*\*([\d.]+) s\*\* of processor time; leveller, \*\*([\d.]+)\*\* times that")
+CATALOGUE_H, LINE_GBIT = 100_000, 10
+SOURCES_GB, RESULTS_GB = 1.56, 2.6  # of an hour: three tracks; float stems, mix, tables, measurements (84 MB for 120 s)
+MOVED_GB = 7.3  # over the network: sources for measuring, rendering and their SHA-256, results once
+SIZES_GB = {
+    "sources": SOURCES_GB, "results: float stems, mix, tables, kept measurements": RESULTS_GB,
+    "moved over the network: sources for measuring, rendering and their SHA-256, results once": MOVED_GB}
 RECORDS = {  # key of report.json: the record behind it
     "delivery": records.DeliveryFigures, "mix": records.MixFigures, "voices": records.VoiceFigures,
     "others": records.OtherFigures}
@@ -60,12 +68,35 @@ def blocks() -> dict[str, str]:
              for name in ("", *command_names())}
     figures = {f"report {key}": _quantity_table(record) for key, record in RECORDS.items()}
     return {**helps, **figures, "settings": _settings_table(), "deliveries": _delivery_table(),
-            "constants": _constant_tables()}
+            "constants": _constant_tables(), "catalogue": _catalogue()}
 
 
 def refreshed(text: str, made: dict[str, str]) -> str:
     """A page with its blocks as they should be; KeyError for a block of an unknown name."""
     return BLOCK.sub(lambda m: f"<!-- made: {m['name']} -->\n{made[m['name']]}<!-- made: end -->", text)
+
+
+def _catalogue() -> str:
+    """What 100 000 hours cost, from the copy and the ratio that docs/performance.md gives in one line."""
+    found = YARDSTICK.search((DOCS / "performance.md").read_text(encoding="utf-8"))
+    assert found, f"docs/performance.md: no line like {YARDSTICK.pattern}"
+    copy_s, ratio = map(float, found.groups())
+    own_s = copy_s * ratio
+    core_hours = own_s * CATALOGUE_H / 3600
+    line_s = MOVED_GB * 8 / LINE_GBIT
+    rows = [(what, f"{cpu_s:.0f} s", f"{cpu_s * CATALOGUE_H / 3600:,.0f} core hours".replace(",", " ") + then)
+            for what, cpu_s, then in (("copying alone (yardstick), one thread", copy_s, ": nothing can be quicker"),
+                                      (f"processor time, {ratio:g} times the copy", own_s, ""))]
+    rows += [(what, f"{size:g} GB", f"{size * CATALOGUE_H / 1000:.0f} TB") for what, size in SIZES_GB.items()]
+    return _table(("per hour of programme", "", "100 000 hours"), rows) + f"""
+* **Storage limits first.** {LINE_GBIT} Gbit/s carries {MOVED_GB} GB in {line_s:.1f} s at best: the whole catalogue in
+  {line_s * CATALOGUE_H / 3600:.0f} hours, whatever computes. At {own_s:.0f} s of processor time an hour,
+  {math.ceil(own_s / line_s)} cores keep that line full; more need more lines, or sources copied to the worker's
+  own disk first (then they cross once: {SOURCES_GB + RESULTS_GB:.1f} GB). `--stems limited` writes 24 bit instead of 32
+  and saves a fifth of the results.
+* **Cost.** Core hours times their price, plus the storage: twelve rented cores need {core_hours / 12 / 24:.1f} days for
+  the work itself.
+"""
 
 
 def _table(heading: tuple[str, ...], rows: list[tuple[str, ...]]) -> str:

@@ -8,7 +8,6 @@ the linear algebra library to one thread unless the environment says otherwise: 
 from __future__ import annotations
 
 import contextlib
-import ctypes
 import os
 import sys
 import traceback
@@ -20,9 +19,9 @@ import typer
 
 from leveller import __version__, console
 from leveller.errors import LevellerError
+from leveller.lanes import keep_heap
 
 THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
-ARENA_MAX = -8  # M_ARENA_MAX of glibc's mallopt
 USAGE_EXIT, INTERRUPTED_EXIT, UNEXPECTED_EXIT = 2, 130, 1
 INTERRUPTED = "interrupted; nothing was left half-written"
 
@@ -242,17 +241,11 @@ def settings(
         console.print_lines(lines)
 
 
-def _share_one_heap() -> None:
-    """Let all threads allocate from one heap where the C library is glibc: an hour took 263 MB, not 296."""
-    with contextlib.suppress(AttributeError, OSError, TypeError):
-        ctypes.CDLL(None).mallopt(ARENA_MAX, 1)
-
-
 def main(arguments: Sequence[str] | None = None) -> None:
     """Run a command and leave with its exit code; `sys.argv` by default."""
     for name in THREAD_LIMITS:
         os.environ.setdefault(name, "1")
-    _share_one_heap()
+    keep_heap()
     for stream in (sys.stdout, sys.stderr):
         with contextlib.suppress(AttributeError):  # not every stream can change its ways
             stream.reconfigure(errors="backslashreplace")  # type: ignore[union-attr]

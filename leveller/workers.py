@@ -20,7 +20,7 @@ from concurrent.futures import BrokenExecutor, Future, ProcessPoolExecutor
 from types import FrameType, TracebackType
 from typing import Any
 
-from leveller.lanes import processor_count
+from leveller.lanes import keep_heap, processor_count
 from leveller.worker import busy
 
 JOB_BYTES = 600 << 20  # three hours of eight tracks stay under it
@@ -123,6 +123,7 @@ def _no_interrupt() -> Iterator[None]:
 
 def _settle() -> None:
     """What a worker process does first."""
+    keep_heap()
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     signal.signal(signal.SIGTERM, _leave)
     threading.Thread(target=_watch_batch, name="watch", daemon=True).start()

@@ -238,8 +238,9 @@ def _all_off(middles: Sequence[float | None], i: int, target_lufs: float | None)
     rest, value = _rest(middles, i), middles[i]
     if rest is None or value is None or target_lufs is None or round(abs(value - rest), 2) < KEPT_LU:
         return ()
-    return (f"all voices {abs(value - rest):.1f} LU {'louder' if value > rest else 'softer'} than in the rest, at which "
-            f"its mix meets the target; target_lufs = {target_lufs + rest - value:.1f} would keep their level instead",)
+    way = "louder" if value > rest else "softer"
+    return (f"meeting the target makes all voices {abs(value - rest):.1f} LU {way} than in the rest; target_lufs = "
+            f"{target_lufs + rest - value:.1f} would keep their level instead",)
 
 
 def _recorded_low(levels: Sequence[float | None], i: int) -> tuple[str, ...]:

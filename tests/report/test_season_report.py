@@ -73,8 +73,8 @@ def test_an_episode_whose_voices_lie_off_together_is_marked() -> None:
     near, off = (report(*others, episode("c", host=(-26, level), odo=(-26, level))) for level in (-0.2, -0.6))
     assert [e.remarks for e in near.episodes] == [(), (), ()]
     assert [e.remarks for e in off.episodes] == [(), (), (
-        "all voices 0.8 LU softer than in the rest, at which its mix meets the target; target_lufs = -18.2 would keep "
-        "their level instead",)]
+        "meeting the target makes all voices 0.8 LU softer than in the rest; target_lufs = -18.2 would keep their "
+        "level instead",)]
     assert report(others[0], episode("c", host=(-26, -0.6))).episodes[1].remarks == ()  # one episode is no rest
 
 
