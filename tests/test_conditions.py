@@ -10,9 +10,14 @@ import dataclasses
 import tempfile
 from pathlib import Path
 
+import numpy as np
 import pytest
 import scoring
-from conditions import CONDITIONS, VOICE_SETS, Condition, build, cut_of, opened, without_last
+from conditions import CONDITIONS, VOICE_SETS, Condition, build, cut_of, named, opened, without_last
+
+from leveller.attribute import attribute
+from leveller.measure import measure
+from leveller.plan import make_plan
 
 SEED = 301
 SHORT_S = 40.0
@@ -105,3 +110,20 @@ def test_condition_keeps_its_band(condition: Condition) -> None:
     most_lost, most_open = BANDS[condition.name]
     assert found.lost_pct <= most_lost
     assert found.open_pct <= most_open
+
+
+def test_voices_match_though_they_talk_at_once() -> None:
+    """Where 30 % of speech is overlapped, voices still lie within 0.6 dB: what is said over others counts, less bleed.
+
+    Counting only what is spoken alone left 0.90 dB here, counting it all 0.32 dB; a band between.
+    """
+    condition = named("heavy overlap")[0]
+    spoken = build(condition, 0, seed=SEED + 2, voices=VOICE_SETS["dev"])
+    with tempfile.TemporaryDirectory() as folder:
+        session = opened(spoken, Path(folder))
+        measurements = measure(session)
+    plan = make_plan(measurements, attribute(measurements, session), session)
+    middles = np.arange(plan.hops) + 0.5
+    gains = np.stack([np.interp(middles, gain.hop, gain.gain_cdb / 100) for gain in plan.tracks], axis=1)
+    assert scoring.spread_db(np.zeros_like(gains), spoken) > 3
+    assert scoring.spread_db(gains, spoken) < 0.6
