@@ -293,7 +293,7 @@ def _delivered(
     """Render the plan and write all that belongs to it."""
     mix = render(session, plan, folder.work, stems=stems, on_progress=on_progress)
     activity = overruled(activity, session)
-    places = places_to_hear(activity, plan, session)
+    places = places_to_hear(activity, plan, session, measurements)
     result = Result(session, measurements, activity, plan, mix, stems, folder.path, places, mark)
     mark_files(folder.work, session, mix, places)
     write_automation(folder.file("automation.csv"), plan, session)
