@@ -28,14 +28,14 @@ from leveller.measure.levels import level_to_db
 from leveller.plan.stretches import stretches
 from leveller.units import Bools
 
-CLOSED_SHARE = 6 / 18  # of the expander's range: a cut over it loses a word
-OPEN_SHARE = 10 / 18  # ... a cut under it leaves bleed open
+CLOSED_SHARE = 6 / 18  # of the deepest cut: more loses a word
+OPEN_SHARE = 10 / 18  # of the deepest cut: less leaves bleed open
 WORD_HOPS = 27  # what is looked at round a hop for a word
-BLEED_HOPS = 51  # ... for open bleed
-AGREEING_HOPS = 101  # ... for how far two levels rise and fall together
+BLEED_HOPS = 51  # what is looked at round a hop for open bleed
+AGREEING_HOPS = 101  # over which two levels rise and fall together
 OPENING_REACH_HOPS = 31
 MUTED_DB = -120.0  # digital zero, as a muted call leaves it
-RUMOUR_DB = 40.0  # levels further under the loudest say nothing about rising and falling together
+SPAN_DB = 40.0  # levels further under the loudest say nothing about rising and falling together
 STEADY_DB2 = 1.0  # variance under which a level does not rise or fall
 # Learnt by tests/learn_doubt.py from 349 simulated conversations: 1 136 184 examples, 2104 of them lost words.
 WORD_WEIGHTS = {"standing_out_db": 2.52, "own_to_bleed_db": -2.44, "bright_db": -0.563, "audible_db": 0.199}
@@ -54,7 +54,7 @@ def word_doubt(activity: Activity, cut: Row, track: int) -> Row:
     Parameters
     ----------
     cut : shape=(hops,)
-        How far the expander cuts, as a share of its range.
+        How far the expander cuts, as a share of its deepest cut.
     """
     possible = (cut > CLOSED_SHARE) & ~activity.own[:, track] & activity.programme & _others(activity, track)
     return _likelihood(word_features(activity, track), WORD_WEIGHTS, WORD_OFFSET, possible)
@@ -138,9 +138,9 @@ def _of_opening(score: Row, own: Bools) -> Row:
 
 
 def _levels_db(m: Measurements, track: int) -> tuple[Row, Row]:
-    """Level of one microphone and of the loudest other one, each against its own loudest, from -`RUMOUR_DB` to 0."""
+    """Level of one microphone and of the loudest other one, each against its own loudest, from -`SPAN_DB` to 0."""
     levels = m.voice_levels
-    span_db = [np.clip(x - x.max(initial=-np.inf), -RUMOUR_DB, 0) for x in map(level_to_db, levels.T)]
+    span_db = [np.clip(x - x.max(initial=-np.inf), -SPAN_DB, 0) for x in map(level_to_db, levels.T)]
     others = [x for k, x in enumerate(span_db) if k != track]
     loudest = others[0].copy() if others else np.zeros(len(levels), np.float32)
     for other in others[1:]:

@@ -30,14 +30,14 @@ from leveller.units import HOPS_PER_S, Bools
 
 MOST_SHARE = 0.08  # of the session's time
 WORD_HARM, BLEED_HARM = 10.0, 1.0  # of a second
-LOST_HOPS = 20  # of a word are lost, where one is (median 0.18 s, measured)
-BLOCK_HOPS = 50  # of what may be open bleed
+LOST_HOPS = 20  # lost of a word, where one is (median 0.18 s, measured)
+BLOCK_HOPS = 50  # a candidate of open bleed
 BLOCK_WEIGHT = BLEED_HARM * BLOCK_HOPS / (WORD_HARM * LOST_HOPS)  # of half a second of bleed, against a lost word
 LEAST_DOUBT = 0.01  # of a lost word for certain; below it nothing is worth a listen
 LEAST_HOPS = 100
 LEAD_IN_HOPS = 50
 JOIN_HOPS = 50
-MOSTLY = 0.5  # of half a second
+MOSTLY = 0.5  # of a candidate, so that another microphone counts as muted
 BRIGHT_DB = 3.0  # high bands over low ones: a voice under a voice fills the low ones
 SETTLED_HOPS = 30  # a doubt looks that far; round what the editor decided nothing is asked again
 

@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from test_doubt import LOUD_DB, activity_of, measured
+from test_doubt import LOUD_DB, SOFT_DB, activity_of, measured
 
 from leveller.attribute import Activity
 from leveller.listen import MOST_SHARE, Place, places_to_hear
@@ -117,20 +117,21 @@ def opening(**grids: float) -> Activity:
     inside = np.zeros(own.shape, bool)
     inside[500:700, 0] = True
     score = np.where(own, 1.5, -0.2)
-    made = {"score": np.where(inside, 0.0, score)}
+    made = {"score": np.where(inside, 0.0, score), "standing_out_db": np.full(own.shape, -2.0)}
     made |= {name: np.where(inside, value, 0.0) for name, value in grids.items()}
     return activity_of(own, **made)
 
 
 def test_an_opening_on_bleed_is_named_with_its_reason() -> None:
     """Little evidence, a muted microphone, and high bands alone each have words of their own."""
-    m = measured(np.full((HOPS, 3), LOUD_DB))
+    level_db = np.repeat(np.random.default_rng(1).uniform(SOFT_DB, LOUD_DB, (HOPS // 10, 1)), 10, axis=0)
+    levels = np.repeat(level_db, 3, axis=1)  # all rise and fall together
+    m = measured(levels)
     plain = heard(opening(own_to_bleed_db=2.0), m=m)[0]
     assert (plain.track, plain.decided, plain.could_be) == ("Ann", "own", "bleed")
     assert plain.reason == "open while Cem speaks, own voice at most 2 dB over what the others explain"
     bright = heard(opening(bright_db=6.0), m=m)[0]
     assert bright.reason == "high bands stand out by 6 dB more than low ones while Cem speaks: paper, or keys?"
-    levels = np.full((HOPS, 3), LOUD_DB)
     levels[:, 1] = SILENT * STEP_DB
     muted = heard(opening(own_to_bleed_db=2.0), m=measured(levels))[0]
     assert muted.reason == "open while Ben is muted: whose voice this is cannot be told from what Ben records"
