@@ -108,7 +108,7 @@ def test_a_voice_heard_too_little_explains_nothing() -> None:
 
 
 def test_details_tell_which_bands_stand_out() -> None:
-    """Own voice in three low bands only: they stand out, high bands do not; nothing is told unasked, or changed by it."""
+    """Three low bands with own voice stand out, high ones do not; nothing is told unasked, or changed by it."""
     levels = recorded(MATRIX, [-np.inf, VOICE_DB, -np.inf])
     levels[INSIDE, 0, :3] += round(9 / STEP_DB)
     floor = np.full((HOPS // 100, 3, BANDS), FLOOR_DB, np.float32)
