@@ -324,7 +324,7 @@ def _delivered(
     mix = render(session, plan, folder.work, stems=stems, on_progress=on_progress)
     session = dataclasses.replace(session, notes=(*session.notes, *beside.notes.result()))
     activity = overruled(activity, session)
-    places = places_to_hear(activity, plan, session)
+    places = places_to_hear(activity, plan, session, measurements)
     result = Result(session, measurements, activity, plan, mix, stems, folder.path, places, mark,
                     beside.digests.result())
     mark_files(folder.work, session, mix, places)
