@@ -14,6 +14,7 @@ from __future__ import annotations
 
 import contextlib
 import os
+import stat
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import Any, Literal
@@ -344,13 +345,16 @@ def _open(path: Path) -> Any:
 
 def _check_there(path: Path) -> None:
     """The file is one, is not empty and may be read."""
-    try:
-        if not path.is_file():
+    try:  # os.stat: Path.is_file says no more than "no" of a name too long since Python 3.14
+        found = os.stat(path)
+        if not stat.S_ISREG(found.st_mode):
             raise InputError(f"{path}: no such file")
-        if not path.stat().st_size:
+        if not found.st_size:
             raise InputError(f"{path}: empty file (0 bytes). Leave it out or copy it again")
         with open(path, "rb"):
             pass
+    except (FileNotFoundError, NotADirectoryError):
+        raise InputError(f"{path}: no such file") from None
     except OSError as error:  # no right to it, a name too long
         raise InputError(f"{path}: cannot be read ({error.strerror})") from error
 

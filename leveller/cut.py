@@ -11,6 +11,7 @@ end in silence.
 
 from __future__ import annotations
 
+import os
 from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
@@ -114,7 +115,7 @@ def _files(paths: Sequence[Path]) -> list[Path]:
         raise InputError("no file given: expected the finished cut, or its stems")
     out: list[Path] = []
     for path in paths:
-        if not path.is_dir():
+        if not os.path.isdir(path):
             out.append(path)
             continue
         found = audio_files(path)

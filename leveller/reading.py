@@ -7,6 +7,7 @@ are silenced and counted, as in a session.
 
 from __future__ import annotations
 
+import os
 from collections.abc import Sequence
 from pathlib import Path
 
@@ -50,7 +51,7 @@ def measure_files(
     """
     paths = [Path(file) for file in files]
     for path in paths:
-        if path.is_dir():
+        if os.path.isdir(path):
             raise InputError(f"{path}: is a folder, expected audio files such as {path / '*.wav'}")
     facts = [probe(path, accept_short=accept_short) for path in paths]
     total_s, before_s = sum(fact.frames / fact.rate_hz for fact in facts), 0.0
