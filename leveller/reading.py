@@ -19,7 +19,7 @@ from leveller.measure import OnProgress, no_progress
 from leveller.measure.loudness import LoudnessMeter
 from leveller.measure.peaks import TruePeakMeter
 from leveller.report.records import FileReading, loudness_figures
-from leveller.samples import repair
+from leveller.samples import FileFacts, repair
 
 __all__ = ["FileReading", "measure_files"]
 
@@ -57,18 +57,19 @@ def measure_files(
     total_s, before_s = sum(fact.frames / fact.rate_hz for fact in facts), 0.0
     out = []
     for path, fact in zip(paths, facts, strict=True):
-        out.append(_one_file(path, fact.rate_hz, fact.channels, before_s, total_s, on_progress))
+        out.append(_one_file(path, fact, before_s, total_s, on_progress))
         before_s += fact.frames / fact.rate_hz
     return out
 
 
 def _one_file(
-    path: Path, rate_hz: int, channels: int, before_s: float, total_s: float, on_progress: OnProgress
+    path: Path, facts: FileFacts, before_s: float, total_s: float, on_progress: OnProgress
 ) -> FileReading:
     """One pass over one file."""
+    rate_hz, channels = facts.rate_hz, facts.channels
     loudness, peaks = LoudnessMeter(rate_hz, channels), TruePeakMeter(rate_hz, channels)
     frames = repaired = 0
-    for block in file_blocks(path, round(BLOCK_S * rate_hz)):
+    for block in file_blocks(path, round(BLOCK_S * rate_hz), length=facts.frames):
         bad = repair(block)
         repaired += 0 if bad is None else int(np.count_nonzero(bad.any(axis=1)))
         loudness.push(block)
