@@ -256,7 +256,7 @@ def test_truncated_file_is_refused_or_taken_short(tmp_path: Path, form: str, sub
 
 @pytest.mark.parametrize("channels", [1, 2])
 def test_damaged_flac_is_taken_up_to_the_damaged_block(tmp_path: Path, channels: int) -> None:
-    """Of what lies before a block that cannot be decoded one frame is lost at most, and all the rest reads as it was."""
+    """Of what lies before a block that cannot be decoded at most a frame is lost, and the rest reads as it was."""
     path, x = tmp_path / "x.flac", noise(400_000, channels)
     soundfile.write(path, x, RATE_HZ, "PCM_24")
     whole = path.read_bytes()
