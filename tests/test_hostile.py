@@ -10,6 +10,8 @@ import contextlib
 import csv
 import resource
 import struct
+import subprocess
+import sys
 import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
@@ -375,3 +377,32 @@ def test_a_long_silence_is_refused_by_the_disk(tmp_path: Path) -> None:
         with pytest.raises(OutputError, match=r"GB, but 0\.10 GB are free"):
             process(tmp_path / "bomb.flac", out=folder, on_progress=lambda *_: pytest.fail("work was begun"))
     assert not folder.exists()
+
+
+# Coverage-guided
+
+FUZZ_S = 300  # a reader, in the long tier
+GUIDED = ("session_toml", "season_toml", "season_csv", "automation", "corrections", "speech", "wav", "ixml")
+
+
+def fuzzed(target: str, seconds: int) -> subprocess.CompletedProcess[str]:
+    """A run of `fuzz_long.py`."""
+    return subprocess.run([sys.executable, Path(__file__).with_name("fuzz_long.py"), target, "--seconds", str(seconds)],
+                          capture_output=True, text=True, check=False)
+
+
+@pytest.mark.long
+@pytest.mark.parametrize("target", GUIDED)
+def test_guided(target: str) -> None:
+    """Five minutes of input that looks for lines not yet reached: nothing but results and errors of our own."""
+    done = fuzzed(target, FUZZ_S)
+    assert done.returncode == 0, done.stderr[-4000:]
+    assert "number_of_executed_units" in done.stderr
+
+
+@pytest.mark.long
+def test_guided_tells_a_fault() -> None:
+    """A fault on purpose ends the run."""
+    done = fuzzed("found_at_once", FUZZ_S)
+    assert done.returncode != 0
+    assert "KeyError: 1" in done.stderr + done.stdout
