@@ -27,15 +27,23 @@ import atheris
 
 with atheris.instrument_imports(include=["leveller", "tomllib"]):
     from leveller import audio, riff
-    from leveller.automation import NO_ROWS, read_automation
+    from leveller.automation import COLUMNS, NO_ROWS, read_automation
     from leveller.bwf import bext_chunk, cue_chunks, read_bext
+    from leveller.defaults import SEASON_KEYS
     from leveller.edits import SPEECH_COLUMNS, is_speech_table, with_speech_table
     from leveller.errors import LevellerError
     from leveller.ixml import parse_track_list, read_track_list
     from leveller.reading import measure_files
-    from leveller.season import read_season
+    from leveller.season import EPISODE_KEYS, read_season
     from leveller.session import open_session
-    from leveller.sessionfile import CORRECTION_KEYS, read_corrections, read_session_file
+    from leveller.sessionfile import (
+        CORRECTION_KEYS,
+        SESSION_KEYS,
+        SKIP_KEYS,
+        TRACK_KEYS,
+        read_corrections,
+        read_session_file,
+    )
     from leveller.units import frames_to_hops
 
 import numpy as np
@@ -149,14 +157,14 @@ def seeds(place: Path) -> dict[str, list[bytes]]:
             b'from_s = 0.1\nto_s = 0.2\ndecide = "own"\n[expander]\nrange_db = "auto"\n')
     return {
         "session_toml": [toml, b"[[track]]\nfile='a.wav'\nchannels='split'\n"],
-        "season_toml": [b'title = "s"\ndelivery = "r128"\n[[episode]]\nname = "one"\nsources = ["a.wav"]\n'
+        "season_toml": [b'title = "s"\ndelivery = "r128"\n[[episode]]\nsession = "a.wav"\nname = "one"\n'
                         b'[ride]\nenabled = false\n'],
-        "season_csv": [table(("name", "sources", "delivery"), ("one", "a.wav", "r128"), ("two", "a.wav;b.wav", ""))],
+        "season_csv": [table(("session", "name", "delivery"), ("a.wav", "one", "r128"), ("b.wav", "", ""))],
         "automation": [table(("time_s", "track", "gain_db", "auto_trim_db", "expander_db", "ride_db", "compressor_db"),
                              (0, "a", 0, 0, 0, 0, 0), (0, "b", -1, 0, -1, 0, 0), (0.5, "a", -6, 0, -6, 0, 0),
                              (1, "a", 0, 0, 0, 0, 0), (1, "b", 0, 0, 0, 0, 0)),
                        table(("time_s", "track", "gain_db"), (0, "a", 0), (0, "b", 0), (1, "a", 1), (1, "b", 1))],
-        "corrections": [table(CORRECTION_KEYS[:4], ("a", 0.1, 0.2, "own"), ("b", "0,5", 1, "bleed"))],
+        "corrections": [table(CORRECTION_KEYS[:4], ("a", 0.1, 0.2, "own"), ("b", 0.5, 1, "bleed"))],
         "speech": [table(SPEECH_COLUMNS, *((0.1, 0.2, "a", "own") + ("1",) * (len(SPEECH_COLUMNS) - 4),))],
         "wav": headers(place, document),
         "ixml": [document],
@@ -174,8 +182,18 @@ def headers(place: Path, document: bytes) -> list[bytes]:
     riff.append_chunks(place / "seed", [(b"bext", bext_chunk(description="x", time_reference=5)), (b"iXML", document),
                                         *cue_chunks([(1, 2, "here")])])
     out.append((place / "seed").read_bytes())
-    form = struct.pack("<HHIIHH", 1, 200, RATE_HZ, 2 * RATE_HZ, 2, 16)
-    return [*out, b"RIFF\0\0\0\0WAVEfmt " + struct.pack("<I", len(form)) + form + b"data\xff\xff\xff\xff"]
+    form = struct.pack("<HHIIHH", 1, 1, RATE_HZ, 2 * RATE_HZ, 2, 16)
+    stream = b"RIFF\xff\xff\xff\xffWAVEfmt " + struct.pack("<I", len(form)) + form + b"data\xff\xff\xff\xff"
+    return [*out, stream + bytes(200)]
+
+
+def words() -> str:
+    """What the readers look for, as libFuzzer's dictionary has it."""
+    keys = {*SESSION_KEYS, *TRACK_KEYS, *SKIP_KEYS, *CORRECTION_KEYS, *SEASON_KEYS, *EPISODE_KEYS, *SPEECH_COLUMNS,
+            *COLUMNS}
+    chunks = ("RIFF", "RF64", "BW64", "WAVE", "FORM", "AIFF", "fLaC", "fmt ", "data", "ds64", "bext", "iXML", "cue ")
+    marks = ("[[track]]", "[[skip]]", "[[correction]]", "[[episode]]", "a.wav", "b.wav", "own", "bleed", "<!DOCTYPE")
+    return "".join(f'"{word}"\n' for word in (*sorted(keys), *chunks, *marks))
 
 
 def main() -> None:
@@ -189,12 +207,15 @@ def main() -> None:
     (place / "x").mkdir()
     begin = options.corpus or place / "corpus"
     begin.mkdir(parents=True, exist_ok=True)
-    for number, content in enumerate(seeds(place)[options.target]):
-        (begin / f"seed {number}").write_bytes(content)
     for number, name in enumerate("ab"):
         noise = np.random.default_rng(number).standard_normal(RATE_HZ).astype(np.float32) / 10
         soundfile.write(place / f"{name}.wav", noise, RATE_HZ)
     target = TARGETS[options.target]
+    for number, content in enumerate(seeds(place)[options.target]):
+        (begin / f"seed {number}").write_bytes(content)
+        if options.target != found_at_once.__name__:
+            target(place, content)  # a good input that is refused ends the run
+    (place / "words").write_text(words())
 
     def once(content: bytes) -> None:
         with contextlib.suppress(LevellerError):
@@ -203,7 +224,7 @@ def main() -> None:
     print(f"{options.target}: {options.seconds} s; what fails is kept in {place}", flush=True)
     atheris.Setup([sys.argv[0], str(begin), f"-max_total_time={options.seconds}", f"-timeout={SLOWEST_S}",
                    f"-rss_limit_mb={MOST_MB}", f"-max_len={LONGEST_BYTES}", f"-artifact_prefix={place}/",
-                   "-print_final_stats=1", "-verbosity=1"], once)
+                   f"-dict={place / 'words'}", "-print_final_stats=1", "-verbosity=1"], once)
     atheris.Fuzz()
 
 
