@@ -1,7 +1,7 @@
 """Files beyond 4 GiB, really written and really read (EBU Tech 3306: RF64); the long tier, since they cost minutes.
 
-Each file is removed when its test ends. What the headers of short and sparse files hold is tested in `test_audio` and
-`test_bwf`.
+Each file is removed when its test ends; up to 13 GiB are needed for a while. What the headers of short and sparse files
+hold is tested in `test_audio` and `test_bwf`.
 """
 
 from __future__ import annotations
@@ -21,6 +21,7 @@ from wavreader import bext_fields, chunks_of, cues_of, payload
 from leveller import audio
 from leveller.listen import Place
 from leveller.marks import mark_files
+from leveller.pipeline import finish
 from leveller.reading import measure_files
 from leveller.session import open_session
 
@@ -85,22 +86,26 @@ def test_a_file_over_4_gib_is_written_whole(large: Path) -> None:
     assert (facts.frames, facts.header_frames, facts.format) == (frames, frames, "RF64")
 
 
-def test_a_file_over_4_gib_is_measured_to_its_end(large: Path) -> None:
-    """The only sound of a sparse file of 4.1 GiB, a tone in its last second, is found there and at its level."""
-    rate_hz = 48_000
-    frames = SIZE_BYTES // 3
+def write_sparse(large: Path, frames: int, rate_hz: int) -> None:
+    """A 24-bit file of nothing but a tone in its last second; what lies before is a hole and costs no room."""
     with audio.WavWriter(large, rate_hz, 1, "pcm24", expected_frames=frames) as writer:
         writer.write(tone(rate_hz))
     content = large.read_bytes()
     ((_, offset, size),) = [chunk for chunk in chunks_of(large) if chunk[0] == b"data"]
     with open(large, "r+b") as file:
-        file.truncate(offset)  # what lies between is a hole and costs no room
+        file.truncate(offset)
         file.truncate(offset + 3 * frames - size)
         file.seek(0, 2)
         file.write(content[offset:] + b"\0" * (frames % 2))
         file.seek(20)
         file.write(struct.pack("<QQQ", offset + 3 * frames + frames % 2 - 8, 3 * frames, frames))
     assert large.stat().st_size > 4 * GIB
+
+
+def test_a_file_over_4_gib_is_measured_to_its_end(large: Path) -> None:
+    """The only sound of a sparse file of 4.1 GiB, a tone in its last second, is found there and at its level."""
+    rate_hz, frames = 48_000, SIZE_BYTES // 3
+    write_sparse(large, frames, rate_hz)
     session = open_session([large])
     assert (session.frames, session.rate_hz, session.tracks[0].frames) == (frames, rate_hz, frames)
     (last,) = audio.pieces(audio.parts_of(session.tracks[0]), [frames - rate_hz], frames=rate_hz)
@@ -111,3 +116,25 @@ def test_a_file_over_4_gib_is_measured_to_its_end(large: Path) -> None:
     assert reading.true_peak_dbtp == pytest.approx(20 * np.log10(TONE_PEAK), abs=0.1)
     assert length_s - 1.01 <= reading.true_peak_s <= length_s
     assert length_s - 1 <= reading.max_momentary_s <= length_s
+
+
+def test_a_cut_over_4_gib_is_finished(large: Path) -> None:
+    """A cut of 8.5 h becomes a mix of the same frames in RF64, its tone where it was and under the ceiling."""
+    rate_hz, frames = 48_000, SIZE_BYTES // 3
+    write_sparse(large, frames, rate_hz)
+    out = large.parent / "done"
+    assert shutil.disk_usage(large.parent).free > 3 * SIZE_BYTES, "this test needs 13 GiB free for temporary files"
+    try:
+        result = finish([large], out=out)
+        sizes = {kind: size for kind, _, size in chunks_of(out / "mix.wav")}
+        assert sizes[b"data"] == 3 * frames > 4 * GIB
+        with soundfile.SoundFile(out / "mix.wav") as file:
+            assert (file.format, file.frames) == ("RF64", frames)
+            file.seek(frames - 2 * rate_hz)
+            silence, last = file.read(rate_hz), file.read(rate_hz)
+    finally:
+        shutil.rmtree(out, ignore_errors=True)
+    assert not silence.any()
+    gain = last[: rate_hz // 2] @ tone(rate_hz)[: rate_hz // 2] / np.sum(tone(rate_hz)[: rate_hz // 2] ** 2)
+    assert 20 * np.log10(gain) == pytest.approx(result.mix.make_up_db, abs=0.1)
+    assert np.max(np.abs(last)) <= 10 ** (-1 / 20)
