@@ -38,7 +38,7 @@ from leveller.spreadsheet import read_rows
 from leveller.units import frames_to_hops
 
 RATE_HZ = 8000
-SLOWEST_S = 10.0  # own choice: an example takes milliseconds
+SLOWEST_S = 10.0  # of the processor, since a busy disk is no fault; own choice: an example takes milliseconds
 MOST_BYTES = 500 << 20  # own choice: what the process may grow by while a header lies to it
 QUICK, LONG = 60, 1500  # examples
 EVIL_NAMES = ("..", ".", "../../out", "/etc/passwd", "C:\\x", "a/b", "a\\b", "NUL", "con.wav", "COM1", "x" * 300,
@@ -66,10 +66,10 @@ def place(tmp_path_factory: pytest.TempPathFactory) -> Path:
 def bounded(place: Path) -> Iterator[None]:
     """An error of our own is fine; time, memory and files beside the input are not."""
     before = sorted(place.parent.glob("*")), sorted(place.iterdir())
-    begun, held = time.monotonic(), resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+    begun, held = time.process_time(), resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
     with contextlib.suppress(LevellerError):
         yield
-    assert time.monotonic() - begun < SLOWEST_S
+    assert time.process_time() - begun < SLOWEST_S
     assert (resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - held) * 1024 < MOST_BYTES
     assert (sorted(place.parent.glob("*")), sorted(place.iterdir())) == before
 
