@@ -9,6 +9,7 @@ from __future__ import annotations
 import contextlib
 import csv
 import resource
+import shutil
 import struct
 import subprocess
 import sys
@@ -386,9 +387,12 @@ GUIDED = ("session_toml", "season_toml", "season_csv", "automation", "correction
 
 
 def fuzzed(target: str, seconds: int) -> subprocess.CompletedProcess[str]:
-    """A run of `fuzz_long.py`."""
-    return subprocess.run([sys.executable, Path(__file__).with_name("fuzz_long.py"), target, "--seconds", str(seconds)],
+    """A run of `fuzz_long.py`; its folder stays where it found something."""
+    done = subprocess.run([sys.executable, Path(__file__).with_name("fuzz_long.py"), target, "--seconds", str(seconds)],
                           capture_output=True, text=True, check=False)
+    if not done.returncode:
+        shutil.rmtree(done.stdout.strip().rpartition(" ")[2])
+    return done
 
 
 @pytest.mark.long
