@@ -176,8 +176,9 @@ def _why_lost(found: Candidate, activity: Activity, session: Session, _: Measure
     best_db = float(activity.standing_out_db[part].mean(dtype=np.float32))
     all_db = float(activity.own_to_bleed_db[part].mean())
     speaker, seconds = _speaker(found, activity, session), (found.after - found.first) / HOPS_PER_S
-    return (f"its best bands {best_db:+.0f} dB against {speaker}'s bleed for {seconds:.1f} s, all together "
-            f"{all_db:+.0f} dB: a short answer may be under it")
+    what = f"a short answer may be under {speaker}'s voice" if speaker else "a word may be lost"
+    return (f"{what}: for {seconds:.1f} s the strongest bands are at {best_db:+.0f} dB against bleed, "
+            f"all at {all_db:+.0f} dB")
 
 
 def _why_bleed(found: Candidate, activity: Activity, session: Session, m: Measurements) -> str:
@@ -190,13 +191,16 @@ def _why_bleed(found: Candidate, activity: Activity, session: Session, m: Measur
         return f"open while {muted[0]} is muted: whose voice this is cannot be told from what {muted[0]} records"
     bright_db = float(activity.bright_db[part].mean(dtype=np.float32))
     if bright_db > BRIGHT_DB:
-        return f"high bands stand out by {bright_db:.0f} dB more than low ones while {speaker} speaks: paper, or keys?"
+        when = f" while {speaker} speaks" if speaker else ""
+        return f"paper or keys? high bands stand out by {bright_db:.0f} dB more than low ones{when}"
     ratio_db = float(activity.own_to_bleed_db[part].max())
-    return f"open while {speaker} speaks, own voice at most {ratio_db:.0f} dB over what the others explain"
+    if not speaker:
+        return f"open, but at most {ratio_db:.0f} dB over what the others explain"
+    return f"open while {speaker} speaks, at most {ratio_db:.0f} dB over {speaker}'s bleed: it may be bleed alone"
 
 
 def _speaker(found: Candidate, activity: Activity, session: Session) -> str:
-    """Who else speaks, or speaks next."""
+    """Who else speaks, or speaks next; empty for nobody."""
     others = activity.own[max(0, found.first - BLEED_HOPS) : found.after + BLEED_HOPS].copy()
     others[:, found.track] = False
-    return session.tracks[int(others.sum(axis=0).argmax())].name if others.any() else "nobody else"
+    return session.tracks[int(others.sum(axis=0).argmax())].name if others.any() else ""
