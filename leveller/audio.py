@@ -53,6 +53,7 @@ MOST_CHANNELS = 128  # our choice: twice the tracks of a large session; bounds w
 READ_QUALITY = "HQ"
 PLAIN: dict[str, Kind] = {"PCM_16": "pcm16", "PCM_24": "pcm24", "FLOAT": "float32"}  # by libsndfile's names
 COUNT_FRAMES = 65521  # a prime: no read ends where a coded block does, for hours
+CODED_FRAMES = 4096  # a block of most FLAC encoders
 WAY_OUT = "Copy it again, or take what lies before with --accept-short"
 
 
@@ -358,5 +359,17 @@ def _count_frames(path: Path) -> int:
                 block.fill(np.nan)
         except (soundfile.LibsndfileError, OSError):
             whole = int(np.argmax(np.isnan(block[:, 0])))
-            return max(count + whole - 1, 0)
+            count = max(count + whole - 1, 0)
+    while count and not _reads(path, count):
+        count = max(count - CODED_FRAMES, 0)  # libsndfile 1.2.0 fills in the damaged block too before it fails
     return count
+
+
+def _reads(path: Path, frames: int) -> bool:
+    """Whether so many frames can be read, in the chunks in which they will be."""
+    with _open(path) as file, contextlib.suppress(soundfile.LibsndfileError, OSError):
+        for start in range(0, frames, CHUNK_FRAMES):
+            if len(file.read(min(CHUNK_FRAMES, frames - start), dtype="float32")) == 0:
+                return False
+        return True
+    return False
