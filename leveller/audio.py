@@ -14,6 +14,7 @@ from __future__ import annotations
 
 import contextlib
 import os
+import stat
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import Any
@@ -51,6 +52,9 @@ PREVIEW_PIECES = 60  # of 1 s each; enough for levels and likeness, a sixtieth o
 MOST_CHANNELS = 128  # our choice: twice the tracks of a large session; bounds what a header can make us hold
 READ_QUALITY = "HQ"
 PLAIN: dict[str, Kind] = {"PCM_16": "pcm16", "PCM_24": "pcm24", "FLOAT": "float32"}  # by libsndfile's names
+COUNT_FRAMES = 65521  # a prime: no read ends where a coded block does, for hours
+CODED_FRAMES = 4096  # a block of most FLAC encoders
+WAY_OUT = "Copy it again, or take what lies before with --accept-short"
 
 
 def probe(path: Path, *, accept_short: bool = False) -> FileFacts:
@@ -69,8 +73,8 @@ def probe(path: Path, *, accept_short: bool = False) -> FileFacts:
         there = header_frames
         if absent:  # libsndfile has clamped its count already
             header_frames += -(-absent // _frame_bytes(file))
-        elif file.format in ("FLAC", "MP3") and not _tail_reads(file):
-            there = _count_frames(path)
+        elif (file.format in ("FLAC", "MP3") and not _tail_reads(file)) or (file.format == "FLAC" and accept_short):
+            there = _count_frames(path)  # where damage is allowed it may lie anywhere
     if not RATES_HZ[0] <= facts[0] <= RATES_HZ[1]:
         raise InputError(f"{path}: {facts[0]} Hz, expected {RATES_HZ[0]} to {RATES_HZ[1]} Hz. Convert it first")
     if there < header_frames and there > 0 and not accept_short:
@@ -99,10 +103,11 @@ def pieces(path: Path | Sequence[Part], starts: Sequence[int], *, frames: int) -
     The same array is filled again for each place. The files of a split take (`parts_of(track)`) count as one.
     """
     with _open_samples(path) if isinstance(path, Path) else _open_parts(path) as file:
+        length = file.frames if isinstance(path, Path) else sum(part.frames for part in path)  # that are taken
         block = np.empty((frames, file.channels), np.float32)
         for start in starts:
             block.fill(0)
-            first, last = max(start, 0), min(start + frames, file.frames)
+            first, last = max(start, 0), min(start + frames, length)
             if last > first:
                 try:
                     file.seek(first)
@@ -110,7 +115,7 @@ def pieces(path: Path | Sequence[Part], starts: Sequence[int], *, frames: int) -
                 except (soundfile.LibsndfileError, OSError) as error:
                     name = path if isinstance(path, Path) else path[0].path
                     raise InputError(f"{name}: cannot be read at {first / file.samplerate:.3f} s "
-                                     f"({_detail(error)})") from error
+                                     f"({_detail(error)}). {WAY_OUT}") from error
                 repair(block)
             yield block
 
@@ -257,10 +262,19 @@ def open_readers(session: SourceList) -> Iterator[list[TrackReader]]:
         yield [readers[track.name] for track in session.tracks]
 
 
-def file_blocks(path: Path, frames: int) -> Iterator[Samples]:
-    """All of a file in blocks, shape=(frames, channels), at its own rate, the last block shorter."""
+def file_blocks(path: Path, frames: int, *, length: int | None = None) -> Iterator[Samples]:
+    """A file (its first `length` frames) in blocks, shape=(frames, channels), at its own rate, the last one shorter."""
     with _open(path) as file:
-        while len(block := file.read(frames, dtype="float32", always_2d=True)):
+        left = file.frames if length is None else length
+        while left > 0:
+            try:
+                block = file.read(min(frames, left), dtype="float32", always_2d=True)
+            except (soundfile.LibsndfileError, OSError) as error:
+                raise InputError(f"{path}: cannot be read behind {file.tell() / file.samplerate:.3f} s "
+                                 f"({_detail(error)}). {WAY_OUT}") from error
+            if not len(block):
+                return
+            left -= len(block)
             yield block
 
 
@@ -291,13 +305,16 @@ def _open(path: Path) -> Any:
 
 def _check_there(path: Path) -> None:
     """The file is one, is not empty and may be read."""
-    try:
-        if not path.is_file():
+    try:  # os.stat: Path.is_file says no more than "no" of a name too long since Python 3.14
+        found = os.stat(path)
+        if not stat.S_ISREG(found.st_mode):
             raise InputError(f"{path}: no such file")
-        if not path.stat().st_size:
+        if not found.st_size:
             raise InputError(f"{path}: empty file (0 bytes). Leave it out or copy it again")
         with open(path, "rb"):
             pass
+    except (FileNotFoundError, NotADirectoryError):
+        raise InputError(f"{path}: no such file") from None
     except OSError as error:  # no right to it, a name too long
         raise InputError(f"{path}: cannot be read ({error.strerror})") from error
 
@@ -328,9 +345,31 @@ def _tail_reads(file: Any) -> bool:
 
 
 def _count_frames(path: Path) -> int:
-    """Decode a damaged file from its start until it fails."""
+    """Decode a file from its start until it ends or fails.
+
+    libsndfile fills what it can of a read that fails, which NaN in the rest shows. It also fails a read that ends just
+    where the damage begins, since it decodes ahead: hence the odd number of frames a step, and one frame less.
+    """
     count = 0
-    with _open(path) as file, contextlib.suppress(soundfile.LibsndfileError, OSError):
-        while got := len(file.read(4096, dtype="float32")):
-            count += got
+    with _open(path) as file:
+        block = np.full((COUNT_FRAMES, file.channels), np.nan, np.float32)
+        try:
+            while got := len(file.read(out=block)):
+                count += got
+                block.fill(np.nan)
+        except (soundfile.LibsndfileError, OSError):
+            whole = int(np.argmax(np.isnan(block[:, 0])))
+            count = max(count + whole - 1, 0)
+    while count and not _reads(path, count):
+        count = max(count - CODED_FRAMES, 0)  # libsndfile 1.2.0 fills in the damaged block too before it fails
     return count
+
+
+def _reads(path: Path, frames: int) -> bool:
+    """Whether so many frames can be read, in the chunks in which they will be."""
+    with _open(path) as file, contextlib.suppress(soundfile.LibsndfileError, OSError):
+        for start in range(0, frames, CHUNK_FRAMES):
+            if len(file.read(min(CHUNK_FRAMES, frames - start), dtype="float32")) == 0:
+                return False
+        return True
+    return False

@@ -13,6 +13,7 @@ The outlines that report.html draws, of files and mix, are taken as the blocks p
 
 from __future__ import annotations
 
+import os
 from collections import Counter
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
@@ -152,7 +153,7 @@ def _files(paths: Sequence[Path]) -> list[Path]:
         raise InputError("no file given: expected the finished cut, or its stems")
     out: list[Path] = []
     for path in paths:
-        if not path.is_dir():
+        if not os.path.isdir(path):
             out.append(path)
             continue
         found = audio_files(path)

@@ -31,12 +31,12 @@ def season_file_of(sources: Sequence[Path]) -> Path | None:
     if not sources:
         return None
     first = Path(os.path.abspath(sources[0]))
-    above = first.is_dir() or first.name == "session.toml"
+    above = os.path.isdir(first) or first.name == "session.toml"
     folders = [first.parent.parent if first.name == "session.toml" else first.parent]
     if not above:
         folders.append(first.parent.parent)
     found = (folder / SEASON_FILE for folder in folders)
-    return next((file for file in found if file.is_file()), None)
+    return next((file for file in found if os.path.isfile(file)), None)
 
 
 def read_defaults(path: Path) -> SessionFile:

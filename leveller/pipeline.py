@@ -120,7 +120,7 @@ def process(
     """
     session = _opened(sources, delivery, stems, settings, accept_short, align, corrections, season)
     mark, align = _mark(sources, delivery, stems, settings, accept_short, align, corrections, season), session.align
-    folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
+    folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session, stems),
                           sources=source_paths(session))
     with folder, second_thread() as second:
         session, measurements = _measured([folder.path], session, align, on_progress)
@@ -175,7 +175,7 @@ def render_again(
     automation = Path(automation)
     session = _opened(sources, delivery, stems, settings, accept_short, align, corrections, tables=[automation])
     align = session.align
-    folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session),
+    folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session, stems),
                           sources=source_paths(session))
     homes = dict.fromkeys((automation.parent, folder.path, _out(None, session)))
     measurements = None
@@ -318,7 +318,7 @@ def _delivered(
     mix = render(session, plan, folder.work, stems=stems, on_progress=on_progress)
     session = dataclasses.replace(session, notes=(*session.notes, *beside.notes.result()))
     activity = overruled(activity, session)
-    places = places_to_hear(activity, plan, session)
+    places = places_to_hear(activity, plan, session, measurements)
     result = Result(session, measurements, activity, plan, mix, stems, folder.path, places, mark,
                     beside.digests.result())
     mark_files(folder.work, session, mix, places)
@@ -340,8 +340,9 @@ def _out(out: Path | str | None, session: Session) -> Path:
     return Path(out) if out is not None else DEFAULT_OUT / safe_name(session.title)
 
 
-def _needed_bytes(session: Session) -> int:
-    """Room for float stems, the spilled sum, the mix, and the measurements that are kept."""
-    frame_bytes = session.mix_channels * (4 * len(session.tracks) + 4 + 3)
+def _needed_bytes(session: Session, stems: str) -> int:
+    """Room for float stems, limited ones beside them where those are asked for, the mix, and what is kept."""
+    per_track = 4 if stems == LEVELS[0] else 4 + 3
+    frame_bytes = session.mix_channels * (per_track * len(session.tracks) + 3)
     kept_bytes = KEPT_BYTES * len(session.tracks) * frames_to_hops(session.frames, session.rate_hz)
     return session.frames * frame_bytes + kept_bytes + MARGIN_BYTES

@@ -7,6 +7,7 @@ are silenced and counted, as in a session.
 
 from __future__ import annotations
 
+import os
 from collections.abc import Sequence
 from pathlib import Path
 
@@ -18,7 +19,7 @@ from leveller.measure import OnProgress, no_progress
 from leveller.measure.loudness import LoudnessMeter
 from leveller.measure.peaks import TruePeakMeter
 from leveller.report.records import FileReading, loudness_figures
-from leveller.samples import repair
+from leveller.samples import FileFacts, repair
 
 __all__ = ["FileReading", "measure_files"]
 
@@ -50,24 +51,25 @@ def measure_files(
     """
     paths = [Path(file) for file in files]
     for path in paths:
-        if path.is_dir():
+        if os.path.isdir(path):
             raise InputError(f"{path}: is a folder, expected audio files such as {path / '*.wav'}")
     facts = [probe(path, accept_short=accept_short) for path in paths]
     total_s, before_s = sum(fact.frames / fact.rate_hz for fact in facts), 0.0
     out = []
     for path, fact in zip(paths, facts, strict=True):
-        out.append(_one_file(path, fact.rate_hz, fact.channels, before_s, total_s, on_progress))
+        out.append(_one_file(path, fact, before_s, total_s, on_progress))
         before_s += fact.frames / fact.rate_hz
     return out
 
 
 def _one_file(
-    path: Path, rate_hz: int, channels: int, before_s: float, total_s: float, on_progress: OnProgress
+    path: Path, facts: FileFacts, before_s: float, total_s: float, on_progress: OnProgress
 ) -> FileReading:
     """One pass over one file."""
+    rate_hz, channels = facts.rate_hz, facts.channels
     loudness, peaks = LoudnessMeter(rate_hz, channels), TruePeakMeter(rate_hz, channels)
     frames = repaired = 0
-    for block in file_blocks(path, round(BLOCK_S * rate_hz)):
+    for block in file_blocks(path, round(BLOCK_S * rate_hz), length=facts.frames):
         bad = repair(block)
         repaired += 0 if bad is None else int(np.count_nonzero(bad.any(axis=1)))
         loudness.push(block)

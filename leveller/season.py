@@ -69,10 +69,10 @@ def read_season(path: Path) -> Season:
         for a list that is not understood; the message names file and line
     """
     path = Path(os.path.abspath(path))
-    if path.is_dir():
+    if os.path.isdir(path):
         listed = path / SEASON_FILE
         return _from_toml(listed) if _names_episodes(listed) else _from_folder(path)
-    if not path.exists():
+    if not os.path.exists(path):
         raise InputError(f"{path}: no such file or folder")
     readers = {".toml": _from_toml, ".csv": _from_csv, ".tsv": _from_csv, ".txt": _from_csv}
     if path.suffix.lower() not in readers:

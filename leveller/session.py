@@ -171,17 +171,12 @@ def _located(sources: list[Path]) -> tuple[str, SessionFile, list[SourceFile], l
     first = sources[0]
     if len(sources) == 1 and first.suffix.lower() == ".toml":
         return _from_session_file(first)
-    try:
-        is_folder = first.is_dir()
-        has_file = is_folder and (first / SESSION_FILE).is_file()
-    except OSError as error:
-        raise InputError(f"{first}: cannot be read ({error.strerror})") from error
-    if len(sources) == 1 and is_folder:
-        if has_file:
+    if len(sources) == 1 and os.path.isdir(first):  # false, not an error, for a name that no folder can have
+        if os.path.isfile(first / SESSION_FILE):
             return _from_session_file(first / SESSION_FILE)
         return _folder_title(first), SessionFile(), _all_of(first), []
     for source in sources:
-        if source.is_dir() or source.suffix.lower() == ".toml":
+        if os.path.isdir(source) or source.suffix.lower() == ".toml":
             raise InputError(f"{source}: give one folder, one session.toml, or audio files only")
     title = first.stem if len(sources) == 1 else _folder_title(first.parent)
     return title, SessionFile(), [SourceFile(path, TrackEntry(str(path))) for path in sources], []
@@ -214,9 +209,10 @@ def _folder_title(folder: Path) -> str:
 def audio_files(folder: Path) -> list[Path]:
     """The audio files directly in a folder, by name."""
     try:
-        names = [path for path in folder.iterdir() if path.is_file()]
+        with os.scandir(folder) as entries:
+            names = [folder / entry.name for entry in entries if entry.is_file()]
     except OSError as error:
-        raise InputError(f"{folder}: cannot be listed ({error.strerror})") from None
+        raise InputError(f"{folder}: cannot be read ({error.strerror})") from None
     files = [path for path in names if not path.name.startswith(".") and path.suffix.lower() in AUDIO_SUFFIXES]
     return sorted(files, key=lambda path: (path.name.casefold(), path.name))
 

@@ -94,6 +94,15 @@ def claims_a_week(_: pytest.MonkeyPatch) -> None:
     flac_of(TALK / "Ana.flac", WEEK_S * RATE_HZ)
 
 
+def damaged_block(_: pytest.MonkeyPatch) -> None:
+    (TALK / "Ana.wav").unlink()
+    rng = np.random.default_rng(4)
+    soundfile.write(TALK / "Ana.flac", rng.normal(0, 0.05, 20 * RATE_HZ), RATE_HZ)
+    content = (TALK / "Ana.flac").read_bytes()
+    at = len(content) // 2
+    (TALK / "Ana.flac").write_bytes(content[:at] + bytes(50) + content[at + 50 :])
+
+
 def flac_of(path: Path, claimed_frames: int) -> None:
     """A FLAC of 1 s whose header claims so many frames (RFC 9639, 8.2: 36 bits, the last of them in bytes 21 to 25)."""
     soundfile.write(path, np.zeros(RATE_HZ, np.float32), RATE_HZ)
@@ -160,8 +169,14 @@ REFUSED: dict[str, Builder] = {
     "a file that may not be read": locked,
     "a folder that may not be read": locked_folder,
     "a name that no file can have": nothing,
+    "such a name as the second file": nothing,
+    "such a name for measure": nothing,
+    "such a name for finish": nothing,
+    "such a name for batch": nothing,
+    "such a name for settings": nothing,
     "a file shorter than its header says": half,
     "a FLAC that claims a week": claims_a_week,
+    "a FLAC with a damaged block": damaged_block,
     "a session longer than a day": late_by_a_day,
     "a rate out of range": slow_rate,
     "more than 128 channels": many_channels,
@@ -295,6 +310,7 @@ def safety_copy(_: pytest.MonkeyPatch) -> None:
 
 ACCEPTED: dict[str, Builder] = {
     "a file shorter than its header says, with `--accept-short`": half,
+    "a FLAC with a damaged block, with `--accept-short`": damaged_block,
     "NaN and Inf": broken_samples,
     "a silent track": silent_track,
     "no voice found at all": no_voice,

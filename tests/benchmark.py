@@ -1,5 +1,7 @@
 """What leveller costs, against copying the same files: `python tests/benchmark.py [--minutes 60] [--tracks 3]`.
 
+`--minutes 10 60 180 --tracks 1 3 8` measures every pair of them, one row each.
+
 Material: a simulated conversation of the development voices (`conversations.py`), tiled to length, 48 kHz / 24 bit.
 Yardstick: one thread copies the files block by block through soundfile (all tracks read; as many stems and a mono mix
 written, PCM_24). Both run in turn as processes of their own; wall and CPU seconds and peak memory are the operating
@@ -14,6 +16,7 @@ from __future__ import annotations
 
 import argparse
 import os
+import shutil
 import subprocess
 import sys
 import tempfile
@@ -105,11 +108,43 @@ def cost_of(command: list[str]) -> Cost:
     return Cost(time.perf_counter() - start, usage.ru_utime + usage.ru_stime, peak)
 
 
-def season(room: Path, paths: list[str], episodes: int, runs: int) -> None:
+def paired(room: Path, paths: list[str]) -> tuple[Cost, Cost]:
+    """Copying the files, then processing them; what was written is gone afterwards."""
+    (room / "copy").mkdir()
+    copy = cost_of([sys.executable, "-c", COPY, str(room / "copy"), *paths])
+    shutil.rmtree(room / "copy")
+    own = cost_of([sys.executable, "-m", "leveller", "process", *paths, "--out", str(room / "out"), "--quiet"])
+    shutil.rmtree(room / "out")
+    return copy, own
+
+
+def row(minutes: float, tracks: int, runs: int) -> str:
+    """One row of the table: medians of some runs."""
+    with tempfile.TemporaryDirectory() as folder:
+        room = Path(folder)
+        with ProcessPoolExecutor(1, mp_context=get_context("spawn")) as apart:  # its memory must not count as theirs
+            paths = [str(path) for path in apart.submit(material, room, minutes, tracks).result()]
+        costs = [paired(room, paths) for _ in range(runs)]
+    wall, cpu = np.median([(own.wall_s / copy.wall_s, own.cpu_s / copy.cpu_s) for copy, own in costs], axis=0)
+    copy_s, wall_s, cpu_s = np.median([(copy.wall_s, own.wall_s, own.cpu_s) for copy, own in costs], axis=0)
+    peak_mb = max(own.peak_mb for _, own in costs)
+    return (f"| {minutes:g} min x {tracks} | {copy_s:.1f} | {wall_s:.1f} | {cpu_s:.1f} | {peak_mb:.0f} | {wall:.2f} | "
+            f"{cpu:.2f} |")
+
+
+def stages(minutes: float, tracks: int) -> None:
+    """The stages of one run from inside."""
+    with tempfile.TemporaryDirectory() as folder:
+        room = Path(folder)
+        paths = [str(path) for path in material(room, minutes, tracks)]
+        subprocess.run([sys.executable, "-c", STAGES, str(room / "out"), *paths], check=True, env=ENVIRONMENT)
+
+
+def season(room: Path, paths: list[Path], episodes: int, runs: int) -> None:
     """Print what a second job brings, beside what a second processor brings to a mere loop."""
     listed = room / "season.csv"
-    listed.write_text("session\n" + f"{Path(paths[0]).parent}\n" * episodes)
-    print(f"{episodes} episodes\n{'':10s} {'wall s':>8s} {'CPU s':>8s}")
+    listed.write_text("session\n" + f"{paths[0].parent}\n" * episodes)
+    print(f"{episodes} episodes; load {os.getloadavg()[0]:.1f}\n{'':10s} {'wall s':>8s} {'CPU s':>8s}")
     gains = []
     for _ in range(runs):
         alone, both = gain_of_a_processor()
@@ -117,7 +152,7 @@ def season(room: Path, paths: list[str], episodes: int, runs: int) -> None:
         for jobs in (1, 2):
             costs.append(cost_of([sys.executable, "-m", "leveller", "batch", str(listed), "--out", str(room / "out"),
                                   "--jobs", str(jobs), "--quiet"]))
-            subprocess.run(["rm", "-rf", str(room / "out")], check=True)
+            shutil.rmtree(room / "out")
             print(f"{f'--jobs {jobs}':10s} {costs[-1].wall_s:8.2f} {costs[-1].cpu_s:8.2f}", flush=True)
         gains.append((costs[0].wall_s / costs[1].wall_s, alone / both))
     two, machine = np.median(gains, axis=0)
@@ -140,39 +175,27 @@ def gain_of_a_processor() -> tuple[float, float]:
 def main() -> None:
     """Print the table."""
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
-    parser.add_argument("--minutes", type=float, default=60)
-    parser.add_argument("--tracks", type=int, default=3)
+    parser.add_argument("--minutes", type=float, nargs="+", default=[60])
+    parser.add_argument("--tracks", type=int, nargs="+", default=[3])
     parser.add_argument("--runs", type=int, default=3)
     parser.add_argument("--stages", action="store_true")
     parser.add_argument("--season", type=int, metavar="N", help="a batch of N episodes instead, one job against two")
-    parser.add_argument("--keep", type=Path, metavar="DIR", help="where the material stays for the next run")
+    parser.add_argument("--keep", type=Path, metavar="DIR", help="with --season: the material stays in DIR")
     asked = parser.parse_args()
-    with tempfile.TemporaryDirectory() as folder:
-        room = Path(folder)
-        talk = asked.keep / f"{asked.minutes:g} min of {asked.tracks}" if asked.keep else room / "talk"
-        with ProcessPoolExecutor(1, mp_context=get_context("spawn")) as apart:  # its memory must not count as theirs
-            paths = [str(path) for path in apart.submit(material, talk, asked.minutes, asked.tracks).result()]
-        load, processors = os.getloadavg()[0], os.cpu_count()
-        print(f"{asked.minutes:g} min, {asked.tracks} tracks; load {load:.1f}, {processors} processors")
-        if asked.season:
-            season(room, paths, asked.season, asked.runs)
-            return
-        (room / "copy").mkdir()
-        if asked.stages:
-            subprocess.run([sys.executable, "-c", STAGES, str(room / "out"), *paths], check=True, env=ENVIRONMENT)
-            return
-        print(f"{'':10s} {'wall s':>8s} {'CPU s':>8s} {'peak MB':>8s}")
-        ratios = []
-        for _ in range(asked.runs):
-            copy = cost_of([sys.executable, "-c", COPY, str(room / "copy"), *paths])
-            own = cost_of([sys.executable, "-m", "leveller", "process", *paths, "--out", str(room / "out"), "--replace",
-                           "--quiet"])
-            subprocess.run(["rm", "-rf", str(room / "out")], check=True)  # nothing kept for the next run
-            ratios.append((own.wall_s / copy.wall_s, own.cpu_s / copy.cpu_s))
-            for name, cost in (("copy", copy), ("leveller", own)):
-                print(f"{name:10s} {cost.wall_s:8.2f} {cost.cpu_s:8.2f} {cost.peak_mb:8.0f}", flush=True)
-        wall, cpu = np.median(ratios, axis=0)
-        print(f"{'ratio':10s} {wall:8.2f} {cpu:8.2f}   median of {asked.runs}")
+    if asked.season:
+        with tempfile.TemporaryDirectory() as folder:
+            talk = (asked.keep or Path(folder)) / f"{asked.minutes[0]:g} min of {asked.tracks[0]}"
+            season(Path(folder), material(talk, asked.minutes[0], asked.tracks[0]), asked.season, asked.runs)
+        return
+    if asked.stages:
+        stages(asked.minutes[0], asked.tracks[0])
+        return
+    print(f"medians of {asked.runs}; load {os.getloadavg()[0]:.1f}, {os.cpu_count()} processors\n")
+    print("| session | copy s | wall s | CPU s | peak MB | wall / copy | CPU / copy's |")
+    print("|---|--:|--:|--:|--:|--:|--:|")
+    for minutes in asked.minutes:
+        for tracks in asked.tracks:
+            print(row(minutes, tracks, asked.runs), flush=True)
 
 
 if __name__ == "__main__":

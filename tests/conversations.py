@@ -51,6 +51,7 @@ class ConversationSpec:
     overlap_share: float = 0.12  # of speech during which somebody else speaks too
     gap_s: float = 0.2  # mean gap between turns
     short_answers_per_min: float = 5.0
+    spoken_answers: float = 0.0  # share of them that are words; the others are an "mm"
     breath_share: float = 0.8  # phrases that may have a breath before them
     laughs_per_min: float = 0.7
     coughs_per_min: float = 0.3

@@ -129,6 +129,13 @@ def short_answer(rng: np.random.Generator, pitch_hz: float) -> np.ndarray:
     return at_level(faded(hum + 0.02 * rng.standard_normal(frames), 0.05, 0.1), -10.0)
 
 
+def spoken_answer(rng: np.random.Generator, phrases: list[np.ndarray]) -> np.ndarray:
+    """The beginning of a phrase, a word or two, 2 to 10 dB softer than speech."""
+    frames = int(rng.uniform(0.25, 0.8) * RATE_HZ)
+    dry = phrases[int(rng.integers(len(phrases)))][:frames]
+    return faded(dry / active_level(dry), 0.005, 0.05) * 10 ** (rng.uniform(-10, -2) / 20)
+
+
 def whisper(rng: np.random.Generator, phrase: np.ndarray) -> np.ndarray:
     """The phrase with noise for a source, 12 dB softer."""
     size, step = 512, 128

@@ -24,6 +24,7 @@ EXACT = {  # lossless formats: one step of the coarser of float32 and the file's
     ("WAV", "DOUBLE"): 0.0, ("WAVEX", "PCM_24"): 2.0**-23, ("RF64", "PCM_24"): 2.0**-23, ("AIFF", "PCM_16"): 2.0**-15,
     ("AIFF", "PCM_24"): 2.0**-23, ("FLAC", "PCM_16"): 2.0**-15, ("FLAC", "PCM_24"): 2.0**-23,
 }
+FLAC_BLOCK_FRAMES = 4096  # of libsndfile's encoder; what one block of a file by it holds
 SUFFIX = {
     "WAV": ".wav", "WAVEX": ".wav", "RF64": ".wav", "AIFF": ".aiff", "FLAC": ".flac", "OGG": ".ogg", "MP3": ".mp3"}
 
@@ -251,6 +252,29 @@ def test_truncated_file_is_refused_or_taken_short(tmp_path: Path, form: str, sub
     y = read_all(track, [facts.frames])
     if form != "MP3":
         assert np.max(np.abs(y - noise(96_000)[: facts.frames])) <= 2.0**-15
+
+
+@pytest.mark.parametrize("channels", [1, 2])
+def test_damaged_flac_is_taken_up_to_the_damaged_block(tmp_path: Path, channels: int) -> None:
+    """Of what lies before a block that cannot be decoded at most a frame is lost, and the rest reads as it was."""
+    path, x = tmp_path / "x.flac", noise(400_000, channels)
+    soundfile.write(path, x, RATE_HZ, "PCM_24")
+    whole = path.read_bytes()
+    lost = []
+    for at in np.random.default_rng(7).integers(len(whole) // 10, len(whole) - 100, 12):
+        path.write_bytes(whole[:at] + bytes(50) + whole[at + 50 :])
+        facts = audio.probe(path, accept_short=True)
+        begins = facts.frames + 1
+        assert begins % FLAC_BLOCK_FRAMES == 0  # the frame that is missing is the last of its block
+        assert abs(at / len(whole) - begins / len(x)) < 2 * FLAC_BLOCK_FRAMES / len(x)
+        track = Source("x", path, frames=facts.frames, source_frames=facts.frames, channels=tuple(range(channels)),
+                       width=channels)
+        lost.append(float(np.max(np.abs(read_all(track, [facts.frames]) - x[: facts.frames]))))
+        assert len(list(audio.pieces(audio.parts_of(track), [facts.frames - 100], frames=RATE_HZ))) == 1
+        with pytest.raises(InputError, match=r"cannot be read .*--accept-short$"):
+            list(audio.file_blocks(path, RATE_HZ))
+        assert sum(map(len, audio.file_blocks(path, RATE_HZ, length=facts.frames))) == facts.frames
+    assert max(lost) <= 2.0**-23
 
 
 def test_files_that_cannot_be_used_are_refused_with_the_reason(tmp_path: Path) -> None:

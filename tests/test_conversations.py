@@ -87,6 +87,23 @@ def test_lapels_hear_everybody_almost_alike():
         assert 3 <= lead_db <= 6
 
 
+def test_short_answers_can_be_words():
+    """All of them then last 0.25 to 0.8 s, 2 to 10 dB softer than speech, and are brighter than an "mm"."""
+    def answers(spoken_answers: float) -> list[np.ndarray]:
+        said = script(ConversationSpec(seconds=120.0, short_answers_per_min=20.0, spoken_answers=spoken_answers))
+        return [s.dry for s in said if s.kind == "short answer"]
+
+    def brightness(dry: np.ndarray) -> float:
+        return float(np.mean(np.diff(dry) ** 2) / np.mean(dry**2))
+
+    words, hums = answers(1.0), answers(0.0)
+    assert min(len(words), len(hums)) > 5
+    for dry in words:
+        assert 0.25 <= len(dry) / sounds.RATE_HZ <= 0.8
+        assert -11 < 20 * np.log10(sounds.active_level(dry)) < -1
+    assert np.median([brightness(d) for d in words]) > 3 * np.median([brightness(d) for d in hums])
+
+
 @pytest.mark.parametrize("share", [0.0, 0.12])
 def test_the_share_of_overlapped_speech_is_about_what_was_asked_for(share):
     """Over four minutes the overlap lies within 4 percentage points of the spec."""

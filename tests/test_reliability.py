@@ -83,12 +83,16 @@ def test_listened_counts() -> None:
     made = truth(-20.0, -40.0)
     cut_db = np.where(made.heard, 0.0, 18.0)
     cut_db[20:40, 0] = cut_db[100:110, 0] = 18.0
-    cut_db[150:152, 0] = 18.0  # too short for a word
+    cut_db[150:155, 0] = 18.0  # too short for a word
+    cut_db[160:162, 0] = 18.0  # too short for anything but wrong time
     places = [Place(0.1, 0.6, "a", "bleed", "own", "", 0.5), Place(0.9, 1.2, "b", "bleed", "own", "", 0.4)]
     found = listened(cut_db, places, ["a", "b"], made)
-    assert (found.words, found.words_named, found.wrong_hops, found.wrong_hops_named) == (2, 1, 32, 20)
+    assert (found.words.all, found.words.named) == (2, 1)
+    assert (found.slivers.all, found.slivers.named) == (3, 1)
+    assert (found.wrong_hops.all, found.wrong_hops.named) == (37, 20)
+    assert (found.collared_hops.all, found.collared_hops.named) == (32, 15)  # the first 25 hops lie near an edge
     assert (found.asked_hops, found.hops) == (80, 400)
-    assert 0 < found.random_words_named < 1
+    assert 0 < found.words.random < 1
 
 
 def test_si_sdr_is_that_of_the_definition() -> None:

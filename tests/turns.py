@@ -48,6 +48,7 @@ class Habits:
     laughs_per_min: float
     coughs_per_min: float
     whisper_share: float
+    spoken_answers: float = 0.0
 
 
 class Talk:
@@ -140,7 +141,10 @@ class Talk:
         if not listeners:
             return
         who = int(self.rng.choice(listeners))
-        dry = sounds.short_answer(self.rng, self.voices[who].pitch_hz)
+        if self.habits.spoken_answers and self.rng.random() < self.habits.spoken_answers:
+            dry = sounds.spoken_answer(self.rng, self.voices[who].phrases)
+        else:
+            dry = sounds.short_answer(self.rng, self.voices[who].pitch_hz)
         start = at + int(self.rng.uniform(0.2, 0.6) * frames)
         if start > self.free[who] and start + len(dry) < at + frames:
             self.sounds.append(Sound("short answer", who, start, dry))

@@ -27,7 +27,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from leveller.attribute.bleed import CLIP, Evidence, evidence_of
+from leveller.attribute.bleed import CLIP, Evidence, Half, evidence_of
 from leveller.attribute.coupling import NONE_DB, Coupling, estimate_coupling
 from leveller.attribute.decode import margins
 from leveller.attribute.floor import floor_of, noise_floor, quietest_db
@@ -66,6 +66,9 @@ class Activity:
     floor_db: Grid  # (seconds, tracks, bands) noise
     coupling: Coupling
     programme: Bools  # (hops,) False in skipped stretches and steady tone
+    score: Half  # (hops, tracks) nats a band for own voice, as far as levels say
+    standing_out_db: Half  # (hops, tracks) `own_to_bleed_db` of the bands that stand out most
+    bright_db: Half  # (hops, tracks) `own_to_bleed_db` of the high bands less that of the lowest
     steps: tuple[Step, ...] = ()  # recording gains that were turned
 
 
@@ -96,13 +99,15 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
         labels = _relabelled(evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail), near_voice, seeds)
     coupling = estimate_coupling(m.levels, floor_db, labels, lags)
-    evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail)
+    evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail, details=True)
     voice = without_knocks(with_leads(evidence, m.arrivals, coupling), m.levels)
     margin = margins(np.where(programme[:, None], voice, 0))
     own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)
     return Activity(
         own=own, bleed=_bleed(own, evidence), margin=margin, own_to_bleed_db=evidence.own_to_bleed_db,
         audible_db=evidence.audible_db, floor_db=floor_db, coupling=coupling, programme=programme,
+        score=evidence.score.astype(np.float16), standing_out_db=evidence.standing_out_db,
+        bright_db=evidence.bright_db,
         steps=tuple(knob_steps(quiet_db, level_to_db(m.voice_levels), own)))
 
 
@@ -110,10 +115,12 @@ def _nobody(m: Measurements, programme: Bools) -> Activity:
     """A session without a single voice track."""
     hops, tracks, bands = m.levels.shape
     nothing, level = np.zeros((hops, tracks), np.bool_), np.zeros((hops, tracks), np.float32)
+    half = np.zeros((hops, tracks), np.float16)
     coupling = Coupling(np.full((1, tracks, tracks, bands), NONE_DB, np.float32), np.zeros(tracks, np.int64))
     return Activity(
         own=nothing, bleed=nothing, margin=level - CLIP, own_to_bleed_db=level, audible_db=level,
-        floor_db=noise_floor(m.levels), coupling=coupling, programme=programme)
+        floor_db=noise_floor(m.levels), coupling=coupling, programme=programme, score=half, standing_out_db=half,
+        bright_db=half)
 
 
 def _spread_out(found: Activity, voices: list[int], floor_db: Grid) -> Activity:
@@ -133,6 +140,7 @@ def _spread_out(found: Activity, voices: list[int], floor_db: Grid) -> Activity:
         own=wide(found.own, False), bleed=wide(found.bleed, False), margin=wide(found.margin, -CLIP),
         own_to_bleed_db=wide(found.own_to_bleed_db, 0), audible_db=wide(found.audible_db, 0), floor_db=floor_db,
         coupling=Coupling(local, heard), programme=found.programme,
+        score=wide(found.score, 0), standing_out_db=wide(found.standing_out_db, 0), bright_db=wide(found.bright_db, 0),
         steps=tuple(replace(step, track=voices[step.track]) for step in found.steps))
 
 

@@ -21,6 +21,7 @@ Interspeech 2006); sources from an interference matrix (E. Kokkinis et al., 2012
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -43,11 +44,17 @@ LEANING = 0.44  # nats: in doubt, open
 CLIP = 1.5  # nats a hop can say at most
 AUDIBLE_DB = 8.0  # a hop that stands less over the noise says proportionally less
 NARROW_BANDS = 4  # 180 to 650 Hz: an "mm" fills no others and drowns in the mean of all
+STANDING_OUT_BANDS = 3  # a voice under another one fills some bands of its own
+BRIGHT_FROM_BAND = 8  # 1.5 kHz and up
+LOW_BANDS = 3  # 180 to 510 Hz
 NARROW_WORTH = 6.0  # nats a nat of their mean (measured)
 RATIO_SPAN_DB = (-6.0, 20.0)
 _TABLE_STEP_DB = 1 / 16
 
+DETAILS = ("standing_out_db", "bright_db")
+
 Grid = npt.NDArray[np.float32]
+Half = npt.NDArray[np.float16]
 
 
 @dataclass(frozen=True)
@@ -59,9 +66,13 @@ class Evidence:
     narrow: Grid  # (hops, tracks) the same of the lowest bands alone, one hop
     own_to_bleed_db: Grid  # (hops, tracks) mean over bands of level over predicted bleed plus noise
     audible_db: Grid  # (hops, tracks) mean over bands of level over noise, clipped to 0 .. 20
+    standing_out_db: Half  # (hops, tracks) `own_to_bleed_db` of the bands that stand out most; zero without `details`
+    bright_db: Half  # (hops, tracks) the same of the high bands less that of the lowest; zero without `details`
 
 
-def evidence_of(levels: Levels, floor_db: Grid, coupling: Coupling, *, tail_db_per_hop: float) -> Evidence:
+def evidence_of(
+    levels: Levels, floor_db: Grid, coupling: Coupling, *, tail_db_per_hop: float, details: bool = False
+) -> Evidence:
     """Evidence of all hops.
 
     Parameters
@@ -70,9 +81,13 @@ def evidence_of(levels: Levels, floor_db: Grid, coupling: Coupling, *, tail_db_p
     floor_db : shape=(seconds, tracks, bands)
     tail_db_per_hop : float
         How fast the room decays.
+    details : bool
+        Also what only the search for doubtful places asks for.
     """
     hops, tracks, _ = levels.shape
-    out = {name: np.zeros((hops, tracks), np.float32) for name in Evidence.__dataclass_fields__ if name != "own"}
+    out: dict[str, npt.NDArray[Any]] = {
+        name: np.zeros((hops, tracks), np.float16 if name in DETAILS else np.float32)
+        for name in Evidence.__dataclass_fields__ if name != "own"}
     tail = np.zeros(levels.shape[1:], np.float32)
     table = _likelihood_table()
     for block, start in enumerate(range(0, hops, STEP_HOPS)):
@@ -82,7 +97,9 @@ def evidence_of(levels: Levels, floor_db: Grid, coupling: Coupling, *, tail_db_p
         predicted = (_predicted_late(levels, floor_db, coupling, block, rows) if coupling.lags.any()
                      else _predicted(level_db, noise_db, coupling, block))
         bleed, tail = _held(predicted, tail, tail_db_per_hop)
-        _describe({name: grid[rows] for name, grid in out.items()}, level_db, noise_db, bleed, table)
+        ratio_db = _describe({name: grid[rows] for name, grid in out.items()}, level_db, noise_db, bleed, table)
+        if details:
+            _describe_doubt(out["standing_out_db"][rows], out["bright_db"][rows], ratio_db)
     score = _three(out["score"])
     out["score"] = score
     weight = np.clip(out["audible_db"] / np.float32(AUDIBLE_DB), 0, 1)
@@ -149,8 +166,10 @@ def _held(bleed: Grid, before: Grid, decay_db: float) -> tuple[Grid, Grid]:
     return out, before
 
 
-def _describe(out: dict[str, Grid], level_db: Grid, noise_db: Grid, bleed: Grid, table: Grid) -> None:
-    """Fill one block of every grid."""
+def _describe(
+    out: dict[str, npt.NDArray[Any]], level_db: Grid, noise_db: Grid, bleed: Grid, table: Grid
+) -> Grid:
+    """Fill one block of every grid; returns the ratio of every band."""
     noise = _power(noise_db)
     expected_db = _db(bleed * np.float32(10 ** (SAFETY_DB / 10)) + noise)
     ratio_db = level_db - expected_db
@@ -161,6 +180,14 @@ def _describe(out: dict[str, Grid], level_db: Grid, noise_db: Grid, bleed: Grid,
     out["narrow"][:] = nats[:, :, :NARROW_BANDS].mean(axis=2)
     out["own_to_bleed_db"][:] = ratio_db.mean(axis=2)
     out["audible_db"][:] = np.clip(level_db - noise_db, 0, 20).mean(axis=2)
+    return ratio_db
+
+
+def _describe_doubt(standing_out_db: Half, bright_db: Half, ratio_db: Grid) -> None:
+    """Fill one block of the details."""
+    bright_db[:] = ratio_db[:, :, BRIGHT_FROM_BAND:].mean(axis=2) if ratio_db.shape[2] > BRIGHT_FROM_BAND else 0
+    bright_db -= ratio_db[:, :, :LOW_BANDS].mean(axis=2).astype(np.float16)
+    standing_out_db[:] = np.sort(ratio_db, axis=2)[:, :, -STANDING_OUT_BANDS:].mean(axis=2)
 
 
 def _likelihood_table() -> Grid:

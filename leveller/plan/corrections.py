@@ -67,6 +67,15 @@ def closed_by_hand(session: Session, track: int, hops: int) -> Bools:
     return out
 
 
+def decided_by_hand(session: Session, track: int, hops: int) -> Bools:
+    """Hops that the editor has decided, whichever way, shape=(hops,)."""
+    out = np.zeros(hops, np.bool_)
+    for correction in session.corrections:
+        if correction.decide is not None and _index(correction, session) == track:
+            out[_hops_of(correction)] = True
+    return out
+
+
 def corrected_curves(
     curves: Sequence[Nodes], own: Bools, open_: Bools, session: Session, ranges_db: Sequence[float]
 ) -> list[Nodes]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -67,9 +68,9 @@ def _said(session: Path | None) -> SessionFile:
     """What the session's file says, nothing without one."""
     if session is None:
         return SessionFile()
-    if not session.exists():
+    if not os.path.exists(session):
         raise InputError(f"{session}: no such file or folder")
-    file = session / SESSION_FILE if session.is_dir() else session
+    file = session / SESSION_FILE if os.path.isdir(session) else session
     if file.suffix.lower() != ".toml":
         raise InputError(f"{session}: expected a folder or a session.toml")
     said = read_session_file(file) if file.exists() else SessionFile()

@@ -105,3 +105,18 @@ def test_a_voice_heard_too_little_explains_nothing() -> None:
     known = coupling_of(MATRIX)
     found = evidence_of(levels, floor, Coupling(known.local_db, np.array([14, 500, 500])), tail_db_per_hop=0.8)
     assert (found.own[INSIDE] > 1).all()
+
+
+def test_details_tell_which_bands_stand_out() -> None:
+    """Three low bands with own voice stand out, high ones do not; nothing is told unasked, or changed by it."""
+    levels = recorded(MATRIX, [-np.inf, VOICE_DB, -np.inf])
+    levels[INSIDE, 0, :3] += round(9 / STEP_DB)
+    floor = np.full((HOPS // 100, 3, BANDS), FLOOR_DB, np.float32)
+    without, found = (evidence_of(levels, floor, coupling_of(MATRIX), tail_db_per_hop=0.8, details=details)
+                      for details in (False, True))
+    assert not without.standing_out_db.any()
+    assert not without.bright_db.any()
+    assert np.array_equal(without.own, found.own)
+    beside = found.own_to_bleed_db[INSIDE, 0]
+    assert np.median(found.standing_out_db[INSIDE, 0] - beside) == pytest.approx(9 * 11 / 14, abs=0.3)
+    assert np.median(found.bright_db[INSIDE, 0]) == pytest.approx(-9, abs=0.3)

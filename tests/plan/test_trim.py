@@ -87,11 +87,12 @@ def test_pauses_within_speech_do_not_count() -> None:
 def activity_of(own: np.ndarray, audible_db: float = 15.0) -> Activity:
     """Who speaks, as clearly audible as said; the last ten hops are no programme."""
     hops, tracks = own.shape
-    grid = np.zeros(own.shape, np.float32)
+    grid, half = np.zeros(own.shape, np.float32), np.zeros(own.shape, np.float16)
     return Activity(
         own=own, bleed=~own, margin=grid, own_to_bleed_db=grid, audible_db=grid + np.float32(audible_db),
         floor_db=np.zeros((-(-hops // 100), tracks, 14), np.float32), programme=np.arange(hops) < hops - 10,
-        coupling=Coupling(np.zeros((1, tracks, tracks, 14), np.float32), np.full(tracks, 500)))
+        coupling=Coupling(np.zeros((1, tracks, tracks, 14), np.float32), np.full(tracks, 500)),
+        score=half, standing_out_db=half, bright_db=half)
 
 
 @pytest.mark.parametrize(("alone", "counted"), [(199, 299), (200, 200)])
