@@ -29,7 +29,7 @@ Kind = Literal["float32", "pcm24", "pcm16"]
 
 BITS = {"float32": 32, "pcm24": 24, "pcm16": 16}
 PCM, IEEE_FLOAT = 1, 3  # format tags
-DECODED_FRAMES = 1 << 14  # at a time: what is worked on stays in the second-level cache
+DECODED_FRAMES = 1 << 16  # at a time: what is worked on stays in the second-level cache
 HEADER_BYTES = 1 << 20  # room for all chunks but the audio (cue points, text) when the size of a file is judged
 
 

@@ -31,7 +31,7 @@ from leveller.measure.voice import VoiceMeter
 from leveller.session import Session, Track
 from leveller.units import Bools, frames_to_hops
 
-BLOCK_S = 2.0
+BLOCK_S = 8.0
 OnProgress = Callable[[str, float, float], None]  # stage, done, total (seconds of programme)
 
 

@@ -25,7 +25,7 @@ WINDOW = 320
 EDGES_HZ = (180, 280, 390, 510, 650, 810, 1000, 1230, 1510, 1850, 2270, 2800, 3600, 4900, 7000)
 BANDS = len(EDGES_HZ) - 1
 RUMBLE_HZ = (50, 180)  # thumps, plosives and hum live here
-_PIECE_HOPS = 100
+_PIECE_HOPS = 400
 
 
 def bands_within(rate_hz: int) -> int:

@@ -32,6 +32,7 @@ CLIPPED_FRAMES = 3  # common practice, no source: fewer in a row may be a chance
 CLIPPED_MERGE_S = 0.2  # a choice of ours: clipped runs closer than this are one place to listen to
 INTERPOLATOR_TAPS = 49  # libebur128
 _GROUP_FRAMES = 12  # groups of about this many frames cost least in product and maxima (measured: 8 to 16 alike)
+_PIECE_S = 4  # a piece of sample peak: few calls, so that threads seldom wait for each other
 PIECE_CELLS = 256  # a piece of true peak, about 0.26 s: its buffers stay in the second-level cache
 
 
@@ -68,7 +69,7 @@ class PeakMeter:
     def __init__(self, rate_hz: int, channels: int, *, float_source: bool = False) -> None:
         self._rate_hz = rate_hz
         self._ceiling = 1.0 if float_source else math.inf
-        self._pieces = Pieces(rate_hz, channels, before=CLIPPED_FRAMES - 1)
+        self._pieces = Pieces(_PIECE_S * rate_hz, channels, before=CLIPPED_FRAMES - 1)
         self._frames = 0
         self._peak = (0.0, 0)
         self._sum = np.zeros(channels)
@@ -96,11 +97,11 @@ class PeakMeter:
         """Peak and sum with this piece, and the clipped runs in it."""
         own = piece[:, CLIPPED_FRAMES - 1 :]
         total = self._sum + own.sum(axis=1, dtype=np.float64)
-        highest = float(max(own.max(), -own.min()))
+        highest = float(max(piece.max(), -piece.min()))  # the frames before its own are in the peak already
         peak = self._peak
         if highest > peak[0]:
             peak = highest, self._frames + int((np.abs(own) == np.float32(highest)).any(axis=0).argmax())
-        return peak, total, self._clipped(piece) if float(np.abs(piece).max()) >= FULL_SCALE else []
+        return peak, total, self._clipped(piece) if highest >= FULL_SCALE else []
 
     def _clipped(self, piece: Piece) -> list[tuple[int, int]]:
         """Runs of three or more frames at full scale on one side, as absolute (first, end) frames."""

@@ -34,7 +34,7 @@ from leveller.settings import Delivery, Limiter
 Samples = npt.NDArray[np.float32]
 OnProgress = Callable[[str, float, float], None]
 
-BLOCK_S = 2.0
+BLOCK_S = 8.0
 LOUDNESS_SLACK_LU = 0.03
 PEAK_SLACK_DB = 0.0005
 MOST_ROUNDS = 4
