@@ -125,7 +125,9 @@ def process(
     with folder, second_thread() as second:
         session, measurements = _measured([folder.path], session, align, on_progress)
         beside = _begun(second, session, measurements, align)
+        keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
         activity = attribute(measurements, session)
+        measurements = measurements.without_bands()
         session = _with_table(session, activity, corrections, align)
         plan = make_plan(measurements, activity, session)
         result = _delivered(folder, session, measurements, activity, plan, stems, mark, beside, on_progress)
@@ -189,7 +191,9 @@ def render_again(
         if measurements is None:
             session, measurements = _measured(homes, session, align, on_progress)
         beside = _begun(second, session, measurements, align)
+        keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
         activity = attribute(measurements, session)
+        measurements = measurements.without_bands()
         session = _with_table(session, activity, corrections, align)
         if written is None:
             planned = make_plan(measurements, activity, session)
@@ -326,7 +330,6 @@ def _delivered(
     report = write_tables(folder, result)
     write_page(folder.file("report.html"), result, places, summary_blocks(report))
     keep_rows(folder.file(ROWS_FILE), plan, session)
-    keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
     return result
 
 

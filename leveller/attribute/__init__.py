@@ -94,6 +94,7 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
     tail = tail_db_per_hop(m.levels, floor_db)
     lags = find_lags(audible_db, labels_by_level(m, audible_db, programme))
     labels = seeds = first_labels(m, audible_db, programme)
+    del audible_db  # 4 bytes a hop and track, as is all that is freed here
     near_voice = programme[:, None] & _near(m.voiced)
     for _ in range(ROUNDS - 1):
         coupling = estimate_coupling(m.levels, floor_db, labels, lags)
@@ -101,7 +102,9 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
     coupling = estimate_coupling(m.levels, floor_db, labels, lags)
     evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail, details=True)
     voice = without_knocks(with_leads(evidence, m.arrivals, coupling), m.levels)
-    margin = margins(np.where(programme[:, None], voice, 0))
+    voice[~programme] = 0
+    margin = margins(voice)
+    del voice
     own = (margin > 0) & _near(evidence.audible_db > HEARD_DB)
     return Activity(
         own=own, bleed=_bleed(own, evidence), margin=margin, own_to_bleed_db=evidence.own_to_bleed_db,
@@ -146,8 +149,11 @@ def _spread_out(found: Activity, voices: list[int], floor_db: Grid) -> Activity:
 
 def _near(flags: Bools) -> Bools:
     """Flags widened by `NEAR_HOPS` either way along the first axis: a word's soft end belongs to the word."""
-    total = np.cumsum(np.pad(flags, ((NEAR_HOPS + 1, NEAR_HOPS), (0, 0))), axis=0)
-    return np.asarray(total[2 * NEAR_HOPS + 1 :] > total[: -2 * NEAR_HOPS - 1])
+    out = np.empty_like(flags)
+    for track in range(flags.shape[1]):  # one by one: a sum takes four bytes a hop
+        total = np.cumsum(np.pad(flags[:, track], (NEAR_HOPS + 1, NEAR_HOPS)), dtype=np.int32)
+        out[:, track] = total[2 * NEAR_HOPS + 1 :] > total[: -2 * NEAR_HOPS - 1]
+    return out
 
 
 def _skipped(hops: int, session: Session) -> Bools:
@@ -188,5 +194,5 @@ def _relabelled(evidence: Evidence, voiced: Bools, seeds: Labels) -> Labels:
 
 def _bleed(own: Bools, evidence: Evidence) -> Bools:
     """Not own, and somebody else's voice is decided or audible here."""
-    others = (own.sum(axis=1, keepdims=True) - own) > 0
+    others = own.sum(axis=1, dtype=np.int16)[:, None] > own
     return np.asarray(~own & (others | (evidence.audible_db > HEARD_DB)))

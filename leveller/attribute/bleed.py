@@ -63,7 +63,6 @@ class Evidence:
 
     own: Grid  # (hops, tracks) nats in favour of own voice, clipped, weighted by audibility
     score: Grid  # (hops, tracks) mean log-likelihood ratio of a band, unclipped
-    narrow: Grid  # (hops, tracks) the same of the lowest bands alone, one hop
     own_to_bleed_db: Grid  # (hops, tracks) mean over bands of level over predicted bleed plus noise
     audible_db: Grid  # (hops, tracks) mean over bands of level over noise, clipped to 0 .. 20
     standing_out_db: Half  # (hops, tracks) `own_to_bleed_db` of the bands that stand out most; zero without `details`
@@ -87,7 +86,7 @@ def evidence_of(
     hops, tracks, _ = levels.shape
     out: dict[str, npt.NDArray[Any]] = {
         name: np.zeros((hops, tracks), np.float16 if name in DETAILS else np.float32)
-        for name in Evidence.__dataclass_fields__ if name != "own"}
+        for name in (*Evidence.__dataclass_fields__, "narrow") if name != "own"}  # narrow: the lowest bands' score
     tail = np.zeros(levels.shape[1:], np.float32)
     table = _likelihood_table()
     for block, start in enumerate(range(0, hops, STEP_HOPS)):
@@ -100,12 +99,15 @@ def evidence_of(
         ratio_db = _describe({name: grid[rows] for name, grid in out.items()}, level_db, noise_db, bleed, table)
         if details:
             _describe_doubt(out["standing_out_db"][rows], out["bright_db"][rows], ratio_db)
-    score = _three(out["score"])
-    out["score"] = score
-    weight = np.clip(out["audible_db"] / np.float32(AUDIBLE_DB), 0, 1)
-    wide = np.float32(INDEPENDENT) * score + np.float32(LEANING)
-    narrow = np.float32(NARROW_WORTH) * _three(out["narrow"])
-    own = np.clip(np.maximum(wide, narrow), -CLIP, CLIP) * weight
+    own = np.empty((hops, tracks), np.float32)
+    narrow = out.pop("narrow")
+    for track in range(tracks):  # one by one, so that what is needed in between stays small
+        score = _three(out["score"][:, track])
+        weight = np.clip(out["audible_db"][:, track] / np.float32(AUDIBLE_DB), 0, 1)
+        wide = np.float32(INDEPENDENT) * score + np.float32(LEANING)
+        low = np.float32(NARROW_WORTH) * _three(narrow[:, track])
+        own[:, track] = np.clip(np.maximum(wide, low), -CLIP, CLIP) * weight
+        out["score"][:, track] = score
     return Evidence(own=own, **out)
 
 

@@ -32,10 +32,13 @@ def without_knocks(evidence: Grid, levels: Levels) -> Grid:
         Nats in favour of own voice.
     levels : shape=(hops, tracks, bands)
     """
-    level_db = mean_level_db(levels)
-    beside = np.maximum(_moved(level_db, -REACH_HOPS), _moved(level_db, REACH_HOPS))
-    knock = (level_db - beside > STANDS_OUT_DB) & ~_beside_voice(evidence)
-    return np.where(_spread(knock), np.minimum(evidence, 0), evidence)
+    out = np.empty_like(evidence)
+    for track in range(evidence.shape[1]):
+        own, level_db = evidence[:, track], mean_level_db(levels[:, track])
+        beside = np.maximum(_moved(level_db, -REACH_HOPS), _moved(level_db, REACH_HOPS))
+        knock = (level_db - beside > STANDS_OUT_DB) & ~_beside_voice(own)
+        out[:, track] = np.where(_spread(knock), np.minimum(own, 0), own)
+    return out
 
 
 def _moved(values: Grid, hops: int) -> Grid:
@@ -47,7 +50,7 @@ def _moved(values: Grid, hops: int) -> Grid:
 def _beside_voice(evidence: Grid) -> Bools:
     """Whether own voice lasts right before or right after each hop."""
     room = REACH_HOPS + BESIDE_HOPS
-    total = np.cumsum(np.pad(np.maximum(evidence, 0), ((room + 1, room), (0, 0))), axis=0, dtype=np.float64)
+    total = np.cumsum(np.pad(np.maximum(evidence, 0), (room + 1, room)), dtype=np.float64)
     hops = len(evidence)
 
     def mean(first: int) -> npt.NDArray[np.float64]:
@@ -60,5 +63,5 @@ def _beside_voice(evidence: Grid) -> Bools:
 
 def _spread(flags: Bools) -> Bools:
     """Flags widened by `SPREAD_HOPS` either way."""
-    total = np.cumsum(np.pad(flags, ((SPREAD_HOPS + 1, SPREAD_HOPS), (0, 0))), axis=0)
+    total = np.cumsum(np.pad(flags, (SPREAD_HOPS + 1, SPREAD_HOPS)))
     return np.asarray(total[2 * SPREAD_HOPS + 1 :] > total[: -2 * SPREAD_HOPS - 1])

@@ -16,7 +16,7 @@ is small (about 12 MB a track-hour) and everything after it is pure.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -55,7 +55,11 @@ class Measurements:
     @property
     def hops(self) -> int:
         """Analysis steps in the session."""
-        return len(self.levels)
+        return len(self.k_levels)
+
+    def without_bands(self) -> Measurements:
+        """The same without the levels in bands: once it is known who speaks, nothing needs these 28 bytes a hop."""
+        return replace(self, levels=self.levels[:0].copy())
 
     def of_tracks(self, tracks: list[int]) -> Measurements:
         """The same measurements for some of the tracks only."""
@@ -78,18 +82,44 @@ def measure(session: Session, *, on_progress: OnProgress = no_progress, block_s:
     """
     frames = round(block_s * session.rate_hz)
     blocks = -(-session.frames // frames)
+    grids = _Grids(session)
     with open_readers(session) as readers:
         meters = [_TrackMeters(track, reader, session) for track, reader in zip(session.tracks, readers, strict=True)]
         arrival = ArrivalMeter(len(meters), session.frames / session.rate_hz)
 
         def step(lane: int, block: int) -> npt.NDArray[np.float32]:
-            return meters[lane].push(min(frames, session.frames - block * frames), last=block == blocks - 1)
+            low = meters[lane].push(min(frames, session.frames - block * frames), last=block == blocks - 1)
+            for rows in meters[lane].bands.take():
+                grids.keep(lane, rows)
+            return low
 
         for block, row in enumerate(walk(step, lanes=len(meters), blocks=blocks)):
             arrival.push(row)
             on_progress("measure", min((block + 1) * frames, session.frames) / session.rate_hz,
                         session.frames / session.rate_hz)
-        return _collected(session, meters, arrival)
+        for lane, meter in enumerate(meters):
+            grids.keep(lane, meter.bands.result())
+        return _collected(meters, grids, arrival)
+
+
+class _Grids:
+    """What is kept a hop and track, filled as it comes; hops the resampler left out at the end are silent."""
+
+    def __init__(self, session: Session) -> None:
+        hops, tracks = frames_to_hops(session.frames, session.rate_hz), len(session.tracks)
+        bands = max(1, min((bands_within(t.source_rate_hz) for t in session.tracks), default=BANDS))
+        self.levels = np.full((hops, tracks, bands), SILENT, np.int16)
+        self.others = np.full((3, hops, tracks), SILENT, np.int16)
+        self._at = [0] * tracks
+
+    def keep(self, track: int, rows: Levels) -> None:
+        """Write rows of the band meter behind those before."""
+        hops, bands = len(self.levels), self.levels.shape[2]
+        place = slice(self._at[track], min(self._at[track] + len(rows), hops))
+        rows = rows[: place.stop - place.start]
+        self.levels[place, track] = rows[:, :bands]
+        self.others[:, place, track] = rows[:, BANDS:].T
+        self._at[track] = place.stop
 
 
 class _TrackMeters:
@@ -113,22 +143,13 @@ class _TrackMeters:
         return low
 
 
-def _collected(session: Session, meters: list[_TrackMeters], arrival: ArrivalMeter) -> Measurements:
-    """All results on one hop grid; hops the resampler left out at the end are silent."""
-    hops = frames_to_hops(session.frames, session.rate_hz)
-    bands = max(1, min((bands_within(t.source_rate_hz) for t in session.tracks), default=BANDS))
-    levels = np.full((hops, len(meters), bands), SILENT, np.int16)
-    others = np.full((3, hops, len(meters)), SILENT, np.int16)
-    voiced = np.zeros((hops, len(meters)), np.bool_)
-    peaks, repaired = [], []
-    for i in range(levels.shape[1]):
-        meter = meters.pop(0)  # gone once it is read: its rows are as large as what they are copied to
-        peaks.append(meter.peak.result())
-        repaired.append(meter.reader.repaired_frames)
-        found, flags = meter.bands.result()[:hops], meter.voice.result()[:hops]
-        levels[: len(found), i] = found[:, :bands]
-        others[:, : len(found), i] = found[:, BANDS:].T
+def _collected(meters: list[_TrackMeters], grids: _Grids, arrival: ArrivalMeter) -> Measurements:
+    """All results on one hop grid."""
+    voiced = np.zeros(grids.levels.shape[:2], np.bool_)
+    for i, meter in enumerate(meters):
+        flags = meter.voice.result()[: len(voiced)]
         voiced[: len(flags), i] = flags
     return Measurements(
-        levels=levels, k_levels=others[0], voice_levels=others[1], rumble=others[2], voiced=voiced,
-        arrivals=arrival.result(), peaks=tuple(peaks), repaired_frames=tuple(repaired))
+        levels=grids.levels, k_levels=grids.others[0], voice_levels=grids.others[1], rumble=grids.others[2],
+        voiced=voiced, arrivals=arrival.result(),
+        peaks=tuple(m.peak.result() for m in meters), repaired_frames=tuple(m.reader.repaired_frames for m in meters))

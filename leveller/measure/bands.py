@@ -54,8 +54,12 @@ class BandMeter:
         for piece in self._pieces.push(block):
             self._levels.append(self._measure(piece[0]))
 
+    def take(self) -> list[Levels]:
+        """Levels of the hops that are done, in order; they are forgotten here."""
+        return self._levels.take()
+
     def result(self) -> Levels:
-        """Levels of all hops begun so far."""
+        """Levels of all hops begun so far, without those that were taken."""
         done = self._levels.rows(
             *(self._measure(piece[0])[: -(-frames // HOP)] for piece, frames in self._pieces.rest()))
         return np.concatenate(done) if done else np.empty((0, BANDS + 3), np.int16)

@@ -79,6 +79,12 @@ class Grown:
             self._large.append(np.concatenate(self._small))
             self._small.clear()
 
+    def take(self) -> list[npt.NDArray[Any]]:
+        """All arrays so far in order; they are forgotten here."""
+        out = self.rows()
+        self._large, self._small = [], []
+        return out
+
     def rows(self, *more: npt.NDArray[Any]) -> list[npt.NDArray[Any]]:
         """All arrays so far in order, then `more`; ready to be concatenated."""
         return [*self._large, *self._small, *more]
