@@ -10,6 +10,7 @@ Roles: `room` keeps its trim from the session file and is never expanded; `bed` 
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -19,7 +20,7 @@ from leveller.attribute import Activity
 from leveller.measure import Measurements
 from leveller.measure.levels import level_to_db
 from leveller.plan.compressor import compressor_nodes_db
-from leveller.plan.corrections import corrected_curves, overruled, spliced
+from leveller.plan.corrections import corrected_curve, overruled, spliced
 from leveller.plan.expander import auto_range_db, expander_nodes_db, opened
 from leveller.plan.levels import level_lufs, own_power, own_speech, spoken_alone
 from leveller.plan.ride import ride_nodes_db
@@ -72,17 +73,18 @@ def make_plan(m: Measurements, activity: Activity, session: Session) -> GainPlan
     if activity.own.any():
         lone = len(voices) == 1
         open_[:, voices] = opened(activity.own[:, voices], settings=session.settings.expander, lone=lone)
-    curves = []
-    for i, track in enumerate(session.tracks):
+
+    def curves_of(i: int) -> tuple[Nodes, Nodes]:
+        """The parts of one track, without and with corrections."""
         if i in trims:
             heard = (counted[:, i], alone[:, i], open_[:, i])
             parts = _voice_parts(m, activity, session, i, heard, trims[i], ranges[i])
         else:
             parts = np.zeros((m.hops + 1, len(PARTS)), np.float32)
-        parts[:, 0] += track.trim_db
-        curves.append(parts)
-    corrected = corrected_curves(curves, activity.own, open_, session, ranges)
-    return GainPlan(m.hops, _thinned(curves, corrected, overruled(activity, session)), tuple(ranges))
+        parts[:, 0] += session.tracks[i].trim_db
+        return parts, corrected_curve(parts, i, activity.own, open_, session, range_db=ranges[i])
+
+    return GainPlan(m.hops, _thinned(curves_of, len(session.tracks), overruled(activity, session)), tuple(ranges))
 
 
 def _ranges(activity: Activity, session: Session, voices: list[int], trims: dict[int, Nodes]) -> list[float]:
@@ -132,13 +134,18 @@ def _per_hop_gain(nodes: Nodes) -> Nodes:
     return np.asarray(10 ** (_middles(nodes) / 10))
 
 
-def _thinned(curves: list[Nodes], corrected: list[Nodes], activity: Activity) -> tuple[TrackGain, ...]:
-    """Corrected curves as rows; the tolerance widens only where a very long session would pass `MOST_ROWS`."""
+def _thinned(
+    curves_of: Callable[[int], tuple[Nodes, Nodes]], tracks: int, activity: Activity
+) -> tuple[TrackGain, ...]:
+    """Corrected curves as rows, track by track, since they take 16 bytes a hop.
+
+    The tolerance widens only where a very long session would pass `MOST_ROWS`.
+    """
     tolerance = TOLERANCE_DB * 0.8  # rounding to 0.01 dB, four parts, takes the rest
     while True:
-        found = [spliced(before, after, tolerance) for before, after in zip(curves, corrected, strict=True)]
-        if sum(len(rows) for _, rows, _ in found) <= MOST_ROWS:
-            return tuple(_track_gain(*kept, activity, i) for i, kept in enumerate(found))
+        found = [_track_gain(*spliced(*curves_of(i), tolerance), activity, i) for i in range(tracks)]
+        if sum(len(gain.hop) for gain in found) <= MOST_ROWS:
+            return tuple(found)
         tolerance *= 1.5
 
 

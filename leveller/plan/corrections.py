@@ -76,32 +76,32 @@ def decided_by_hand(session: Session, track: int, hops: int) -> Bools:
     return out
 
 
-def corrected_curves(
-    curves: Sequence[Nodes], own: Bools, open_: Bools, session: Session, ranges_db: Sequence[float]
-) -> list[Nodes]:
-    """The curves of all tracks with the corrections in them; the same objects where nothing changes.
+def corrected_curve(
+    parts_db: Nodes, track: int, own: Bools, open_: Bools, session: Session, *, range_db: float
+) -> Nodes:
+    """The curves of one track with the corrections in them; the same object where none is of this track.
 
     Parameters
     ----------
-    curves : per track, shape=(hops + 1, parts)
+    parts_db : shape=(hops + 1, parts)
         Trim, expander and what follows, in the order of `plan.PARTS`.
     own, open_ : shape=(hops, tracks)
         Decided without corrections.
-    ranges_db : per track
+    range_db : float
+        Of the track's expander.
     """
-    voices = [i for i, track in enumerate(session.tracks) if track.role == "voice"]
+    if all(_index(correction, session) != track for correction in session.corrections):
+        return parts_db
+    voices = [i for i, one in enumerate(session.tracks) if one.role == "voice"]
     settings = session.settings.expander
-    out = list(curves)
-    for i in {_index(correction, session) for correction in session.corrections}:
-        parts = curves[i].copy()
-        parts[:, TRIM] += offset_nodes_db(session, i, len(own))
-        if i in voices:
-            by_hand = closed_by_hand(session, i, len(own))
-            corrected_open = reopened(own, open_, corrected_own=_own_of(session, i, own[:, i]), by_hand=by_hand,
-                                      voices=voices, track=i, settings=settings)
-            parts[:, EXPANDER] = expander_again_db(parts[:, EXPANDER], open_[:, i], corrected_open=corrected_open,
-                                                   by_hand=by_hand, range_db=ranges_db[i], settings=settings)
-        out[i] = parts
+    out = parts_db.copy()
+    out[:, TRIM] += offset_nodes_db(session, track, len(own))
+    if track in voices:
+        by_hand = closed_by_hand(session, track, len(own))
+        corrected_open = reopened(own, open_, corrected_own=_own_of(session, track, own[:, track]), by_hand=by_hand,
+                                  voices=voices, track=track, settings=settings)
+        out[:, EXPANDER] = expander_again_db(out[:, EXPANDER], open_[:, track], corrected_open=corrected_open,
+                                             by_hand=by_hand, range_db=range_db, settings=settings)
     return out
 
 

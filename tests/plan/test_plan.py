@@ -43,13 +43,13 @@ def case(tmp_path_factory: pytest.TempPathFactory) -> Case:
     activity = attribute(measurements, session)
     with pytest.MonkeyPatch.context() as patch:
         kept: list[np.ndarray] = []
-        thinned = leveller.plan._thinned
+        spliced = leveller.plan.spliced
 
-        def spy(curves: list[np.ndarray], corrected: list[np.ndarray], shown: Activity) -> object:
-            kept.extend(curve.copy() for curve in corrected)
-            return thinned(curves, corrected, shown)
+        def spy(before: np.ndarray, after: np.ndarray, tolerance_db: float) -> object:
+            kept.append(after.copy())
+            return spliced(before, after, tolerance_db)
 
-        patch.setattr(leveller.plan, "_thinned", spy)
+        patch.setattr(leveller.plan, "spliced", spy)
         plan = make_plan(measurements, activity, session)
     assert len(kept) == 3
     return Case(spoken, session, measurements, activity, plan, tuple(kept))
