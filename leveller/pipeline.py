@@ -41,7 +41,7 @@ from leveller.units import frames_to_hops
 __all__ = ["Finished", "Result", "finish", "process", "render_again"]
 
 DEFAULT_OUT = Path("levelled")
-KEPT_BYTES = 40  # of measurements, a hop and track
+KEPT_BYTES = 40 + 28  # of measurements, a hop and track, and of the levels that lie in a file meanwhile
 MARGIN_BYTES = 64 << 20  # tables, page and what else is small
 
 
@@ -123,7 +123,7 @@ def process(
     folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session, stems),
                           sources=source_paths(session))
     with folder, second_thread() as second:
-        session, measurements = _measured([folder.path], session, align, on_progress)
+        session, measurements = _measured([folder.path], session, align, on_progress, folder.work)
         beside = _begun(second, session, measurements, align)
         keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
         activity = attribute(measurements, session)
@@ -182,14 +182,14 @@ def render_again(
     homes = dict.fromkeys((automation.parent, folder.path, _out(None, session)))
     measurements = None
     if align:  # the rows of the file belong to the session as it was lined up
-        session, measurements = _measured(homes, session, align, on_progress)
+        session, measurements = _measured(homes, session, align, on_progress, None)
         check_table(automation, session, align=align)
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
     read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)
     with folder, second_thread() as second:
         if measurements is None:
-            session, measurements = _measured(homes, session, align, on_progress)
+            session, measurements = _measured(homes, session, align, on_progress, folder.work)
         beside = _begun(second, session, measurements, align)
         keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
         activity = attribute(measurements, session)
@@ -270,14 +270,14 @@ def _opened(
 
 
 def _measured(
-    homes: Iterable[Path], session: Session, align: bool, on_progress: OnProgress
+    homes: Iterable[Path], session: Session, align: bool, on_progress: OnProgress, work: Path | None
 ) -> tuple[Session, Measurements]:
     """The session and its measurements, kept ones where there are any; its tracks lined up where that is asked for."""
     homes = list(homes)
 
     def measurements_of(one: Session) -> Measurements:
         kept = next((m for home in homes if (m := kept_measurements(home, one)) is not None), None)
-        return kept or measure(one, on_progress=on_progress)
+        return kept or measure(one, on_progress=on_progress, folder=work)
 
     measurements = measurements_of(session)
     if not align:

@@ -39,7 +39,7 @@ from leveller.attribute.seeds import NOBODY, Labels, first_labels, labels_by_lev
 from leveller.attribute.tail import tail_db_per_hop
 from leveller.attribute.tone import steady_tone
 from leveller.measure import Measurements
-from leveller.measure.levels import STEP_DB, level_to_db
+from leveller.measure.levels import STEP_DB, level_to_db, walked
 from leveller.session import Session
 from leveller.units import HOPS_PER_S, Bools, seconds_to_hops
 
@@ -167,8 +167,7 @@ def _skipped(hops: int, session: Session) -> Bools:
 def _audible(m: Measurements, floor_db: Grid) -> Grid:
     """Mean over bands of level over noise, clipped to 0 .. 20 dB, second by second to stay small."""
     out = np.zeros(m.levels.shape[:2], np.float32)
-    for second in range(len(floor_db)):
-        rows = slice(second * HOPS_PER_S, (second + 1) * HOPS_PER_S)
+    for second, rows in enumerate(walked(m.levels, HOPS_PER_S)):
         over = m.levels[rows].astype(np.float32) * np.float32(STEP_DB) - floor_db[second]
         out[rows] = np.clip(over, 0, 20).mean(axis=2)
     return out

@@ -28,7 +28,7 @@ import numpy.typing as npt
 
 from leveller.attribute.coupling import LEAST_EVER, STEP_HOPS, Coupling
 from leveller.attribute.lag import Lags
-from leveller.measure.levels import STEP_DB, Levels
+from leveller.measure.levels import STEP_DB, Levels, walked
 from leveller.units import HOPS_PER_S
 
 ROUNDS = 4
@@ -89,8 +89,7 @@ def evidence_of(
         for name in (*Evidence.__dataclass_fields__, "narrow") if name != "own"}  # narrow: the lowest bands' score
     tail = np.zeros(levels.shape[1:], np.float32)
     table = _likelihood_table()
-    for block, start in enumerate(range(0, hops, STEP_HOPS)):
-        rows = slice(start, min(start + STEP_HOPS, hops))
+    for block, rows in enumerate(walked(levels, STEP_HOPS)):
         level_db = levels[rows].astype(np.float32) * np.float32(STEP_DB)
         noise_db = _per_hop(floor_db, rows)
         predicted = (_predicted_late(levels, floor_db, coupling, block, rows) if coupling.lags.any()

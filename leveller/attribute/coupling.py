@@ -19,7 +19,7 @@ import numpy.typing as npt
 
 from leveller.attribute.lag import Lags
 from leveller.attribute.seeds import Labels
-from leveller.measure.levels import SILENT, STEP_DB, Levels
+from leveller.measure.levels import SILENT, STEP_DB, Levels, release
 
 STEP_HOPS = 500
 QUANTILE = 0.6
@@ -77,6 +77,7 @@ def estimate_coupling(
         if len(at) >= LEAST_EVER:
             local[:, person] = _followed(levels, floor_db, at, person, blocks, lags)
         local[:, person, person] = 0.0
+        release(levels)
     return Coupling(local, heard, lags)
 
 

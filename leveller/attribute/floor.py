@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from leveller.measure.levels import SILENT, STEP_DB, Levels
+from leveller.measure.levels import SILENT, STEP_DB, Levels, walked
 from leveller.units import HOPS_PER_S
 
 AVERAGE_HOPS = 9
@@ -45,8 +45,8 @@ def quietest_db(levels: Levels) -> FloorDb:
     """Quietest 90 ms of each second, nan where none of them has sound throughout."""
     hops, tracks, bands = levels.shape
     out = np.full((-(-hops // HOPS_PER_S), tracks, bands), np.nan, np.float32)
-    for second in range(len(out)):
-        part = levels[second * HOPS_PER_S : (second + 1) * HOPS_PER_S]
+    for second, rows in enumerate(walked(levels, HOPS_PER_S)):
+        part = levels[rows]
         if len(part) < AVERAGE_HOPS:
             continue
         mean = _sliding_sum(part) / np.float32(AVERAGE_HOPS)

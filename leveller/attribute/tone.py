@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from leveller.measure.levels import STEP_DB, Levels
+from leveller.measure.levels import STEP_DB, WALKED_HOPS, Levels, release
 from leveller.units import HOPS_PER_S, Bools
 
 LEAST_S = 2
@@ -29,6 +29,8 @@ def steady_tone(levels: Levels) -> Bools:
         return found
     window = LEAST_S * HOPS_PER_S
     for start in range(0, hops - window + 1, HOPS_PER_S // 2):
+        if start % WALKED_HOPS == 0:
+            release(levels)
         part = levels[start : start + window]
         low, high = part.min(axis=0), part.max(axis=0)
         best = high.argmax(axis=1)

@@ -17,6 +17,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from pathlib import Path
 
 import numpy as np
 import numpy.typing as npt
@@ -25,13 +26,14 @@ from leveller.audio import Resampler, TrackReader, open_readers
 from leveller.lanes import walk
 from leveller.measure.arrival import ArrivalMeter, Arrivals
 from leveller.measure.bands import ANALYSIS_HZ, BANDS, BandMeter, bands_within
-from leveller.measure.levels import SILENT, Levels
+from leveller.measure.levels import SILENT, Levels, level_grid, release
 from leveller.measure.peaks import PeakMeter, PeakReading
 from leveller.measure.voice import VoiceMeter
 from leveller.session import Session, Track
 from leveller.units import Bools, frames_to_hops
 
 BLOCK_S = 8.0
+RELEASED_BLOCKS = 32  # between two times that written levels leave the memory
 OnProgress = Callable[[str, float, float], None]  # stage, done, total (seconds of programme)
 
 
@@ -72,8 +74,10 @@ class Measurements:
             repaired_frames=tuple(self.repaired_frames[i] for i in tracks))
 
 
-def measure(session: Session, *, on_progress: OnProgress = no_progress, block_s: float = BLOCK_S) -> Measurements:
-    """One pass over all tracks of a session.
+def measure(
+    session: Session, *, on_progress: OnProgress = no_progress, block_s: float = BLOCK_S, folder: Path | None = None
+) -> Measurements:
+    """One pass over all tracks of a session; a folder is where the levels of a long one may lie (`levels.level_grid`).
 
     Raises
     ------
@@ -82,7 +86,7 @@ def measure(session: Session, *, on_progress: OnProgress = no_progress, block_s:
     """
     frames = round(block_s * session.rate_hz)
     blocks = -(-session.frames // frames)
-    grids = _Grids(session)
+    grids = _Grids(session, folder)
     with open_readers(session) as readers:
         meters = [_TrackMeters(track, reader, session) for track, reader in zip(session.tracks, readers, strict=True)]
         arrival = ArrivalMeter(len(meters), session.frames / session.rate_hz)
@@ -95,6 +99,8 @@ def measure(session: Session, *, on_progress: OnProgress = no_progress, block_s:
 
         for block, row in enumerate(walk(step, lanes=len(meters), blocks=blocks)):
             arrival.push(row)
+            if block % RELEASED_BLOCKS == 0:
+                release(grids.levels)
             on_progress("measure", min((block + 1) * frames, session.frames) / session.rate_hz,
                         session.frames / session.rate_hz)
         for lane, meter in enumerate(meters):
@@ -105,10 +111,10 @@ def measure(session: Session, *, on_progress: OnProgress = no_progress, block_s:
 class _Grids:
     """What is kept a hop and track, filled as it comes; hops the resampler left out at the end are silent."""
 
-    def __init__(self, session: Session) -> None:
+    def __init__(self, session: Session, folder: Path | None) -> None:
         hops, tracks = frames_to_hops(session.frames, session.rate_hz), len(session.tracks)
         bands = max(1, min((bands_within(t.source_rate_hz) for t in session.tracks), default=BANDS))
-        self.levels = np.full((hops, tracks, bands), SILENT, np.int16)
+        self.levels = level_grid((hops, tracks, bands), folder=folder)
         self.others = np.full((3, hops, tracks), SILENT, np.int16)
         self._at = [0] * tracks
 
