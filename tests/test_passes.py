@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import subprocess
 import sys
 from pathlib import Path
@@ -10,6 +11,7 @@ import pytest
 from conversations import ConversationSpec, simulate
 
 from leveller import audio, pipeline
+from leveller.render import mix
 
 MEASURE = """
 import resource, sys
@@ -57,7 +59,7 @@ def test_one_pass_over_the_stems(spoken: list[Path], tmp_path: Path, monkeypatch
         monkeypatch.setattr(audio.FloatWav, name, counted)
     monkeypatch.setattr(audio.FloatSpill, "append", lambda *_: pytest.fail("the sum was spilled"))
     pipeline.process(spoken, out=tmp_path / "out")
-    of_a_stem = -(-20 // 2)
+    of_a_stem = math.ceil(20 / mix.BLOCK_S)
     assert blocks == {"read": of_a_stem * len(spoken), "put_back": of_a_stem * len(spoken)}
 
 
