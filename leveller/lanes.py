@@ -31,7 +31,7 @@ AHEAD = 2  # blocks in flight per lane; one leaves a thread idle whenever lanes 
 MOST_THREADS = 4  # readers and writers of one disk gain nothing from more
 
 ARENA_MAX, MMAP_THRESHOLD, TRIM_THRESHOLD, TOP_PAD = -8, -3, -1, -2  # of glibc's mallopt (malloc.h)
-BLOCK_BYTES = 4 << 20  # arrays up to this are taken from the heap; those of a block of two seconds are smaller
+BLOCK_BYTES = 4 << 20  # arrays up to this are taken from the heap; those of a block of one channel are smaller
 KEPT_BYTES = 64 << 20  # free at the heap's end before any of it is given back
 
 _limit: ContextVar[int] = ContextVar("limit", default=MOST_THREADS)  # two threads of one process have one each

@@ -1,7 +1,7 @@
 """A recursion over time, out[i] = step(out[i - 1], values[i]), run over many parts of the time side by side.
 
-Purpose: a decoder's lead or a smoother's gain needs the value before it, which in plain Python costs some 0.3 us a hop,
-an hour of three tracks a second a pass. Both forget: whatever they start from, they soon meet the same values to the
+Purpose: a decoder's lead or a smoother's gain needs the value before it, which in plain Python is the slowest
+step of all. Both forget: whatever they start from, they soon meet the same values to the
 last bit (a clamp is hit, a release ends at 0).
 
 Method: the time is cut into parts, all parts step together as one array, each from a guess. Then every part is run

@@ -4,7 +4,8 @@
 changed, `FloatSpill` is a nameless stretch of samples. No clock time and no order of blocks shows in what they write,
 and they write straight to the system, so that a full disk is told at the block it happens. `SampleFile` reads what
 most recorders write; it gets its facts from libsndfile, which has opened the file before, and spares its loop over
-single samples: a third of the time (measured). The tests hold all four against libsndfile, to the last bit.
+single samples: less than half the time (measured: 0.48 s for 1.09 s). The tests hold all four against libsndfile, to
+the last bit.
 
 References: Multimedia Programming Interface and Data Specifications 1.0 (IBM, Microsoft 1991) and its revision of 1994
 (`fmt `, `fact`); EBU Tech 3306 (RF64, `ds64`).
@@ -29,7 +30,7 @@ Kind = Literal["float32", "pcm24", "pcm16"]
 
 BITS = {"float32": 32, "pcm24": 24, "pcm16": 16}
 PCM, IEEE_FLOAT = 1, 3  # format tags
-DECODED_FRAMES = 1 << 16  # at a time: what is worked on stays in the second-level cache
+DECODED_FRAMES = 1 << 16  # at a time: few calls, so that threads seldom wait for each other
 HEADER_BYTES = 1 << 20  # room for all chunks but the audio (cue points, text) when the size of a file is judged
 
 

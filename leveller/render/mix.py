@@ -96,6 +96,7 @@ class Bus:
 
     def __init__(self, rate_hz: int, channels: int, frames: int) -> None:
         self._rate_hz, self._channels = rate_hz, channels
+        self._cell_s = peak_cell_frames(rate_hz) / rate_hz
         self._loudness = LoudnessMeter(rate_hz, channels)
         self._peaks = TruePeakMeter(rate_hz, channels, frames=frames)
 
@@ -113,7 +114,7 @@ class Bus:
         target, ceiling = delivery.target_lufs, delivery.ceiling_dbtp
         for _ in range(MOST_ROUNDS):
             make_up = find_make_up(before.cells, before.peak_cells, target_lufs=target, ceiling_dbtp=ceiling,
-                                   settings=limiter, cell_s=peak_cell_frames(self._rate_hz) / self._rate_hz)
+                                   settings=limiter, cell_s=self._cell_s)
             mix = self._write(path, programme, before, make_up, delivery, on_progress)
             off = delivery.target_lufs - mix.loudness.integrated_lufs
             over = mix.true_peak_dbtp - delivery.ceiling_dbtp
@@ -136,10 +137,9 @@ class Bus:
                 meter.push(block)
                 done += len(block)
                 on_progress("mix", done / self._rate_hz, total_s)
-        cell_s = peak_cell_frames(self._rate_hz) / self._rate_hz
         peak_dbtp, peak_s = meter.true_peak()
         return Mix(delivery, self._channels, meter.loudness(), peak_dbtp, peak_s, make_up.make_up_db, make_up.nodes_db,
-                   cell_s, summarise(make_up.nodes_db, cell_s=cell_s), make_up.reason)
+                   self._cell_s, summarise(make_up.nodes_db, cell_s=self._cell_s), make_up.reason)
 
 
 def _write_stems(

@@ -38,8 +38,8 @@ class SpilledSum:
     """A sum that is kept in a temporary file, since it can be made only once; a context manager."""
 
     def __init__(self, path: Path, rate_hz: int, channels: int, block_frames: int) -> None:
-        self._spill, self._block_frames, self._cell_frames = FloatSpill(path, channels), block_frames, peak_cell_frames(
-            rate_hz)
+        self._spill = FloatSpill(path, channels)
+        self._block_frames, self._cell_frames = block_frames, peak_cell_frames(rate_hz)
 
     def __enter__(self) -> SpilledSum:
         return self
@@ -66,8 +66,10 @@ class SpilledSum:
 
 
 class ScaledStems:
-    """Stems that take the make-up gain in place while they are summed, so that they add up to the mix before the
-    limiter; a context manager."""
+    """Stems that take the make-up gain in place while they are summed; a context manager.
+
+    They add up to the mix before the limiter.
+    """
 
     def __init__(self, paths: Sequence[Path], session: Session, block_frames: int) -> None:
         self.frames = session.frames
@@ -106,8 +108,10 @@ class ScaledStems:
 
 
 class LimitedStems:
-    """Stems of 24 bit with make-up and the limiter's gain, written beside the float ones and put in their place in
-    the end; they add up to the mix. A context manager."""
+    """Stems of 24 bit with make-up and the limiter's gain, which add up to the mix; a context manager.
+
+    They are written beside the float ones and put in their place in the end.
+    """
 
     def __init__(self, paths: Sequence[Path], session: Session, block_frames: int) -> None:
         self.frames = session.frames
