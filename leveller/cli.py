@@ -245,17 +245,20 @@ def settings(
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
-    """Run a command and leave with its exit code; `sys.argv` by default."""
+    """Run a command and leave with its exit code; by default the process's own command line, and its Ctrl-C."""
     for name in THREAD_LIMITS:
         os.environ.setdefault(name, "1")
     keep_heap()
-    if signal.getsignal(signal.SIGINT) is signal.default_int_handler:  # nohup and cron may have it ignored
-        with contextlib.suppress(ValueError):  # only the main thread may
-            signal.signal(signal.SIGINT, _interrupt)
+    ours = arguments is None and signal.getsignal(signal.SIGINT) is signal.default_int_handler  # else nohup ignores it
+    if ours:
+        signal.signal(signal.SIGINT, _interrupt)
     for stream in (sys.stdout, sys.stderr):
         with contextlib.suppress(AttributeError):  # not every stream can change its ways
             stream.reconfigure(errors="backslashreplace")  # type: ignore[union-attr]
-    sys.exit(_run(list(sys.argv[1:] if arguments is None else arguments)))
+    code = _run(list(sys.argv[1:] if arguments is None else arguments))
+    if ours:
+        signal.signal(signal.SIGINT, signal.SIG_IGN)  # all is done: Python's own leaving is not to be disturbed
+    sys.exit(code)
 
 
 def _interrupt(number: int, frame: FrameType | None) -> None:
