@@ -1,18 +1,21 @@
 """The command line: one short function a command; nothing is computed or drawn here. The sole user of typer.
 
 Commands import what they need when they run, so that `leveller --help` waits for nothing. An error is one line on the
-standard error and an exit code of its kind (`errors`); 2 is a wrong command line, 130 an interruption. `main` limits
-the linear algebra library to one thread unless the environment says otherwise: the work is spread over tracks already.
+standard error and an exit code of its kind (`errors`); 2 is a wrong command line, 130 an interruption: the first
+Ctrl-C ends the work, further ones do not disturb the tidying up. `main` limits the linear algebra library to one thread
+unless the environment says otherwise: the work is spread over tracks already.
 """
 
 from __future__ import annotations
 
 import contextlib
 import os
+import signal
 import sys
 import traceback
 from collections.abc import Iterator, Sequence
 from pathlib import Path
+from types import FrameType
 from typing import Annotated, Any
 
 import typer
@@ -242,14 +245,26 @@ def settings(
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
-    """Run a command and leave with its exit code; `sys.argv` by default."""
+    """Run a command and leave with its exit code; by default the process's own command line, and its Ctrl-C."""
     for name in THREAD_LIMITS:
         os.environ.setdefault(name, "1")
     keep_heap()
+    ours = arguments is None and signal.getsignal(signal.SIGINT) is signal.default_int_handler  # else nohup ignores it
+    if ours:
+        signal.signal(signal.SIGINT, _interrupt)
     for stream in (sys.stdout, sys.stderr):
         with contextlib.suppress(AttributeError):  # not every stream can change its ways
             stream.reconfigure(errors="backslashreplace")  # type: ignore[union-attr]
-    sys.exit(_run(list(sys.argv[1:] if arguments is None else arguments)))
+    code = _run(list(sys.argv[1:] if arguments is None else arguments))
+    if ours:
+        signal.signal(signal.SIGINT, signal.SIG_IGN)  # all is done: Python's own leaving is not to be disturbed
+    sys.exit(code)
+
+
+def _interrupt(number: int, frame: FrameType | None) -> None:
+    """End the work at the first Ctrl-C; the tidying up that follows is brief, and another would leave it undone."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    raise KeyboardInterrupt
 
 
 def _run(arguments: list[str]) -> int:

@@ -194,8 +194,9 @@ def test_an_unexpected_error_is_one_line(tmp_path: Path, monkeypatch: pytest.Mon
 
 
 @pytest.mark.skipif(os.name != "posix", reason="interruption by signal")
-def test_interruption_leaves_nothing(tmp_path: Path) -> None:
-    """Ctrl-C ends with 130 and one line; neither the folder nor a part of it is left."""
+@pytest.mark.parametrize("presses", [1, 4])
+def test_interruption_leaves_nothing(tmp_path: Path, presses: int) -> None:
+    """Ctrl-C ends with 130 and one line, pressed once or impatiently; neither the folder nor a part of it is left."""
     work = tmp_path / "work"
     work.mkdir()
     shutil.copytree(DEMO, tmp_path / "demo")
@@ -205,7 +206,9 @@ def test_interruption_leaves_nothing(tmp_path: Path) -> None:
     while not any(work.iterdir()) and time.monotonic() < deadline:
         time.sleep(0.01)
     assert [path.name for path in work.iterdir()] == [f".out.part-{running.pid}"]
-    running.send_signal(signal.SIGINT)
+    for _ in range(presses):
+        running.send_signal(signal.SIGINT)
+        time.sleep(0.03)
     out, err = running.communicate(timeout=60)
     assert (running.returncode, out, err) == (130, "", "leveller: interrupted; nothing was left half-written\n")
     assert list(work.iterdir()) == []
