@@ -14,7 +14,7 @@ import time
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping
 from concurrent.futures import FIRST_COMPLETED, Future, wait
-from contextlib import AbstractContextManager
+from contextlib import AbstractContextManager, ExitStack, nullcontext
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Protocol
@@ -24,6 +24,7 @@ from leveller.desk import Desk
 from leveller.errors import OutputError, SettingsError
 from leveller.fingerprint import made_by
 from leveller.folder import clean_up
+from leveller.interruptions import Interruptions
 from leveller.lanes import processor_count
 from leveller.render.mix import LEVELS
 from leveller.report.season import FAILED, FINISHED, WAITING, Outcome, SeasonReport, read_json, season_report
@@ -99,8 +100,8 @@ def batch(
     Returns
     -------
     SeasonReport
-        Its `exit_code` is 0, 7 where an episode failed, 130 after an interruption (KeyboardInterrupt ends the work,
-        not the report).
+        Its `exit_code` is 0, 7 where an episode failed, 130 after an interruption (Ctrl-C, SIGTERM or SIGHUP; it ends
+        the work, not the report).
 
     Raises
     ------
@@ -110,20 +111,23 @@ def batch(
     _check_options(jobs, delivery, stems, settings)
     found, folder, started_s = read_season(Path(season)), Path(os.path.abspath(out)), time.monotonic()
     _check_place(found, Path(season), folder)
-    with Desk(folder) as desk:
+    with Interruptions() as interruptions, Desk(folder) as desk, ExitStack() as stack:
         options: dict[str, Any] = {"delivery": delivery, "stems": stems, "settings": tuple((settings or {}).items()),
                    "accept_short": accept_short, "align": align, "again": again, "made_by": tuple(made_by().items()),
                    "threads": _threads_each(len(found.episodes), jobs, cluster)}
         tasks = [Task(e, str(folder / e.name), str(desk.path), **options) for e in found.episodes]
-        with _workers(cluster, jobs or default_jobs(), len(tasks), desk) as workers:
-            run = _Run(workers, desk, tasks, on_season)
-            run.all()
+        with interruptions.at_once():
+            workers = stack.enter_context(_workers(cluster, jobs or default_jobs(), len(tasks), desk))
+        run = _Run(workers, desk, tasks, on_season, interruptions, nullcontext if cluster is None
+                   else interruptions.at_once)
+        run.all()
+        stack.close()
         for suspect in run.suspects:
             clean_up(Path(suspect))
         outcomes = _with_earlier_times(run.in_order(), folder)
         report = season_report(found.title, outcomes, made_by=made_by(), notes=found.notes,
                                interrupted=run.interrupted, took_s=time.monotonic() - started_s)
-        write_season(folder, report)
+        write_season(folder, report, by=desk.path)
     return report
 
 
@@ -170,6 +174,8 @@ class _Run:
     desk: Desk
     tasks: list[Task]
     on_season: OnSeason | None
+    interruptions: Interruptions
+    waiting_for_others: Callable[[], AbstractContextManager[None]]  # round what a cluster may never answer
     interrupted: bool = False
     outcomes: dict[str, Outcome] = field(default_factory=dict)
     running: dict[Future[Outcome], Task] = field(default_factory=dict)
@@ -181,7 +187,10 @@ class _Run:
         waiting = deque(self.tasks)
         try:
             while waiting or self.running:
-                self._hand_out(waiting)
+                self.interruptions.check()
+                self.desk.beat()
+                with self.waiting_for_others():
+                    self._hand_out(waiting)
                 done, _ = wait(self.running, timeout=TICK_S, return_when=FIRST_COMPLETED)
                 for future in done:
                     self._take(future, waiting)

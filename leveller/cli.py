@@ -208,19 +208,25 @@ def batch(
     """Process a season: every episode, one failure stopping nothing, and a report on all."""
     with _reported(debug):
         from leveller.batch import batch as run_batch
+        from leveller.report.season_files import SeasonUnwritten
         from leveller.report.season_text import format_season, last_lines
         from leveller.settings import parse_assignments
 
         with console.season_progress(quiet=quiet) as on_season:
-            report = run_batch(
-                season, out=out, jobs=jobs, again=again, delivery=delivery, stems=stems,
-                settings=parse_assignments(assignments or []), accept_short=accept_short, align=align, cluster=cluster,
-                on_season=on_season)
+            try:
+                report, unwritten = run_batch(
+                    season, out=out, jobs=jobs, again=again, delivery=delivery, stems=stems,
+                    settings=parse_assignments(assignments or []), accept_short=accept_short, align=align,
+                    cluster=cluster, on_season=on_season), None
+            except SeasonUnwritten as error:
+                report, unwritten = error.report, error
         width = console.terminal_width(sys.stdout)
         if not quiet:
             console.print_lines(format_season(report, out=_near(Path(os.path.abspath(out))), width=width))
         elif report.exit_code:
             console.print_lines(last_lines(report), sys.stderr)
+        if unwritten is not None:
+            raise unwritten
         raise typer.Exit(report.exit_code)
 
 

@@ -22,10 +22,9 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from types import TracebackType
-from typing import Any
 
 from leveller.errors import InputError, LevellerError, OutputError
-from leveller.folder import remove
+from leveller.folder import remove, running_beside
 
 NAME = "season.json"
 OWNER = "batch"  # the file that says whose a desk is
@@ -89,7 +88,8 @@ class Desk:
             parent.mkdir(exist_ok=True)
         remove(self.path)  # of a process of the same number, before a restart
         self.path.mkdir()
-        (self.path / OWNER).write_text(json.dumps(_sign(os.getpid())), encoding="utf-8")
+        sign = {"host": platform.node(), "started": _started(os.getpid())}
+        (self.path / OWNER).write_text(json.dumps(sign), encoding="utf-8")
         now_s = (self.path / OWNER).stat().st_mtime  # by the storage's own clock
         for other in _desks(self.out):
             if other != self.path:
@@ -159,23 +159,22 @@ def _refuse_or_remove(desk: Path, now_s: float) -> None:
     """Remove what a dead batch has left; raises OutputError where it is alive."""
     number = desk.name.removeprefix(f".{NAME}.part-")
     if number.isdecimal():
-        wanted = _owner(desk, int(number))
-        here = wanted["host"] == platform.node()
-        alive = _runs(wanted) if here else _age_s(desk, now_s) < DEAD_S
-        if alive:
-            where = "" if here else f" on {wanted['host']}"
+        host, started = _owner(desk)
+        here = host in (None, platform.node())
+        if _runs(desk, int(number), started) if here else _age_s(desk, now_s) < DEAD_S:
+            where = "" if here else f" on {host}"
             raise OutputError(f"{desk.parent}: another batch (process {number}{where}) is at work here. Wait for it, "
                               "or choose another --out")
     remove(desk)
 
 
-def _owner(desk: Path, pid: int) -> dict[str, Any]:
-    """Whose a desk is; where it does not say so (yet), a process of this computer."""
+def _owner(desk: Path) -> tuple[str | None, str | None]:
+    """Computer and start of the process whose a desk is; None where it does not say so (yet)."""
     try:
         said = json.loads((desk / OWNER).read_bytes())
-        return {"host": str(said["host"]), "pid": pid, "started": said["started"]}
+        return str(said["host"]), None if said["started"] is None else str(said["started"])
     except (OSError, ValueError, KeyError, TypeError):
-        return {"host": platform.node(), "pid": pid, "started": None}
+        return None, None
 
 
 def _age_s(desk: Path, now_s: float) -> float:
@@ -186,17 +185,12 @@ def _age_s(desk: Path, now_s: float) -> float:
         return DEAD_S
 
 
-def _runs(sign: dict[str, Any]) -> bool:
-    """Whether that process runs on this computer; in doubt it does."""
-    started = _started(sign["pid"])
-    if sign["started"] is not None and started is not None:
-        return bool(sign["started"] == started)
-    return sign["pid"] != os.getpid() and _alive(sign["pid"])
-
-
-def _sign(pid: int) -> dict[str, Any]:
-    """How a process of this computer is told from any other."""
-    return {"host": platform.node(), "pid": pid, "started": _started(pid)}
+def _runs(desk: Path, pid: int, started: str | None) -> bool:
+    """Whether a desk's process runs on this computer; in doubt it does."""
+    found = _started(pid)
+    if started is not None and found is not None:
+        return started == found
+    return pid in running_beside(desk.parent / NAME)
 
 
 def _started(pid: int) -> str | None:

@@ -2,7 +2,7 @@
 
 One process a pool: a process that is killed breaks its pool and no other, so it is known which episode was with it, and
 only that pool is made anew. Processes are started afresh (spawn), import everything once, and serve many episodes. They
-ignore Ctrl-C (the batch decides), clean up on SIGTERM, and end when their batch is gone.
+ignore Ctrl-C and a closed terminal (the batch decides), clean up on SIGTERM, and end when their batch is gone.
 
 `default_jobs` counts what there is: processors this process may use, and free memory by what an episode takes at most.
 """
@@ -15,11 +15,13 @@ import os
 import signal
 import sys
 import threading
+import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import BrokenExecutor, Future, ProcessPoolExecutor
 from types import FrameType, TracebackType
 from typing import Any
 
+from leveller.folder import take_back_all
 from leveller.lanes import keep_heap, processor_count
 from leveller.worker import busy
 
@@ -67,8 +69,9 @@ class LocalWorkers:
         for pool in self._pools:
             if pool is not None:
                 pool.shutdown(wait=False, cancel_futures=True)
+        end_s = time.monotonic() + PATIENCE_S  # for all of them together
         for process in ours:
-            process.join(PATIENCE_S)
+            process.join(max(0.0, end_s - time.monotonic()))
             if process.is_alive():
                 with contextlib.suppress(OSError):
                     process.kill()
@@ -124,7 +127,9 @@ def _no_interrupt() -> Iterator[None]:
 def _settle() -> None:
     """What a worker process does first."""
     keep_heap()
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    for name in ("SIGINT", "SIGHUP"):  # from a terminal they come to all of its processes
+        if hasattr(signal, name):
+            signal.signal(getattr(signal, name), signal.SIG_IGN)
     signal.signal(signal.SIGTERM, _leave)
     threading.Thread(target=_watch_batch, name="watch", daemon=True).start()
 
@@ -134,6 +139,7 @@ def _served(function: Callable[..., Any], *arguments: Any) -> Any:
     try:
         return function(*arguments)
     except SystemExit:
+        take_back_all()  # it may have come between two steps of the unwinding, or before there was any
         os._exit(ENDED_EXIT)
 
 
@@ -150,5 +156,6 @@ def _watch_batch() -> None:
         return
     batch.join()
     os.kill(os.getpid(), signal.SIGTERM)
-    busy.acquire(timeout=PATIENCE_S)
+    if busy.acquire(timeout=PATIENCE_S):
+        take_back_all()
     os._exit(ENDED_EXIT)

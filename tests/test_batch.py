@@ -6,6 +6,7 @@ import csv
 import dataclasses
 import importlib
 import json
+import operator
 import os
 import re
 import shutil
@@ -332,9 +333,9 @@ def test_a_worker_lost_once_costs_nothing(season: Path, tmp_path: Path) -> None:
     assert hidden(out) == []
 
 
-@pytest.mark.parametrize("ending", [signal.SIGINT, signal.SIGKILL])
+@pytest.mark.parametrize("ending", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP, signal.SIGKILL])
 def test_an_ended_batch_leaves_whole_episodes_only(season: Path, tmp_path: Path, ending: signal.Signals) -> None:
-    """After Ctrl-C, or when the batch itself is killed, finished episodes stay whole and the next run goes on."""
+    """After Ctrl-C, a shutdown, a closed terminal or a kill, finished episodes stay whole and the next run goes on."""
     for name in ("ep 2", "ep 3", "ep 10"):
         shutil.rmtree(season / name)
     long_episode(season / "ep 2")
@@ -348,7 +349,7 @@ def test_an_ended_batch_leaves_whole_episodes_only(season: Path, tmp_path: Path,
     until(lambda: not Path(f"/proc/{pid}").exists() or not hidden(out), "the end of the worker")
     assert (out / "ep 1" / "report.json").exists()
     assert not (out / "ep 2").exists()
-    if ending == signal.SIGINT:
+    if ending != signal.SIGKILL:
         assert run.returncode == 130, errors
         assert errors == ""
         assert hidden(out) == []
@@ -361,13 +362,67 @@ def test_an_ended_batch_leaves_whole_episodes_only(season: Path, tmp_path: Path,
     assert [name for name in hidden(out) if "ep 2" not in name] == []
 
 
+@pytest.mark.parametrize("place", [
+    "leveller.desk.Desk._make", "leveller.desk.Desk._end", "leveller.batch._Run._hand_out",
+    "leveller.batch.season_report", "leveller.batch.write_season"])
+def test_an_interruption_in_the_middle_of_something_waits(
+    season: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, in_process: None, place: str
+) -> None:
+    """Ctrl-C while the desk is made, work handed out, or the end tidied up: nothing is left, reports are whole."""
+    owner, _, name = place.rpartition(".")
+    holder = operator.attrgetter(owner.partition(".")[2])(sys.modules["leveller"]) if "._" in place else batch_module
+    done = getattr(holder, name)
+
+    def struck(*words: Any, **named: Any) -> Any:
+        os.kill(os.getpid(), signal.SIGINT)
+        os.kill(os.getpid(), signal.SIGTERM)
+        return done(*words, **named)
+
+    monkeypatch.setattr(holder, name, struck)
+    out = tmp_path / "out"
+    try:
+        report = batch(season, out=out, jobs=1)
+        assert report.exit_code in (7, 130)
+        assert json.loads((out / "season.json").read_text())["sentence"] == report.sentence
+    except KeyboardInterrupt:
+        assert place == "leveller.desk.Desk._make"
+        assert not out.exists()
+    assert hidden(tmp_path) == []
+
+
+def test_reports_that_cannot_be_written_are_told(
+    season: Path, tmp_path: Path, in_process: None, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """A full disk at the very end: the summary is printed all the same, earlier reports stay, the exit code is 5."""
+    out = tmp_path / "out"
+    batch(season, out=out, jobs=1)
+    before = {path.name: path.read_bytes() for path in out.glob("season.*")}
+    write = Path.write_bytes
+
+    def full(self: Path, data: bytes) -> int:
+        if self.name == "season.html":
+            raise OSError(28, "No space left on device")
+        return write(self, data)
+
+    monkeypatch.setattr(Path, "write_bytes", full)
+    with pytest.raises(SystemExit) as left:
+        cli.main(["batch", str(season), "--out", str(out)])
+    said = capsys.readouterr()
+    assert left.value.code == 5
+    assert said.err == (f"leveller: {out}: season.html cannot be written (No space left on device). The episodes are "
+                        "not touched by that; make room and give the same command again\n")
+    assert "4 episodes: 3 unchanged, 1 failed" in said.out
+    assert {path.name: path.read_bytes() for path in out.glob("season.*")} == before
+    assert hidden(out) == []
+
+
 def test_two_batches_keep_out_of_each_others_way(season: Path, tmp_path: Path) -> None:
     """A folder in which another batch is at work is refused."""
     out = tmp_path / "out"
     out.mkdir()
     other = subprocess.Popen([sys.executable, "-c", "input()"], stdin=subprocess.PIPE)
     try:
-        (out / f".season.part-{other.pid}").mkdir()
+        (out / f".season.json.part-{other.pid}").mkdir()
         with pytest.raises(OutputError, match=rf"another batch \(process {other.pid}\) is at work here"):
             batch(season, out=out)
     finally:
