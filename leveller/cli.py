@@ -56,6 +56,7 @@ AcceptShort = Annotated[bool, typer.Option(
 Align = Annotated[bool | None, typer.Option(
     "--align/--no-align", help="Line up tracks of separate recorders: start, clock and polarity.", show_default=False)]
 Quiet = Annotated[bool, typer.Option("--quiet", "-q", help="Print nothing but errors and a delivery that is not met.")]
+NoProgress = Annotated[bool, typer.Option("--quiet", "-q", help="Show no progress.")]
 Debug = Annotated[bool, typer.Option("--debug", help="Show where in the program an error arose.")]
 
 
@@ -124,7 +125,10 @@ def finish(
         help="The edited programme, or its stems and music: they are summed as they are.")],
     out: Annotated[Path | None, typer.Option(
         metavar="DIR", help="Folder to write; './levelled/TITLE finished' by default.")] = None,
-    replace: Replace = False, delivery: DeliveryName = None, assignments: Assignments = None,
+    replace: Replace = False, delivery: DeliveryName = None,
+    assignments: Annotated[list[str] | None, typer.Option(
+        "--set", metavar="KEY=VALUE",
+        help="A limiter setting, such as limiter.release_s=0.2; may be given again.")] = None,
     accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
 ) -> None:
     """Bring an edited programme to its delivery: make-up gain and limiter only."""
@@ -145,7 +149,7 @@ def finish(
 def measure(
     files: Files,
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
-    accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
+    accept_short: AcceptShort = False, quiet: NoProgress = False, debug: Debug = False,
 ) -> None:
     """Read the loudness and true peak of any files."""
     with _reported(debug):
@@ -167,7 +171,7 @@ def inspect(
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
     picture: Annotated[Path | None, typer.Option(
         metavar="FILE", help="Draw the table and what each microphone hears, as SVG.", show_default=False)] = None,
-    accept_short: AcceptShort = False, align: Align = None, quiet: Quiet = False, debug: Debug = False,
+    accept_short: AcceptShort = False, align: Align = None, quiet: NoProgress = False, debug: Debug = False,
 ) -> None:
     """Look at a session before anything is rendered: levels, faults, bleed, room tone, advice."""
     with _reported(debug):
@@ -234,7 +238,7 @@ def batch(
 def settings(
     session: Annotated[Path | None, typer.Argument(
         metavar="SESSION", help="A folder or a session.toml whose values count.", show_default=False)] = None,
-    assignments: Assignments = None,
+    assignments: Assignments = None, align: Align = None,
     why: Annotated[bool, typer.Option("--why", help="Say the reason for each default.")] = False,
     debug: Debug = False,
 ) -> None:
@@ -244,7 +248,7 @@ def settings(
         from leveller.report.text import format_settings
         from leveller.settings import DELIVERIES, parse_assignments
 
-        rows = settings_in_force(session, parse_assignments(assignments or []))
+        rows = settings_in_force(session, parse_assignments(assignments or []), align=align)
         lines = format_settings([row if why else (*row[:4], "") for row in rows], list(DELIVERIES.values()),
                                 delivery_in_force(session), width=console.terminal_width(sys.stdout))
         console.print_lines(lines)

@@ -194,9 +194,10 @@ def _why_bleed(found: Candidate, activity: Activity, session: Session, m: Measur
         when = f" while {speaker} speaks" if speaker else ""
         return f"paper or keys? high bands stand out by {bright_db:.0f} dB more than low ones{when}"
     ratio_db = float(activity.own_to_bleed_db[part].max())
+    over = f"at best {-ratio_db:.0f} dB under" if round(ratio_db) < 0 else f"at most {abs(ratio_db):.0f} dB over"
     if not speaker:
-        return f"open, but at most {ratio_db:.0f} dB over what the others explain"
-    return f"open while {speaker} speaks, at most {ratio_db:.0f} dB over {speaker}'s bleed: it may be bleed alone"
+        return f"open, but {over} what the others explain"
+    return f"open while {speaker} speaks, {over} {speaker}'s bleed: it may be bleed alone"
 
 
 def _speaker(found: Candidate, activity: Activity, session: Session) -> str:

@@ -144,7 +144,24 @@ def test_a_session_overrides_its_season(tmp_path: Path) -> None:
     assert rows["expander.hold_s"] == ("0.3", "--set")
     assert rows["expander.knee_db"] == ("4", "default")
     assert delivery_in_force(tmp_path / "ep 1") == (
-        "podcast-mono (default), -20.0 LUFS (season.toml), -2.0 dBTP (session.toml)")
+        "podcast-mono (default), -20.0 LUFS (season.toml), -2.0 dBTP (session.toml), 2 channels (season.toml)")
+
+
+@pytest.mark.parametrize(("show", "own", "option", "value", "origin"), [
+    ("", "", None, "false", "default"), ("align = true\n", "", None, "true", "season.toml"),
+    ("align = true\n", "align = false\n", None, "false", "session.toml"),
+    ("", "align = true\n", None, "true", "session.toml"), ("align = true\n", "", False, "false", "--no-align"),
+    ("", "align = false\n", True, "true", "--align")])
+def test_align_is_listed_among_the_settings(
+    tmp_path: Path, show: str, own: str, option: bool | None, value: str, origin: str
+) -> None:
+    """`align` is listed with its value, as a session opened likewise takes it, and with what said so."""
+    sound(tmp_path / "ep 1" / "a.wav")
+    (tmp_path / "season.toml").write_text(show)
+    (tmp_path / "ep 1" / "session.toml").write_text(own)
+    key, shown, unit, where, _ = settings_in_force(tmp_path / "ep 1", {}, align=option)[0]
+    assert (key, shown, unit, where) == ("align", value, "on/off", origin)
+    assert open_session([tmp_path / "ep 1"], align=option).align is (value == "true")
 
 
 def test_a_delivery_of_the_session_drops_that_of_the_season(tmp_path: Path) -> None:

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from leveller.advice import DC_DBFS
 from leveller.align import warns_of_alignment
 from leveller.measure.peaks import PeakReading
 from leveller.plan import PARTS, TrackGain
@@ -28,7 +29,6 @@ if TYPE_CHECKING:
 NOT_LINED_UP = "not lined up"
 KINDS = ("set aside", "note", NOT_LINED_UP, "skip", "tone", "silent", "nobody", "clipped", "over full scale", "DC",
          "repaired", "knob", "bed")
-DC_DBFS = -50.0  # a choice of ours: an offset over this costs headroom and clicks at cuts
 SILENT_DBFS = -90.0  # a choice of ours: a track that never gets over the last bit of 16 carries nothing
 HEAVY_LIMITING_DB = 6.0  # common practice, no source: more is heard on speech
 KNOB_DB = 0.5  # a choice of ours: a smaller step is not worth a line

@@ -100,7 +100,7 @@ class Page:
 
         return ActionChains(self.driver, duration=20)
 
-    def wait(self, script: str, *, seconds: float = 5.0) -> Any:
+    def wait(self, script: str, *, seconds: float = 30.0) -> Any:
         """Until a script's answer is true."""
         end = time.monotonic() + seconds
         while not (answer := self.script(script)):
@@ -126,7 +126,7 @@ class Page:
         for old in downloads.glob("corrections*.csv"):
             old.unlink()
         self.find("#save").click()
-        end = time.monotonic() + 5
+        end = time.monotonic() + 30
         while not (found := list(downloads.glob("corrections*.csv"))):
             assert time.monotonic() < end, "no corrections.csv was saved"
             time.sleep(0.02)
