@@ -22,6 +22,7 @@ import typer
 
 from leveller import __version__, console
 from leveller.errors import LevellerError
+from leveller.interruptions import put_off
 from leveller.lanes import keep_heap
 
 THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
@@ -273,6 +274,8 @@ def main(arguments: Sequence[str] | None = None) -> None:
 
 def _interrupt(number: int, frame: FrameType | None) -> None:
     """End the work at the first Ctrl-C; the tidying up that follows is brief, and another would leave it undone."""
+    if put_off(number, frame):
+        return
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     raise KeyboardInterrupt
 

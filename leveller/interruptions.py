@@ -5,6 +5,9 @@ that is closed (SIGHUP). As an exception any of these might come between the sta
 what is left is being removed. Inside `Interruptions` they are only remembered; whoever can stop asks `check`. Where
 the program waits for others (a cluster that may not answer), `at_once` lets the next one through as it comes.
 
+While a library is being imported nothing may be raised (`put_off`): an extension takes an exception in its start for a
+fault. soxr's ends the process there (nanobind: abort), numpy's makes an ImportError of it, others drop it.
+
 Signals that are ignored (nohup) or that somebody else has taken stay so. Handlers can be set in the main thread only;
 in any other one nothing is done.
 """
@@ -12,12 +15,25 @@ in any other one nothing is done.
 from __future__ import annotations
 
 import contextlib
+import os
 import signal
 import threading
 from collections.abc import Iterator
 from types import FrameType, TracebackType
 
 NAMES = ("SIGINT", "SIGTERM", "SIGHUP")  # the last one not on every system
+IMPORTS = "<frozen importlib"  # the code that is in the stack while something is imported
+AGAIN_S = 0.05
+
+
+def put_off(number: int, frame: FrameType | None) -> bool:
+    """For a handler: whether a library is being imported. Then the signal comes once more in a moment."""
+    while frame is not None and not frame.f_code.co_filename.startswith(IMPORTS):
+        frame = frame.f_back
+    if frame is None:
+        return False
+    threading.Timer(AGAIN_S, os.kill, (os.getpid(), number)).start()
+    return True
 
 
 class Interruptions:
@@ -60,6 +76,6 @@ class Interruptions:
     def _note(self, number: int, frame: FrameType | None) -> None:
         """Remember it."""
         self.came = True
-        if self._at_once:
+        if self._at_once and not put_off(number, frame):
             self._at_once = False  # a second one does not disturb what the first one ends
             raise KeyboardInterrupt

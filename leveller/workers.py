@@ -22,6 +22,7 @@ from types import FrameType, TracebackType
 from typing import Any
 
 from leveller.folder import take_back_all
+from leveller.interruptions import put_off
 from leveller.lanes import keep_heap, processor_count
 from leveller.worker import busy
 
@@ -145,6 +146,8 @@ def _served(function: Callable[..., Any], *arguments: Any) -> Any:
 
 def _leave(number: int, frame: FrameType | None) -> None:
     """Unwind, so that what is half-written is removed; a second signal does not disturb that."""
+    if put_off(number, frame):
+        return
     signal.signal(signal.SIGTERM, signal.SIG_IGN)
     sys.exit(ENDED_EXIT)
 

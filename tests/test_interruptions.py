@@ -4,7 +4,10 @@ from __future__ import annotations
 
 import os
 import signal
+import subprocess
+import sys
 import threading
+from pathlib import Path
 
 import pytest
 
@@ -46,6 +49,19 @@ def test_one_comes_at_once_where_that_is_wanted() -> None:
         with pytest.raises(KeyboardInterrupt), interruptions.at_once():
             raise AssertionError("not reached")
         os.kill(os.getpid(), signal.SIGINT)  # remembered again
+
+
+def test_none_comes_into_an_import(tmp_path: Path) -> None:
+    """Ctrl-C while a library is imported waits until that is done, and ends the command then like any other."""
+    (tmp_path / "struck.py").write_text(
+        "import os, signal\nos.kill(os.getpid(), signal.SIGINT)\nsum(range(1000))\nprint('imported whole')\n")
+    (tmp_path / "run.py").write_text(
+        "import sys, time\nfrom leveller import cli\n"
+        "def work(arguments):\n    try:\n        import struck\n        time.sleep(20)\n"
+        "    except KeyboardInterrupt:\n        return 130\n    return 0\n"
+        "cli._run = work\ncli.main()\n")
+    run = subprocess.run([sys.executable, str(tmp_path / "run.py")], capture_output=True, text=True, timeout=15)
+    assert (run.returncode, run.stdout, run.stderr) == (130, "imported whole\n", "")
 
 
 def test_what_is_ignored_stays_so(monkeypatch: pytest.MonkeyPatch) -> None:
