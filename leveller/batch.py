@@ -29,7 +29,7 @@ from leveller.lanes import processor_count
 from leveller.render.mix import LEVELS
 from leveller.report.season import FAILED, FINISHED, WAITING, Outcome, SeasonReport, read_json, season_report
 from leveller.report.season_files import write_season
-from leveller.season import Episode, Season, read_season
+from leveller.season import Episode, Season, read_season, told_from
 from leveller.settings import Settings, delivery_named
 from leveller.worker import LOST, MOST_TRIES, Task, work
 from leveller.workers import LocalWorkers, default_jobs
@@ -124,7 +124,7 @@ def batch(
         stack.close()
         for suspect in run.suspects:
             clean_up(Path(suspect))
-        outcomes = _with_earlier_times(run.in_order(), folder)
+        outcomes = _with_earlier_times(_told_from(found, Path(season), run.in_order(), folder), folder)
         report = season_report(found.title, outcomes, made_by=made_by(), notes=found.notes,
                                interrupted=run.interrupted, took_s=time.monotonic() - started_s)
         write_season(folder, report, by=desk.path)
@@ -152,6 +152,14 @@ def _check_place(season: Season, path: Path, out: Path) -> None:
         for source in episode.sources:
             if Path(source).resolve().is_relative_to(place):
                 raise OutputError(f"{place}: is or holds the source of {episode.name}. Choose another --out")
+
+
+def _told_from(season: Season, path: Path, outcomes: list[Outcome], out: Path) -> list[Outcome]:
+    """Reasons with paths told from the season's folder, and from the output folder."""
+    base = Path(os.path.abspath(path if path.is_dir() else path.parent))
+    return [dataclasses.replace(outcome, reason=told_from(out, told_from(base, outcome.reason, (
+        *episode.sources, *filter(None, [episode.corrections]))), ()))
+        for episode, outcome in zip(season.episodes, outcomes, strict=True)]
 
 
 def _threads_each(episodes: int, jobs: int | None, cluster: str | None) -> int:

@@ -51,9 +51,9 @@ class LocalWorkers:
         """Run a function in a process that is free, a new one where that has died."""
         place = next(i for i, last in enumerate(self._last) if last is None or last.done())
         for _ in range(2):
-            pool = self._pools[place] = self._pools[place] or _new_pool()
             try:
-                with _no_interrupt():  # the process that may start now inherits this
+                with _not_from_terminals():  # the processes that may start now inherit this
+                    pool = self._pools[place] = self._pools[place] or _new_pool()
                     future = pool.submit(_served, function, *arguments)
             except BrokenExecutor:  # its process has died, at work or idle
                 self._pools[place] = None
@@ -113,12 +113,12 @@ def _new_pool() -> ProcessPoolExecutor:
 
 
 @contextlib.contextmanager
-def _no_interrupt() -> Iterator[None]:
-    """Hold Ctrl-C back for a moment; it comes after it."""
+def _not_from_terminals() -> Iterator[None]:
+    """Hold back for a moment what a terminal sends to all processes; multiprocessing's own helper is not to get it."""
     if not hasattr(signal, "pthread_sigmask"):
         yield
         return
-    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT, signal.SIGHUP})
     try:
         yield
     finally:

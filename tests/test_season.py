@@ -200,3 +200,10 @@ def test_a_bad_season_file_is_named(tmp_path: Path, text: str, message: str) -> 
         open_session([tmp_path / "ep 1"])
     with pytest.raises(SettingsError, match=re.escape(message)):
         read_season(tmp_path)
+
+
+def test_lists_nested_too_deep_are_refused(tmp_path: Path) -> None:
+    """A season.toml of brackets alone is one line of error."""
+    (tmp_path / "season.toml").write_text("a = " + "[" * 100_000)
+    with pytest.raises(SettingsError, match=r"season\.toml: a number has thousands of digits, or lists lie too deep"):
+        read_season(tmp_path)
