@@ -155,9 +155,9 @@ def _check_place(season: Season, path: Path, out: Path) -> None:
 
 
 def _told_from(season: Season, path: Path, outcomes: list[Outcome], out: Path) -> list[Outcome]:
-    """Reasons with paths told from the season's folder, and from the output folder."""
+    """Reasons with paths told from the season's folder, or from that which the output folder lies in."""
     base = Path(os.path.abspath(path if path.is_dir() else path.parent))
-    return [dataclasses.replace(outcome, reason=told_from(out, told_from(base, outcome.reason, (
+    return [dataclasses.replace(outcome, reason=told_from(out.parent, told_from(base, outcome.reason, (
         *episode.sources, *filter(None, [episode.corrections]))), ()))
         for episode, outcome in zip(season.episodes, outcomes, strict=True)]
 

@@ -83,6 +83,8 @@ def read_season(path: Path) -> Season:
 def told_from(base: Path, text: str, places: Iterable[str]) -> str:
     """A text with these absolute paths, and those below `base`, told from there: reports do not say where work was."""
     for place in sorted({*places, str(base)}, key=len, reverse=True):
+        if os.path.dirname(place) == place:
+            continue  # the root says nothing of anybody, and stands in every path
         shorter = os.path.relpath(place, base)
         text = text.replace(place + os.sep, "" if shorter == "." else shorter + os.sep)
         text = text.replace(place, base.name if shorter == "." else shorter)

@@ -47,7 +47,7 @@ def done(tmp_path_factory: pytest.TempPathFactory) -> Path:
         assert [outcome.reason.partition(" (")[0].partition(". ")[0] for outcome in report.episodes] == [
             "", "../nowhere: no such file", "bad.wav: not readable as audio",
             "odd, in the season's list: expander.range_db = 1000000000.0: expected auto or a number from 0 to 60",
-            "taken: exists and is no result of leveller's"]
+            "fourth/taken: exists and is no result of leveller's"]
         assert inspect([home / "talk"]).tracks
         assert measure_files([home / "first" / "mix.wav"])
     return home
