@@ -96,8 +96,7 @@ def _from_folder(folder: Path) -> Season:
     if (folder / SESSION_FILE).is_file():
         raise InputError(f"{folder}: holds a {SESSION_FILE}, so it is one session. Use leveller process, or give the "
                          "folder above")
-    if (folder / SEASON_FILE).is_file():
-        read_defaults(folder / SEASON_FILE)
+    title = read_defaults(folder / SEASON_FILE).title if (folder / SEASON_FILE).is_file() else None
     sessions, files, notes = _sorted_out(folder)
     if not sessions and not files:
         raise InputError(f"{folder}: no folder with audio in it, and no audio file")
@@ -105,7 +104,7 @@ def _from_folder(folder: Path) -> Season:
         _check_polyphonic(folder, files)
     names = unique_names([*REPORTS, *(path.name for path in sessions), *(path.stem for path in files)])[len(REPORTS):]
     episodes = [Episode(safe_name(name), (str(path),)) for name, path in zip(names, [*sessions, *files], strict=True)]
-    return Season(folder.name, tuple(sorted(episodes, key=lambda e: _natural(e.name))), tuple(notes))
+    return Season(title or folder.name, tuple(sorted(episodes, key=lambda e: _natural(e.name))), tuple(notes))
 
 
 def _sorted_out(folder: Path) -> tuple[list[Path], list[Path], list[str]]:

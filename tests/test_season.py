@@ -44,6 +44,8 @@ def test_a_folder_lists_its_sessions_in_natural_order(tmp_path: Path) -> None:
     assert read_season(tmp_path).notes == (
         "notes: no audio directly in it, left out", "out: written by leveller, left out")
     assert read_season(tmp_path).title == tmp_path.name
+    (tmp_path / "season.toml").write_text('title = "The Harbour"\n')
+    assert read_season(tmp_path).title == "The Harbour"
 
 
 def test_a_session_is_no_season(tmp_path: Path) -> None:
