@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import dataclasses
 import os
+import re
 import time
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping
@@ -23,7 +24,7 @@ from leveller.cluster import ClusterWorkers
 from leveller.desk import Desk
 from leveller.errors import OutputError, SettingsError
 from leveller.fingerprint import made_by
-from leveller.folder import clean_up
+from leveller.folder import clean_up, remove
 from leveller.interruptions import Interruptions
 from leveller.lanes import processor_count
 from leveller.render.mix import LEVELS
@@ -34,6 +35,7 @@ from leveller.settings import Settings, delivery_named
 from leveller.worker import LOST, MOST_TRIES, Task, work
 from leveller.workers import LocalWorkers, default_jobs
 
+RESTS = re.compile(r"\.(?P<name>.+)\.(?P<kind>part|old)-\d+", re.DOTALL)  # as `folder` names them
 TICK_S = 0.25  # between two looks at what is running
 MOST_JOBS = 256
 TAKEN_BACK = "the cluster took it back: its scheduler has ended or is out of reach. Start it again and go on"
@@ -112,6 +114,7 @@ def batch(
     found, folder, started_s = read_season(Path(season)), Path(os.path.abspath(out)), time.monotonic()
     _check_place(found, Path(season), folder)
     with Interruptions() as interruptions, Desk(folder) as desk, ExitStack() as stack:
+        _clean_up_behind(folder, {episode.name for episode in found.episodes})
         options: dict[str, Any] = {"delivery": delivery, "stems": stems, "settings": tuple((settings or {}).items()),
                    "accept_short": accept_short, "align": align, "again": again, "made_by": tuple(made_by().items()),
                    "threads": _threads_each(len(found.episodes), jobs, cluster)}
@@ -152,6 +155,18 @@ def _check_place(season: Season, path: Path, out: Path) -> None:
         for source in episode.sources:
             if Path(source).resolve().is_relative_to(place):
                 raise OutputError(f"{place}: is or holds the source of {episode.name}. Choose another --out")
+
+
+def _clean_up_behind(out: Path, names: set[str]) -> None:
+    """Remove what killed workers have left, also of episodes that are unchanged now and that no worker will open."""
+    for place in list(out.iterdir()):
+        rest = RESTS.fullmatch(place.name)
+        if rest is None or rest["name"] not in names:
+            continue
+        if rest["kind"] == "part":
+            clean_up(out / rest["name"])
+        elif (out / rest["name"]).exists():  # where it does not, the episode's turn puts this one back
+            remove(place)
 
 
 def _told_from(season: Season, path: Path, outcomes: list[Outcome], out: Path) -> list[Outcome]:

@@ -18,6 +18,7 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import BrokenExecutor, Future, ProcessPoolExecutor
+from pathlib import Path
 from types import FrameType, TracebackType
 from typing import Any
 
@@ -26,6 +27,7 @@ from leveller.interruptions import put_off
 from leveller.lanes import keep_heap, processor_count
 from leveller.worker import busy
 
+PROC, CGROUPS = Path("/proc"), Path("/sys/fs/cgroup")
 JOB_BYTES = 600 << 20  # three hours of eight tracks stay under it
 THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")  # read when numpy is imported
 PATIENCE_S = 10.0  # for a worker to clean up
@@ -96,13 +98,35 @@ def default_jobs() -> int:
 
 
 def _free_bytes() -> int | None:
-    """Memory that programs can still take, None where the system does not say."""
-    try:
-        with open("/proc/meminfo", encoding="ascii") as file:
-            facts = dict(line.split(":", 1) for line in file)
-        return int(facts["MemAvailable"].split()[0]) * 1024
-    except (OSError, KeyError, ValueError):
-        return None
+    """Memory that programs can still take here, None where the system does not say."""
+    found = [*_free_of_machine(), *_free_of_group()]
+    return min(found) if found else None
+
+
+def _free_of_machine() -> Iterator[int]:
+    """What Linux estimates, proc(5)."""
+    with contextlib.suppress(OSError, KeyError, ValueError):
+        facts = dict(line.split(":", 1) for line in (PROC / "meminfo").read_text(encoding="ascii").splitlines())
+        yield int(facts["MemAvailable"].split()[0]) * 1024
+
+
+def _free_of_group() -> Iterator[int]:
+    """What the limits of a container or a service leave (cgroup v2, memory.max); file cache is given back on need."""
+    with contextlib.suppress(OSError, ValueError):
+        own = (PROC / "self" / "cgroup").read_text(encoding="utf-8").rpartition("0::/")[2].splitlines()
+        inner = CGROUPS / (own[0] if own else "")
+        for group in (inner, *inner.parents):
+            if group.is_relative_to(CGROUPS):
+                yield from _free_below(group)
+
+
+def _free_below(group: Path) -> Iterator[int]:
+    """What one group's limit leaves; nothing where it has none."""
+    with contextlib.suppress(OSError, ValueError, KeyError):
+        most = int((group / "memory.max").read_text(encoding="ascii"))  # "max" is no number
+        facts = dict(line.split() for line in (group / "memory.stat").read_text(encoding="ascii").splitlines())
+        cache = int(facts["inactive_file"]) + int(facts["active_file"])
+        yield max(0, most - int((group / "memory.current").read_text(encoding="ascii")) + cache)
 
 
 def _new_pool() -> ProcessPoolExecutor:

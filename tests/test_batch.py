@@ -204,6 +204,32 @@ def test_jobs_say_how_much_of_the_machine_is_used(
     assert batch_module._threads_each(episodes, jobs, cluster) == threads
 
 
+def test_a_containers_memory_counts(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The narrowest limit of the groups a process is in says how many jobs there is memory for; cache is free."""
+    monkeypatch.setattr(workers, "processor_count", lambda: 16)
+    monkeypatch.setattr(workers, "PROC", tmp_path / "proc")
+    monkeypatch.setattr(workers, "CGROUPS", tmp_path / "cgroup")
+    assert workers.default_jobs() == 16
+    (tmp_path / "proc" / "self").mkdir(parents=True)
+    (tmp_path / "proc" / "meminfo").write_text(f"MemFree: 12 kB\nMemAvailable: {12 * workers.JOB_BYTES // 1024} kB\n")
+    assert workers.default_jobs() == 12
+    (tmp_path / "proc" / "self" / "cgroup").write_text("1:name=systemd:/x\n0::/box/run\n")
+
+    def limited(name: str, most: str, current: int, cache: int) -> None:
+        group = tmp_path / "cgroup" / name
+        group.mkdir(parents=True, exist_ok=True)
+        (group / "memory.max").write_text(f"{most}\n")
+        (group / "memory.current").write_text(f"{current}\n")
+        (group / "memory.stat").write_text(f"anon 1\ninactive_file {cache}\nactive_file 0\n")
+
+    limited("box/run", "max", workers.JOB_BYTES, 0)
+    assert workers.default_jobs() == 12
+    limited("box", str(6 * workers.JOB_BYTES), 4 * workers.JOB_BYTES, 3 * workers.JOB_BYTES)
+    assert workers.default_jobs() == 5
+    limited("box/run", str(workers.JOB_BYTES // 2), 0, 0)
+    assert workers.default_jobs() == 1
+
+
 def test_a_worker_keeps_to_its_threads(made: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """The limit of a task holds while its episode is processed, and no longer."""
     monkeypatch.setattr(lanes, "processor_count", lambda: 4)
@@ -331,6 +357,17 @@ def test_a_worker_lost_once_costs_nothing(season: Path, tmp_path: Path) -> None:
     assert outcomes(report) == {"ep 1": "finished"}
     assert report.episodes[0].tries == 2
     assert hidden(out) == []
+
+
+def test_what_a_killed_season_left_goes(season: Path, tmp_path: Path, in_process: None) -> None:
+    """Work folders of dead workers go with the next run, of unchanged episodes too; what is not an episode's stays."""
+    out, dead = tmp_path / "out", 2**22 + 5  # beyond the kernel's highest number
+    batch(season, out=out, jobs=1)
+    for name in (f".ep 1.part-{dead}", f".ep 1.old-{dead}", f".ep 1.part-{os.getppid()}", f".mine.part-{dead}"):
+        (out / name / "stems").mkdir(parents=True)
+        (out / name / "stems" / "big.wav").write_bytes(b"x")
+    assert outcomes(batch(season, out=out, jobs=1))["ep 1"] == "unchanged"
+    assert sorted(hidden(out)) == sorted([f".ep 1.part-{os.getppid()}", f".mine.part-{dead}"])
 
 
 @pytest.mark.parametrize("ending", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP, signal.SIGKILL])
