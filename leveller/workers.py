@@ -54,8 +54,9 @@ class LocalWorkers:
         place = next(i for i, last in enumerate(self._last) if last is None or last.done())
         for _ in range(2):
             try:
-                with _not_from_terminals():  # the processes that may start now inherit this
+                with _not_from_terminals():  # a process that starts now inherits this: multiprocessing's own helper,
                     pool = self._pools[place] = self._pools[place] or _new_pool()
+                with _not_from_terminals():  # after whose start Ctrl-C is let through again, and the worker
                     future = pool.submit(_served, function, *arguments)
             except BrokenExecutor:  # its process has died, at work or idle
                 self._pools[place] = None

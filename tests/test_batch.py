@@ -359,6 +359,26 @@ def test_a_worker_lost_once_costs_nothing(season: Path, tmp_path: Path) -> None:
     assert hidden(out) == []
 
 
+@pytest.mark.skipif(not Path("/proc/self/status").exists(), reason="only where the system shows blocked signals")
+def test_a_terminals_signals_reach_no_helper(tmp_path: Path) -> None:
+    """From its first moment the first worker does not get Ctrl-C or a hang-up, nor does multiprocessing's tracker."""
+    (tmp_path / "look.py").write_text(
+        "from multiprocessing import resource_tracker\nfrom pathlib import Path\n"
+        "from leveller.workers import LocalWorkers\n"
+        "def blocked(text):\n    return int(text.partition('SigBlk:')[2].split()[0], 16)\n"
+        "if __name__ == '__main__':\n"
+        "    with LocalWorkers(1) as workers:\n"
+        "        worker = workers.submit(Path.read_text, Path('/proc/self/status')).result()\n"
+        "        tracker = Path(f'/proc/{resource_tracker._resource_tracker._pid}/status').read_text()\n"
+        "        print(blocked(worker), blocked(tracker))\n")
+    command = [sys.executable, str(tmp_path / "look.py")]
+    run = subprocess.run(command, capture_output=True, text=True, timeout=PATIENCE_S)
+    worker_, tracker = map(int, run.stdout.split())
+    hang_up, interrupt = (1 << number - 1 for number in (signal.SIGHUP, signal.SIGINT))
+    assert worker_ & (hang_up | interrupt) == hang_up | interrupt
+    assert tracker & hang_up
+
+
 def test_what_a_killed_season_left_goes(season: Path, tmp_path: Path, in_process: None) -> None:
     """Work folders of dead workers go with the next run, of unchanged episodes too; what is not an episode's stays."""
     out, dead = tmp_path / "out", 2**22 + 5  # beyond the kernel's highest number
