@@ -22,6 +22,7 @@ import typer
 
 from leveller import __version__, console
 from leveller.errors import LevellerError
+from leveller.interruptions import put_off
 from leveller.lanes import keep_heap
 
 THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
@@ -212,19 +213,25 @@ def batch(
     """Process a season: every episode, one failure stopping nothing, and a report on all."""
     with _reported(debug):
         from leveller.batch import batch as run_batch
+        from leveller.report.season_files import SeasonUnwritten
         from leveller.report.season_text import format_season, last_lines
         from leveller.settings import parse_assignments
 
         with console.season_progress(quiet=quiet) as on_season:
-            report = run_batch(
-                season, out=out, jobs=jobs, again=again, delivery=delivery, stems=stems,
-                settings=parse_assignments(assignments or []), accept_short=accept_short, align=align, cluster=cluster,
-                on_season=on_season)
+            try:
+                report, unwritten = run_batch(
+                    season, out=out, jobs=jobs, again=again, delivery=delivery, stems=stems,
+                    settings=parse_assignments(assignments or []), accept_short=accept_short, align=align,
+                    cluster=cluster, on_season=on_season), None
+            except SeasonUnwritten as error:
+                report, unwritten = error.report, error
         width = console.terminal_width(sys.stdout)
         if not quiet:
             console.print_lines(format_season(report, out=_near(Path(os.path.abspath(out))), width=width))
         elif report.exit_code:
             console.print_lines(last_lines(report), sys.stderr)
+        if unwritten is not None:
+            raise unwritten
         raise typer.Exit(report.exit_code)
 
 
@@ -267,6 +274,8 @@ def main(arguments: Sequence[str] | None = None) -> None:
 
 def _interrupt(number: int, frame: FrameType | None) -> None:
     """End the work at the first Ctrl-C; the tidying up that follows is brief, and another would leave it undone."""
+    if put_off(number, frame):
+        return
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     raise KeyboardInterrupt
 
