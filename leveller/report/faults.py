@@ -48,6 +48,12 @@ def left_open(report: Report, result: Result) -> tuple[str, ...]:
     return (*mix_left_open(report), *_left_open(report, result))
 
 
+def over_full_scale(name: str, peak_dbfs: float, at_s: float) -> Fault:
+    """A file of floats whose peaks pass full scale."""
+    return Fault("over full scale", name, f"{name}: peaks reach {peak_dbfs:+.1f} dBFS; the file holds floats, so "
+                 "nothing is lost", ((at_s, at_s),))
+
+
 def _session_faults(result: Result) -> Iterator[Fault]:
     """Set aside, notes, skipped stretches and steady tone."""
     session = result.session
@@ -99,9 +105,7 @@ def _waveform_faults(name: str, peaks: PeakReading, padded: float) -> Iterator[F
     if peaks.clipped:
         yield Fault("clipped", name, f"{name}: clipped in {_count(len(peaks.clipped), 'place')}", peaks.clipped)
     if peaks.sample_peak_dbfs > 0:
-        at = peaks.sample_peak_s
-        yield Fault("over full scale", name, f"{name}: peaks reach {peaks.sample_peak_dbfs:+.1f} dBFS; the file holds "
-                    "floats, so nothing is lost", ((at, at),))
+        yield over_full_scale(name, peaks.sample_peak_dbfs, peaks.sample_peak_s)
     dc_dbfs = gain_to_db(max(map(abs, peaks.dc_offset)) * padded)
     if dc_dbfs > DC_DBFS:
         yield Fault("DC", name, f"{name}: DC offset of {dc_dbfs:.0f} dBFS, left as it is; high_pass_hz = 20 for this "
