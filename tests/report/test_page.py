@@ -20,7 +20,7 @@ import pytest
 import soundfile as sf
 from browsing import Page, start
 
-from leveller.pipeline import Result, process
+from leveller.pipeline import Result, process, render_again
 from leveller.plan.stretches import stretches
 from leveller.report.page import page_html, write_page
 from leveller.sessionfile import read_corrections
@@ -356,6 +356,19 @@ def test_saved_corrections_say_which_times_they_mean(
         assert [c.timeline for c in read_corrections(page.save(downloads))] == [said]
         assert page.text("#again") == f"leveller process SESSION --replace --corrections corrections.csv{words}"
         (result.out / f"{name}.html").unlink()
+
+
+def test_edits_that_a_new_run_would_lose_are_said(page: Page, result: Result, folder: Path, tmp_path: Path) -> None:
+    """The page of a render from an edited automation.csv says that process does not hold the edits; others do not."""
+    assert not page.find("#by-hand").is_displayed()
+    lines = (result.out / "automation.csv").read_text(encoding="utf-8").splitlines(keepends=True)
+    was = f",{result.plan.tracks[0].gain_cdb[0] / 100:.2f},"
+    assert lines[1].count(was) == 1
+    lines[1] = lines[1].replace(was, ",-20.00,")
+    (tmp_path / "edited.csv").write_text("".join(lines), encoding="utf-8", newline="")
+    again = render_again(folder, tmp_path / "edited.csv", out=tmp_path / "done")
+    page.open(again.out / "report.html")
+    assert page.find("#by-hand").is_displayed()
 
 
 def test_all_short_answers_in_one_go(page: Page, result: Result, downloads: Path) -> None:
