@@ -22,6 +22,7 @@ from leveller.attribute import attribute
 from leveller.findings import Inspection
 from leveller.inspection import inspect, inspect_session
 from leveller.measure import measure
+from leveller.measure.alignment import BAND_HZ, peak_of
 from leveller.measure.hum import HIGHEST_HZ, hum_in
 from leveller.measure.loudness import k_weighting, power_to_lufs
 from leveller.report.inspection import format_inspection, inspection_json, inspection_svg
@@ -127,6 +128,17 @@ def test_delay_is_right_in_a_live_room(spoken, plain):
     way = distances_m(spoken)
     expected_s = (way - np.diag(way)[:, None]) / SPEED_M_S
     assert off_diagonal(plain.delay_s) == pytest.approx(off_diagonal(expected_s), abs=0.0003)
+
+
+@pytest.mark.parametrize(("share", "found_ms"), [(0.6, 2.8), (0.3, 7.0)])
+def test_a_soft_direct_sound_comes_before_a_loud_wall(share, found_ms):
+    """A direct sound 4 dB under the wall's is the delay; one 10 dB under it may be ripple."""
+    lines = np.arange(*BAND_HZ)
+    near = np.random.default_rng(3).normal(size=(12, len(lines), 2)) @ [1, 1j]
+    way = share * np.exp(-2j * np.pi * lines * 0.0028) + np.exp(-2j * np.pi * lines * 0.0070)
+    height, lag_s = peak_of(near, near * way)
+    assert height > 0
+    assert lag_s == pytest.approx(found_ms / 1000, abs=DELAY_BAND_S)
 
 
 def test_recording_gains_cancel_out_of_the_bleed(spoken, plain, tmp_path):

@@ -35,7 +35,7 @@ def format_inspection(inspection: Inspection) -> list[str]:
         lines += ["", *_matrix(table, table.coupling_db, "Coupling: the same in dB against the voice's own microphone, "
                                "in speech bands, gains as recorded", _db)]
         lines += ["", *_matrix(table, table.delay_s, "Delay: how much later the microphone hears the voice, in ms "
-                               f"(and metres at {SPEED_M_S:.0f} m/s)", _way)]
+                               f"(and metres at {SPEED_M_S:.0f} m/s; over a wall where that is what it hears)", _way)]
     if found.alignment:
         lines += ["", *_alignment(found)]
     lines += ["", *_room_tone(found)]
