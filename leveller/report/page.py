@@ -32,7 +32,7 @@ import numpy as np
 import numpy.typing as npt
 
 from leveller.measure.levels import SILENT, level_to_db
-from leveller.plan import STATES, TrackGain
+from leveller.plan import CAUSES, STATES, TrackGain
 from leveller.render.mix import Mix
 from leveller.session import Session, Track
 from leveller.sessionfile import GAIN_BOUNDS
@@ -44,6 +44,7 @@ if TYPE_CHECKING:
 
 SHARED_SCRIPTS = ("page_record.js", "page_sound.js", "page_score.js", "page_drawing.js")
 MOST_CELLS = 3_000_000  # bytes of drawn levels over all tracks; an hour of three tracks has 1 080 000
+EDIT = CAUSES.index("edit")
 LOWEST_DB = -127.0  # byte 0; half a dB a step from here
 STEPS_PER_DB = 2
 TOP_PERCENTILE = 99.9  # of a track's audible cells: what the drawing's upper edge stands for
@@ -161,6 +162,7 @@ def _record(
         "skips": [{"from_s": skip.from_s, "to_s": skip.to_s, "why": skip.why} for skip in session.skips],
         "places": [_place(place) for place in places],
         "summary": summary_record(summary),
+        "by_hand": not result.fingerprint and any(EDIT in gain.cause for gain in result.plan.tracks),
         "corrections": [{"track": c.track, "from_s": c.from_s, "to_s": c.to_s, "decide": c.decide, "gain_db": c.gain_db}
                         for c in session.corrections]}
 

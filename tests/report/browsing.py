@@ -82,6 +82,7 @@ class Page:
         for key in held:
             actions.key_up(key)
         actions.perform()
+        self.drawn()
 
     def drag(self, start: tuple[float, float], end: tuple[float, float] | None = None) -> None:
         """Click at a point of the score, or drag to another; from its upper left corner."""
@@ -94,6 +95,12 @@ class Page:
             pointer.move_to_location(*(round(b + s + part * (e - s)) for b, s, e in zip(box, start, end, strict=True)))
         pointer.pointer_up()
         actions.perform()
+        self.drawn()
+
+    def drawn(self) -> None:
+        """Wait until what was asked for is on the page: it draws with the next frame, and that one is over then."""
+        self.driver.execute_async_script(
+            "const done = arguments[0]; requestAnimationFrame(() => requestAnimationFrame(() => done()))")
 
     def actions(self) -> Any:
         from selenium.webdriver.common.action_chains import ActionChains
