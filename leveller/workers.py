@@ -112,22 +112,26 @@ def _free_of_machine() -> Iterator[int]:
 
 
 def _free_of_group() -> Iterator[int]:
-    """What the limits of a container or a service leave (cgroup v2, memory.max); file cache is given back on need."""
+    """What the limits of a container or a service leave, of all groups this process is in (cgroups(7), both kinds)."""
     with contextlib.suppress(OSError, ValueError):
-        own = (PROC / "self" / "cgroup").read_text(encoding="utf-8").rpartition("0::/")[2].splitlines()
-        inner = CGROUPS / (own[0] if own else "")
-        for group in (inner, *inner.parents):
-            if group.is_relative_to(CGROUPS):
-                yield from _free_below(group)
+        for line in (PROC / "self" / "cgroup").read_text(encoding="utf-8").splitlines():
+            _, controllers, path = line.split(":", 2)
+            if controllers == "":
+                yield from _free_below(CGROUPS, path, ("memory.max", "memory.current"), "")
+            elif "memory" in controllers.split(","):
+                yield from _free_below(CGROUPS / controllers, path,
+                                       ("memory.limit_in_bytes", "memory.usage_in_bytes"), "total_")
 
 
-def _free_below(group: Path) -> Iterator[int]:
-    """What one group's limit leaves; nothing where it has none."""
-    with contextlib.suppress(OSError, ValueError, KeyError):
-        most = int((group / "memory.max").read_text(encoding="ascii"))  # "max" is no number
-        facts = dict(line.split() for line in (group / "memory.stat").read_text(encoding="ascii").splitlines())
-        cache = int(facts["inactive_file"]) + int(facts["active_file"])
-        yield max(0, most - int((group / "memory.current").read_text(encoding="ascii")) + cache)
+def _free_below(root: Path, path: str, files: tuple[str, str], prefix: str) -> Iterator[int]:
+    """What a group and those above it leave; file cache is given back on need. A container sees its own as the root."""
+    own = root / path.lstrip("/")
+    for group in (own, *own.parents[: len(own.relative_to(root).parts)]):
+        with contextlib.suppress(OSError, ValueError, KeyError):
+            most, used = (int((group / name).read_text(encoding="ascii")) for name in files)  # "max" is no number
+            facts = dict(line.split() for line in (group / "memory.stat").read_text(encoding="ascii").splitlines())
+            cache = int(facts[f"{prefix}inactive_file"]) + int(facts[f"{prefix}active_file"])
+            yield max(0, most - used + cache)
 
 
 def _new_pool() -> ProcessPoolExecutor:

@@ -228,6 +228,14 @@ def test_a_containers_memory_counts(tmp_path: Path, monkeypatch: pytest.MonkeyPa
     assert workers.default_jobs() == 5
     limited("box/run", str(workers.JOB_BYTES // 2), 0, 0)
     assert workers.default_jobs() == 1
+    (tmp_path / "proc" / "self" / "cgroup").write_text("4:memory:/outside/box\n3:cpuset:/\n0::/\n")
+    assert workers.default_jobs() == 12
+    group = tmp_path / "cgroup" / "memory"  # the older kind, seen from inside a container: its own group is the root
+    group.mkdir()
+    (group / "memory.limit_in_bytes").write_text(str(4 * workers.JOB_BYTES))
+    (group / "memory.usage_in_bytes").write_text(str(workers.JOB_BYTES))
+    (group / "memory.stat").write_text("inactive_file 9\ntotal_inactive_file 0\ntotal_active_file 0\n")
+    assert workers.default_jobs() == 3
 
 
 def test_a_worker_keeps_to_its_threads(made: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
