@@ -12,7 +12,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from leveller.align import aligned, alignment_notes, find_alignment
+from leveller.align import aligned, find_alignment
 from leveller.attribute import Activity, attribute
 from leveller.automation import NO_ROWS, read_automation, row_keys, write_automation
 from leveller.cut import Finished, deliver_cut, open_cut
@@ -33,6 +33,7 @@ from leveller.report.tables import write_tables
 from leveller.report.text import summary_blocks
 from leveller.request import Request, cut_folder, default_out, output_folder, source_paths
 from leveller.session import Session
+from leveller.suspects import alignment_notes
 from leveller.timeline import check_table, retimed
 from leveller.units import frames_to_hops
 
