@@ -28,7 +28,7 @@ from leveller.plan import GainPlan, make_plan
 from leveller.plan.corrections import overruled
 from leveller.render.mix import LEVELS, Mix, render
 from leveller.report.finished import write_finished
-from leveller.report.page import write_page
+from leveller.report.session_page import write_page
 from leveller.report.tables import write_tables
 from leveller.report.text import summary_blocks
 from leveller.request import Request, cut_folder, default_out, output_folder, source_paths
