@@ -76,13 +76,12 @@ def inspect(
     InputError, SettingsError
     """
     session = open_session(sources, align=align, **opening)
-    align = session.align
-    check_asked(session, (), align=align)
+    check_asked(session)
     measurements = measure(session, on_progress=on_progress)
     found: tuple[TrackAlignment, ...] = ()
-    if align:
+    if session.align:
         found = find_alignment(session, measurements)
-        as_opened, session = session, retimed(session, aligned(session, found), align=True)
+        as_opened, session = session, retimed(session, aligned(session, found))
         if session.tracks != as_opened.tracks:
             measurements = measure(session, on_progress=on_progress)
     else:

@@ -176,7 +176,7 @@ def render_again(
     measurements = None
     if session.align:  # the rows of the file belong to the session as it was lined up
         session, measurements = _measured(homes, session, on_progress, None)
-        check_table(automation, session, align=True)
+        check_table(automation, session)
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
     read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)
@@ -254,7 +254,7 @@ def _measured(
     measurements = measurements_of(session)
     if not session.align:
         return session, measurements
-    lined_up = retimed(session, aligned(session, find_alignment(session, measurements)), align=True)
+    lined_up = retimed(session, aligned(session, find_alignment(session, measurements)))
     return lined_up, measurements if lined_up.tracks == session.tracks else measurements_of(lined_up)
 
 

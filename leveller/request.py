@@ -65,7 +65,7 @@ class Request:
             paths, delivery=self.delivery, assignments=self.settings, accept_short=self.accept_short,
             corrections=None if speech else self.corrections, season=self.season, align=self.align)
         check_corrections(session)
-        check_asked(session, [*tables, *([speech] if speech else [])], align=session.align)
+        check_asked(session, [*tables, *([speech] if speech else [])])
         return session
 
     def with_speech_table(self, session: Session, activity: Activity) -> Session:
@@ -73,7 +73,7 @@ class Request:
         speech = self._speech_table()
         if speech is None:
             return session
-        check_table(speech, session, align=session.align)
+        check_table(speech, session)
         return with_speech_table(session, activity, speech)
 
     def fingerprint(self) -> str:

@@ -71,13 +71,13 @@ def onsets(levels: Levels) -> Onsets:
     return out
 
 
-def common_line(first: Onsets, second: Onsets, *, reach: int = REACH_HOPS) -> Line:
+def common_line(first: Onsets, second: Onsets) -> Line:
     """The line of offset and drift on which two tracks share the most onsets.
 
     Its score is 0 where a track is silent; below `ENOUGH_SCORE` it is chance.
     """
     hops = min(len(first), len(second))
-    reach = min(reach, max(hops - STRETCH_HOPS // 8, 1))
+    reach = min(REACH_HOPS, max(hops - STRETCH_HOPS // 8, 1))
     starts = list(range(0, max(hops - STRETCH_HOPS // 2, 1), STRETCH_HOPS))
     evidence = np.stack([_evidence(first, second, start, reach) for start in starts])
     middles = np.array([(start + min(start + STRETCH_HOPS, hops)) / 2 for start in starts])

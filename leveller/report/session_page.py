@@ -19,7 +19,7 @@ import numpy.typing as npt
 
 from leveller.listen import Place
 from leveller.measure.levels import SILENT, level_to_db
-from leveller.plan import STATES, TrackGain
+from leveller.plan import STATES, TrackGain, states_of
 from leveller.report.page import (
     LOWEST_DB,
     STEPS_PER_DB,
@@ -117,7 +117,7 @@ def _top_db(cells: npt.NDArray[np.uint8]) -> float:
 
 def _runs(own: Bools, bleed: Bools) -> list[int]:
     """States as state, hops, state, hops, ..."""
-    states = np.where(own, STATES.index("own"), np.where(bleed, STATES.index("bleed"), STATES.index("silence")))
+    states = states_of(own, bleed)
     if not len(states):
         return []
     starts = np.flatnonzero(np.concatenate([[True], states[1:] != states[:-1]]))
