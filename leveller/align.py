@@ -247,7 +247,7 @@ def _moved(track: Track, found: Alignment, session: Session, start_s: float) -> 
 
 
 def said_of(found: Alignment, session: Session, turned: bool, *, done: bool = True) -> list[str]:
-    """One line on a track that is off or unknown."""
+    """One line on a track that is off or unknown, none on another; `done` where it was put right."""
     if found.offset_s is None or found.drift_ppm is None:
         return [f"{found.track}: no sound in common with the other tracks, {LEFT}"]
     parts = []

@@ -100,6 +100,11 @@ def pieces(path: Path | Sequence[Part], starts: Sequence[int], *, frames: int) -
     """Read some places of a file, each `(frames, channels)`; zeros where a place lies outside the file.
 
     The same array is filled again for each place. The files of a split take (`parts_of(track)`) count as one.
+
+    Raises
+    ------
+    InputError
+        where the file cannot be opened or read there.
     """
     with _open_samples(path) if isinstance(path, Path) else _open_parts(path) as file:
         length = file.frames if isinstance(path, Path) else sum(part.frames for part in path)  # that are taken
@@ -175,7 +180,13 @@ def open_readers(session: SourceList) -> Iterator[list[TrackReader]]:
 
 
 def file_blocks(path: Path, frames: int, *, length: int | None = None) -> Iterator[Samples]:
-    """A file (its first `length` frames) in blocks, shape=(frames, channels), at its own rate, the last one shorter."""
+    """A file (its first `length` frames) in blocks, shape=(frames, channels), at its own rate, the last one shorter.
+
+    Raises
+    ------
+    InputError
+        where the file cannot be opened, or read any further.
+    """
     with _open(path) as file:
         left = file.frames if length is None else length
         while left > 0:

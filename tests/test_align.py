@@ -25,8 +25,8 @@ from leveller.pipeline import process
 from leveller.session import Session, open_session
 from leveller.suspects import alignment_notes
 
-OFFSET_BAND_S = 0.001  # the issue: within 1 ms
-DRIFT_BAND_PPM = 1.0  # the issue: within 1 ppm over an hour
+OFFSET_BAND_S = 0.001  # what we promise (docs/alignment.md): within 1 ms
+DRIFT_BAND_PPM = 1.0  # what we promise (docs/alignment.md): within 1 ppm over an hour
 HOUR_PIECES_S = (20, 1200, 2400, 3520)  # where half a minute of talk each lies in the hour
 
 

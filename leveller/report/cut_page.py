@@ -18,29 +18,17 @@ import numpy.typing as npt
 
 from leveller.cut import Finished
 from leveller.measure.outline import Outlined
-from leveller.report.page import (
-    PageKind,
-    Summary,
-    assembled,
-    encoded,
-    hops_per_cell,
-    level_steps,
-    mix_record,
-    scale_record,
-    source_note,
-    source_url,
-    summary_record,
-)
+from leveller.report import page
 from leveller.spots import Spot, strongest
 from leveller.units import gain_to_db
 
 MOST_CELLS = 1_500_000  # over all rows, a byte each: the page stays under 3 MB; an hour of two files has 1 440 000
 STEPS_PER_LIMITER_DB = 10
-CUT = PageKind(("page_cut.js",), "", {
+CUT = page.PageKind(("page_cut.js",), "", {
     "TRACK": "File", "PIECE": "cut", "NOTHING": "Nothing stands out.", "ASIDE": "Places, summary"})
 
 
-def write_cut_page(path: Path, finished: Finished, spots: Sequence[Spot], summary: Summary) -> None:
+def write_cut_page(path: Path, finished: Finished, spots: Sequence[Spot], summary: page.Summary) -> None:
     """Write report.html.
 
     Parameters
@@ -50,41 +38,41 @@ def write_cut_page(path: Path, finished: Finished, spots: Sequence[Spot], summar
     finished : Finished
     spots : sequence of Spot
         what is worth a listen, the strongest first; may be empty
-    summary : Summary
+    summary : page.Summary
         may be empty
     """
     path.write_text(cut_page_html(finished, spots, summary), encoding="utf-8", newline="\n")
 
 
-def cut_page_html(finished: Finished, spots: Sequence[Spot], summary: Summary) -> str:
+def cut_page_html(finished: Finished, spots: Sequence[Spot], summary: page.Summary) -> str:
     """The whole page as text; the same cut gives the same text."""
     session, mix = finished.session, finished.mix
-    cell_hops = hops_per_cell(len(finished.mix_peaks), len(session.tracks) + 2, most_cells=MOST_CELLS)
+    cell_hops = page.hops_per_cell(len(finished.mix_peaks), len(session.tracks) + 2, most_cells=MOST_CELLS)
     listed = strongest(spots)
     record = {
-        **scale_record(session, hops=len(finished.mix_peaks), cell_hops=cell_hops),
-        "steps_per_limiter_db": STEPS_PER_LIMITER_DB, **mix_record(mix), "make_up_db": float(mix.make_up_db),
+        **page.scale_record(session, hops=len(finished.mix_peaks), cell_hops=cell_hops),
+        "steps_per_limiter_db": STEPS_PER_LIMITER_DB, **page.mix_record(mix), "make_up_db": float(mix.make_up_db),
         "tracks": [_file(finished, i, cell_hops) for i in range(len(session.tracks))],
-        "mix": {"levels": encoded(_peak_steps(finished.mix_peaks, cell_hops))},
-        "limiter_steps": encoded(_limiter_steps(finished.limiter_db, cell_hops)), "skips": [],
+        "mix": {"levels": page.encoded(_peak_steps(finished.mix_peaks, cell_hops))},
+        "limiter_steps": page.encoded(_limiter_steps(finished.limiter_db, cell_hops)), "skips": [],
         "places": [{"from_s": spot.from_s, "to_s": spot.to_s, "track": spot.track, "kind": spot.kind,
                     "reason": spot.reason} for spot in listed],
-        "places_more": len(spots) - len(listed), "summary": summary_record(summary)}
-    return assembled(session.title, record, CUT)
+        "places_more": len(spots) - len(listed), "summary": page.summary_record(summary)}
+    return page.assembled(session.title, record, CUT)
 
 
 def _file(finished: Finished, i: int, cell_hops: int) -> dict[str, Any]:
     """One given file: its outline, and where it is heard."""
     track = finished.session.tracks[i]
-    url, why = source_url(track, finished.out)
-    return {"name": track.name, "levels": encoded(_peak_steps(finished.file_peaks[i], cell_hops)), "source": url,
-            "source_why": why, "source_note": source_note(track, finished.session), "offset_s": 0.0}
+    url, why = page.source_url(track, finished.out)
+    return {"name": track.name, "levels": page.encoded(_peak_steps(finished.file_peaks[i], cell_hops)), "source": url,
+            "source_why": why, "source_note": page.source_note(track, finished.session), "offset_s": 0.0}
 
 
 def _peak_steps(peaks: Outlined, cell_hops: int) -> npt.NDArray[np.uint8]:
     """The highest peak of every cell as a byte, half a dB a step; 0 is silence."""
     highest = np.maximum.reduceat(peaks, np.arange(0, len(peaks), cell_hops))
-    return level_steps(gain_to_db(highest))
+    return page.level_steps(gain_to_db(highest))
 
 
 def _limiter_steps(limiter_db: Outlined, cell_hops: int) -> npt.NDArray[np.uint8]:

@@ -28,7 +28,7 @@ RATE_HZ = 48_000
 IMAGE_NAME = "<img src=x onerror=window.hacked=1>"
 SCRIPT_NAME = "&amp; <script>window.hacked=2<!--"
 TITLE = "a cut's 'folder' <b>& more"
-HOUR_BYTES = 3_000_000  # the issue: an hour's cut stays under 3 MB
+HOUR_BYTES = 3_000_000  # what we promise (docs/outputs.md): an hour's cut stays under 3 MB
 LOUD_AT_S = 20.0  # three times as loud for two seconds: over the ceiling, with full scale in the file
 SUMMARY = (("Delivery <i>", ("on target & <script>window.hacked=3</script>",)),)
 

@@ -30,8 +30,8 @@ FORMULA_NAME = "=1+1, \"Odo\" 'mends'"
 PLAIN_NAME = "Isbel"
 TITLE = "</title></script><script>window.hacked=2</script> & more"
 
-HOUR_BYTES = 6_000_000  # the issue: an hour of three tracks stays under 6 MB
-USABLE_S = 2.0  # the issue: usable within 2 s
+HOUR_BYTES = 6_000_000  # what we promise: an hour of three tracks stays under 6 MB
+USABLE_S = 2.0  # what we promise: usable within 2 s
 FRAME_MS = 1000 / 60  # one frame of a usual screen: smooth means that drawing takes less, as a rule
 
 
