@@ -43,7 +43,7 @@ from leveller.wav import FloatSpill, FloatWav, Kind, SampleFile, WavWriter
 __all__ = [
     "AudioSource", "FileFacts", "FloatSpill", "FloatWav", "Part", "Preview", "Resampler", "TrackReader", "WavWriter",
     "append_chunks", "clock_rate_hz", "open_readers", "parts_of", "pieces", "preview", "probe", "read_chunks",
-    "spread_starts",
+    "spread_starts", "track_seconds",
 ]
 
 RATES_HZ = (8000, 192000)
@@ -122,6 +122,18 @@ def pieces(path: Path | Sequence[Part], starts: Sequence[int], *, frames: int) -
                                      f"({_detail(error)}). {WAY_OUT}") from error
                 repair(block)
             yield block
+
+
+def track_seconds(track: AudioSource, rate_hz: int, starts_s: Sequence[float]) -> Iterator[Samples]:
+    """Seconds of a track, each of shape=(source_rate_hz, its channels), that begin at session times.
+
+    `rate_hz` is that of the session. Nothing is resampled, so a line of a spectrum is 1 Hz at any rate of the source;
+    edges and errors as of `pieces`.
+    """
+    hz = track.source_rate_hz
+    places = [round((start_s - track.offset_frames / rate_hz) * hz) for start_s in starts_s]
+    for block in pieces(parts_of(track), places, frames=hz):
+        yield block[:, list(track.channels)]
 
 
 def preview(path: Path | Sequence[Part], facts: FileFacts) -> Preview:
