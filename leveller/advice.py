@@ -30,7 +30,7 @@ LATE_S = 0.01  # our choice: more than the air makes up in a room, and the copie
 NOISE_DB = 30.0  # voice over noise; our choice: below it the noise is heard between words after levelling
 NOISE_OPEN_DB = 36.0  # the same with all microphones open: 6 dB more, as the noise then never stops
 HUM_DB = -40.0  # against the voice (unweighted RMS against LUFS); our choice
-DC_DBFS = -46.0  # half a per cent of full scale; our choice: it costs headroom and clicks at cuts
+DC_DBFS = -50.0  # 0.3 % of full scale; our choice: more costs headroom and clicks at cuts
 LOW_PEAK_DBFS = -20.0  # our choice: three bits and more of the converter lie idle
 LEVELS_DB = 10.0  # between the softest and the loudest voice; our choice, twice what a good set-up leaves
 LEAST_SPEECH_S = 1.0
@@ -78,7 +78,7 @@ def _faults(t: TrackFindings) -> Iterator[Advice]:
     dc_db = gain_to_db(abs(t.dc_offset))
     if dc_db > DC_DBFS:
         yield Advice("dc", t.name, dc_db, "dBFS", f"{t.name} has a DC offset of {100 * t.dc_offset:+.1f} % of full "
-                     f"scale ({dc_db:.0f} dBFS). high_pass_hz = 40 for this track removes it")
+                     f"scale ({dc_db:.0f} dBFS). high_pass_hz = 20 for this track removes it")
 
 
 def _recording(t: TrackFindings) -> Iterator[Advice]:

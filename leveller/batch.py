@@ -10,11 +10,12 @@ from __future__ import annotations
 
 import dataclasses
 import os
+import re
 import time
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping
 from concurrent.futures import FIRST_COMPLETED, Future, wait
-from contextlib import AbstractContextManager
+from contextlib import AbstractContextManager, ExitStack, nullcontext
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Protocol
@@ -23,16 +24,18 @@ from leveller.cluster import ClusterWorkers
 from leveller.desk import Desk
 from leveller.errors import OutputError, SettingsError
 from leveller.fingerprint import made_by
-from leveller.folder import clean_up
+from leveller.folder import clean_up, remove
+from leveller.interruptions import Interruptions
 from leveller.lanes import processor_count
 from leveller.render.mix import LEVELS
 from leveller.report.season import FAILED, FINISHED, WAITING, Outcome, SeasonReport, read_json, season_report
 from leveller.report.season_files import write_season
-from leveller.season import Episode, Season, read_season
+from leveller.season import Episode, Season, read_season, told_from
 from leveller.settings import Settings, delivery_named
 from leveller.worker import LOST, MOST_TRIES, Task, work
 from leveller.workers import LocalWorkers, default_jobs
 
+RESTS = re.compile(r"\.(?P<name>.+)\.(?P<kind>part|old)-\d+", re.DOTALL)  # as `folder` names them
 TICK_S = 0.25  # between two looks at what is running
 MOST_JOBS = 256
 TAKEN_BACK = "the cluster took it back: its scheduler has ended or is out of reach. Start it again and go on"
@@ -99,8 +102,8 @@ def batch(
     Returns
     -------
     SeasonReport
-        Its `exit_code` is 0, 7 where an episode failed, 130 after an interruption (KeyboardInterrupt ends the work,
-        not the report).
+        Its `exit_code` is 0, 7 where an episode failed, 130 after an interruption (Ctrl-C, SIGTERM or SIGHUP; it ends
+        the work, not the report).
 
     Raises
     ------
@@ -110,20 +113,24 @@ def batch(
     _check_options(jobs, delivery, stems, settings)
     found, folder, started_s = read_season(Path(season)), Path(os.path.abspath(out)), time.monotonic()
     _check_place(found, Path(season), folder)
-    with Desk(folder) as desk:
+    with Interruptions() as interruptions, Desk(folder) as desk, ExitStack() as stack:
+        _clean_up_behind(folder, {episode.name for episode in found.episodes})
         options: dict[str, Any] = {"delivery": delivery, "stems": stems, "settings": tuple((settings or {}).items()),
                    "accept_short": accept_short, "align": align, "again": again, "made_by": tuple(made_by().items()),
                    "threads": _threads_each(len(found.episodes), jobs, cluster)}
         tasks = [Task(e, str(folder / e.name), str(desk.path), **options) for e in found.episodes]
-        with _workers(cluster, jobs or default_jobs(), len(tasks), desk) as workers:
-            run = _Run(workers, desk, tasks, on_season)
-            run.all()
+        with interruptions.at_once():
+            workers = stack.enter_context(_workers(cluster, jobs or default_jobs(), len(tasks), desk))
+        run = _Run(workers, desk, tasks, on_season, interruptions, nullcontext if cluster is None
+                   else interruptions.at_once)
+        run.all()
+        stack.close()
         for suspect in run.suspects:
             clean_up(Path(suspect))
-        outcomes = _with_earlier_times(run.in_order(), folder)
+        outcomes = _with_earlier_times(_told_from(found, Path(season), run.in_order(), folder), folder)
         report = season_report(found.title, outcomes, made_by=made_by(), notes=found.notes,
                                interrupted=run.interrupted, took_s=time.monotonic() - started_s)
-        write_season(folder, report)
+        write_season(folder, report, by=desk.path)
     return report
 
 
@@ -150,6 +157,26 @@ def _check_place(season: Season, path: Path, out: Path) -> None:
                 raise OutputError(f"{place}: is or holds the source of {episode.name}. Choose another --out")
 
 
+def _clean_up_behind(out: Path, names: set[str]) -> None:
+    """Remove what killed workers have left, also of episodes that are unchanged now and that no worker will open."""
+    for place in list(out.iterdir()):
+        rest = RESTS.fullmatch(place.name)
+        if rest is None or rest["name"] not in names:
+            continue
+        if rest["kind"] == "part":
+            clean_up(out / rest["name"])
+        elif (out / rest["name"]).exists():  # where it does not, the episode's turn puts this one back
+            remove(place)
+
+
+def _told_from(season: Season, path: Path, outcomes: list[Outcome], out: Path) -> list[Outcome]:
+    """Reasons with paths told from the season's folder, or from that which the output folder lies in."""
+    base = Path(os.path.abspath(path if path.is_dir() else path.parent))
+    return [dataclasses.replace(outcome, reason=told_from(out.parent, told_from(base, outcome.reason, (
+        *episode.sources, *filter(None, [episode.corrections]))), ()))
+        for episode, outcome in zip(season.episodes, outcomes, strict=True)]
+
+
 def _threads_each(episodes: int, jobs: int | None, cluster: str | None) -> int:
     """Processors for each episode: one, unless nobody said how many at once and there are more than are needed."""
     if jobs is not None or cluster is not None:
@@ -170,6 +197,8 @@ class _Run:
     desk: Desk
     tasks: list[Task]
     on_season: OnSeason | None
+    interruptions: Interruptions
+    waiting_for_others: Callable[[], AbstractContextManager[None]]  # round what a cluster may never answer
     interrupted: bool = False
     outcomes: dict[str, Outcome] = field(default_factory=dict)
     running: dict[Future[Outcome], Task] = field(default_factory=dict)
@@ -181,7 +210,10 @@ class _Run:
         waiting = deque(self.tasks)
         try:
             while waiting or self.running:
-                self._hand_out(waiting)
+                self.interruptions.check()
+                self.desk.beat()
+                with self.waiting_for_others():
+                    self._hand_out(waiting)
                 done, _ = wait(self.running, timeout=TICK_S, return_when=FIRST_COMPLETED)
                 for future in done:
                     self._take(future, waiting)

@@ -1,24 +1,28 @@
 """The command line: one short function a command; nothing is computed or drawn here. The sole user of typer.
 
 Commands import what they need when they run, so that `leveller --help` waits for nothing. An error is one line on the
-standard error and an exit code of its kind (`errors`); 2 is a wrong command line, 130 an interruption. `main` limits
-the linear algebra library to one thread unless the environment says otherwise: the work is spread over tracks already.
+standard error and an exit code of its kind (`errors`); 2 is a wrong command line, 130 an interruption: the first
+Ctrl-C ends the work, further ones do not disturb the tidying up. `main` limits the linear algebra library to one thread
+unless the environment says otherwise: the work is spread over tracks already.
 """
 
 from __future__ import annotations
 
 import contextlib
 import os
+import signal
 import sys
 import traceback
 from collections.abc import Iterator, Sequence
 from pathlib import Path
+from types import FrameType
 from typing import Annotated, Any
 
 import typer
 
 from leveller import __version__, console
 from leveller.errors import LevellerError
+from leveller.interruptions import put_off
 from leveller.lanes import keep_heap
 
 THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
@@ -53,6 +57,7 @@ AcceptShort = Annotated[bool, typer.Option(
 Align = Annotated[bool | None, typer.Option(
     "--align/--no-align", help="Line up tracks of separate recorders: start, clock and polarity.", show_default=False)]
 Quiet = Annotated[bool, typer.Option("--quiet", "-q", help="Print nothing but errors and a delivery that is not met.")]
+NoProgress = Annotated[bool, typer.Option("--quiet", "-q", help="Show no progress.")]
 Debug = Annotated[bool, typer.Option("--debug", help="Show where in the program an error arose.")]
 
 
@@ -121,7 +126,10 @@ def finish(
         help="The edited programme, or its stems and music: they are summed as they are.")],
     out: Annotated[Path | None, typer.Option(
         metavar="DIR", help="Folder to write; './levelled/TITLE finished' by default.")] = None,
-    replace: Replace = False, delivery: DeliveryName = None, assignments: Assignments = None,
+    replace: Replace = False, delivery: DeliveryName = None,
+    assignments: Annotated[list[str] | None, typer.Option(
+        "--set", metavar="KEY=VALUE",
+        help="A limiter setting, such as limiter.release_s=0.2; may be given again.")] = None,
     accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
 ) -> None:
     """Bring an edited programme to its delivery: make-up gain and limiter only."""
@@ -142,7 +150,7 @@ def finish(
 def measure(
     files: Files,
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
-    accept_short: AcceptShort = False, quiet: Quiet = False, debug: Debug = False,
+    accept_short: AcceptShort = False, quiet: NoProgress = False, debug: Debug = False,
 ) -> None:
     """Read the loudness and true peak of any files."""
     with _reported(debug):
@@ -164,7 +172,7 @@ def inspect(
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
     picture: Annotated[Path | None, typer.Option(
         metavar="FILE", help="Draw the table and what each microphone hears, as SVG.", show_default=False)] = None,
-    accept_short: AcceptShort = False, align: Align = None, quiet: Quiet = False, debug: Debug = False,
+    accept_short: AcceptShort = False, align: Align = None, quiet: NoProgress = False, debug: Debug = False,
 ) -> None:
     """Look at a session before anything is rendered: levels, faults, bleed, room tone, advice."""
     with _reported(debug):
@@ -205,19 +213,25 @@ def batch(
     """Process a season: every episode, one failure stopping nothing, and a report on all."""
     with _reported(debug):
         from leveller.batch import batch as run_batch
+        from leveller.report.season_files import SeasonUnwritten
         from leveller.report.season_text import format_season, last_lines
         from leveller.settings import parse_assignments
 
         with console.season_progress(quiet=quiet) as on_season:
-            report = run_batch(
-                season, out=out, jobs=jobs, again=again, delivery=delivery, stems=stems,
-                settings=parse_assignments(assignments or []), accept_short=accept_short, align=align, cluster=cluster,
-                on_season=on_season)
+            try:
+                report, unwritten = run_batch(
+                    season, out=out, jobs=jobs, again=again, delivery=delivery, stems=stems,
+                    settings=parse_assignments(assignments or []), accept_short=accept_short, align=align,
+                    cluster=cluster, on_season=on_season), None
+            except SeasonUnwritten as error:
+                report, unwritten = error.report, error
         width = console.terminal_width(sys.stdout)
         if not quiet:
             console.print_lines(format_season(report, out=_near(Path(os.path.abspath(out))), width=width))
         elif report.exit_code:
             console.print_lines(last_lines(report), sys.stderr)
+        if unwritten is not None:
+            raise unwritten
         raise typer.Exit(report.exit_code)
 
 
@@ -225,7 +239,7 @@ def batch(
 def settings(
     session: Annotated[Path | None, typer.Argument(
         metavar="SESSION", help="A folder or a session.toml whose values count.", show_default=False)] = None,
-    assignments: Assignments = None,
+    assignments: Assignments = None, align: Align = None,
     why: Annotated[bool, typer.Option("--why", help="Say the reason for each default.")] = False,
     debug: Debug = False,
 ) -> None:
@@ -235,21 +249,35 @@ def settings(
         from leveller.report.text import format_settings
         from leveller.settings import DELIVERIES, parse_assignments
 
-        rows = settings_in_force(session, parse_assignments(assignments or []))
+        rows = settings_in_force(session, parse_assignments(assignments or []), align=align)
         lines = format_settings([row if why else (*row[:4], "") for row in rows], list(DELIVERIES.values()),
                                 delivery_in_force(session), width=console.terminal_width(sys.stdout))
         console.print_lines(lines)
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
-    """Run a command and leave with its exit code; `sys.argv` by default."""
+    """Run a command and leave with its exit code; by default the process's own command line, and its Ctrl-C."""
     for name in THREAD_LIMITS:
         os.environ.setdefault(name, "1")
     keep_heap()
+    ours = arguments is None and signal.getsignal(signal.SIGINT) is signal.default_int_handler  # else nohup ignores it
+    if ours:
+        signal.signal(signal.SIGINT, _interrupt)
     for stream in (sys.stdout, sys.stderr):
         with contextlib.suppress(AttributeError):  # not every stream can change its ways
             stream.reconfigure(errors="backslashreplace")  # type: ignore[union-attr]
-    sys.exit(_run(list(sys.argv[1:] if arguments is None else arguments)))
+    code = _run(list(sys.argv[1:] if arguments is None else arguments))
+    if ours:
+        signal.signal(signal.SIGINT, signal.SIG_IGN)  # all is done: Python's own leaving is not to be disturbed
+    sys.exit(code)
+
+
+def _interrupt(number: int, frame: FrameType | None) -> None:
+    """End the work at the first Ctrl-C; the tidying up that follows is brief, and another would leave it undone."""
+    if put_off(number, frame):
+        return
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    raise KeyboardInterrupt
 
 
 def _run(arguments: list[str]) -> int:

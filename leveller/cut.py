@@ -15,7 +15,8 @@ from __future__ import annotations
 
 import os
 from collections import Counter
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
+from contextlib import closing
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -32,7 +33,7 @@ from leveller.measure.outline import Outlined, hop_outline
 from leveller.names import safe_name, unique_names
 from leveller.render.limiter import MakeUp
 from leveller.render.mix import BLOCK_S, Bus, Mix
-from leveller.render.programme import Programme, SpilledSum, summed
+from leveller.render.programme import Blocks, Programme, SpilledSum, summed
 from leveller.samples import FileFacts
 from leveller.session import Session, Track, audio_files
 from leveller.settings import Settings, delivery_named
@@ -104,11 +105,12 @@ def deliver_cut(session: Session, folder: OutputFolder, on_progress: OnProgress)
             outlines[lane].push(own)
             return _placed(own, session.mix_channels)
 
-        for block, row in enumerate(walk(step, lanes=len(readers), blocks=-(-session.frames // frames))):
-            total = summed(row)
-            bus.push(total)
-            spilled.append(total)
-            on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
+        with walk(step, lanes=len(readers), blocks=-(-session.frames // frames)) as rows:
+            for block, row in enumerate(rows):
+                total = summed(row)
+                bus.push(total)
+                spilled.append(total)
+                on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
         repaired = tuple(reader.repaired_frames for reader in readers)
         seen = _Outlined(spilled, session.rate_hz)
         mix = bus.deliver(folder.work / "mix.wav", seen, session.delivery, session.settings.limiter, on_progress)
@@ -124,12 +126,13 @@ class _Outlined:
         self.frames, self._programme, self._rate_hz = programme.frames, programme, rate_hz
         self.outline = hop_outline(self.frames, rate_hz)
 
-    def delivered(self, make_up: MakeUp) -> Iterator[Samples]:
+    def delivered(self, make_up: MakeUp) -> Blocks:
         """As `Programme`; each walk makes the outline anew."""
         self.outline = hop_outline(self.frames, self._rate_hz)
-        for block in self._programme.delivered(make_up):
-            self.outline.push(block)
-            yield block
+        with closing(self._programme.delivered(make_up)) as blocks:
+            for block in blocks:
+                self.outline.push(block)
+                yield block
 
 
 def _limiter_per_hop(mix: Mix, hops: int, rate_hz: int) -> Outlined:

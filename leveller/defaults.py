@@ -1,9 +1,10 @@
 """A show's defaults: a season.toml beside its episodes, which every session.toml may override.
 
 season.toml holds what session.toml may say of a whole show (`delivery`, `target_lufs`, `ceiling_dbtp`, `sample_rate`,
-`mix_channels`, `align`, a table per stage), and may name its episodes (`season`). It counts for `process`, `render` and
-`settings` as it does for `batch`: a session folder looks for it in the folder above, a file in its own folder, then
-above. From weakest to strongest: the built-in default, season.toml, session.toml, an episode's row, `--set`.
+`mix_channels`, `align`, a table per stage), and may name its episodes (`season`). It counts for `process`, `render`,
+`inspect` and `settings` as it does for `batch`: a session folder looks for it in the folder above, a file in its own
+folder, then above. From weakest to strongest: the built-in default, season.toml, session.toml, an episode's row,
+`--set`.
 
 Delivery, target and ceiling are one decision: where session.toml names a delivery, nothing of season.toml's counts.
 """

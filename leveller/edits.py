@@ -58,6 +58,8 @@ def with_speech_table(session: Session, activity: Activity, path: Path) -> Sessi
             notes.append(f"{track.name}: {path.name} has no row for {len(gaps)} "
                          f"stretch{'' if len(gaps) == 1 else 'es'} (first from {gaps[0, 0] / HOPS_PER_S:.2f} to "
                          f"{gaps[0, 1] / HOPS_PER_S:.2f} s), left as decided")
+    if not corrections:
+        notes.append(f"{path.name}: says nothing else than was decided, so it changes nothing")
     return dataclasses.replace(
         session, corrections=(*session.corrections, *corrections), notes=(*session.notes, *notes))
 

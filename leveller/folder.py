@@ -4,21 +4,28 @@ Everything is written to a hidden folder beside the wanted one (`.NAME.part-PID`
 when all is done. A folder that is replaced is moved aside first (`.NAME.old-PID`), put back where the rename fails,
 and deleted only after it. What processes that died have left of either kind is cleaned up on the next start. Place,
 room and what lies in the folder to be replaced are checked before any work starts.
+
+An interruption may come between any two steps, also between making a folder and noting that it is made. So whatever
+is made is noted before, and a process that ends takes back what is noted still (`take_back_all`).
 """
 
 from __future__ import annotations
 
+import atexit
 import contextlib
 import os
 import shutil
 import sys
+import time
 from collections.abc import Iterable, Iterator
 from pathlib import Path
 from types import TracebackType
 
 from leveller.errors import InputError, LevellerError, OutputError
 
-_active: set[Path] = set()  # work folders of this very process
+TRIES, BETWEEN_S = 20, 0.02  # to delete a folder into which another thread or process may still write
+
+_active: dict[Path, OutputFolder] = {}  # by work folder: those of this very process
 
 
 class OutputFolder:
@@ -56,7 +63,7 @@ class OutputFolder:
         self._old = self.path.with_name(f".{self.path.name}.old-{os.getpid()}")
         self._replace, self._needed_bytes, self._sources = replace, needed_bytes, tuple(sources)
         self._marks: list[tuple[int, int]] = []  # of the sources, when the work began
-        self._made = False  # the work folder, by this very object
+        self._begun = False  # to make the work folder, by this very object
         self._parents: list[Path] = []  # that were made for it, deepest first
 
     def __enter__(self) -> OutputFolder:
@@ -73,13 +80,14 @@ class OutputFolder:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        if kind is None:
-            self._check_sources()
-            self.publish()
-        else:
+        try:
+            if kind is None:
+                self._check_sources()
+                self.publish()
+        finally:
             self.discard()
-            if isinstance(error, OSError):
-                raise self._told(error) from error
+        if isinstance(error, OSError):
+            raise self._told(error) from error
 
     def file(self, name: str) -> Path:
         """Where to write the file of that name, such as 'stems/Host.wav'; its folder is made.
@@ -106,41 +114,37 @@ class OutputFolder:
         OutputError
             where the rename fails; the older folder is in its place again, the work is discarded
         """
-        moved = False
         try:
             if self._replace and self.path.exists():
                 self.path.rename(self._old)
-                moved = True
             elif self.path.exists():  # made by someone else meanwhile; a rename would take an empty one over
                 raise FileExistsError(17, "exists by now; choose another --out or add --replace")
             self.work.rename(self.path)
-        except BaseException as error:
-            if moved and not self.path.exists():
-                self._old.rename(self.path)
+        except OSError as error:
+            raise OutputError(f"{self.path}: the finished folder cannot be put here ({error.strerror})") from error
+        finally:
             self.discard()
-            if isinstance(error, OSError):
-                raise OutputError(f"{self.path}: the finished folder cannot be put here ({error.strerror})") from error
-            raise
-        _active.discard(self.work)
-        self._made, self._parents = False, []
-        _remove(self._old)
 
     def discard(self) -> None:
-        """Remove all that was written, and the parents that were made for it; doing so twice does no harm."""
-        if self._made:
-            _remove(self.work)
-            _active.discard(self.work)
-            self._made = False
+        """Remove what is not published, put an older folder back where it is missing; doing so twice does no harm."""
+        if not self._begun:
+            return
+        if os.path.lexists(self._old):
+            if self.path.exists():
+                remove(self._old)
+            else:
+                self._old.rename(self.path)
+        remove(self.work)
         for parent in self._parents:
             with contextlib.suppress(OSError):
-                parent.rmdir()  # stays where something else has come into it
-        self._parents = []
+                parent.rmdir()  # stays where something has come into it
+        _active.pop(self.work, None)
+        self._begun, self._parents = False, []
 
     def _check_sources(self) -> None:
-        """Discard what was made of a source that has changed meanwhile: it would be of neither state."""
+        """Refuse what was made of a source that has changed meanwhile: it would be of neither state."""
         for source, before in zip(self._sources, self._marks, strict=True):
             if _mark(source) != before:
-                self.discard()
                 raise InputError(f"{source}: changed while it was read. Run again when nothing else writes to it")
 
     def _told(self, error: OSError) -> LevellerError:
@@ -171,17 +175,18 @@ class OutputFolder:
 
     def _make(self) -> None:
         """Make parents and the work folder, after cleaning up behind processes that died."""
+        self._begun = _active.setdefault(self.work, self) is self
+        if not self._begun:
+            raise OutputError(f"{self.path}: this very process is writing it already. Choose another --out")
         try:
             missing = [parent for parent in self.path.parents if not parent.exists()]
             for parent in reversed(missing):
-                parent.mkdir(exist_ok=True)
                 self._parents.insert(0, parent)
+                parent.mkdir(exist_ok=True)
             self._clean_up()
             self.work.mkdir()
         except OSError as error:
             raise OutputError(f"{self.path}: cannot be written here ({error.strerror})") from error
-        self._made = True
-        _active.add(self.work)
 
     def _check_room(self) -> None:
         """Refuse where the file system has less room than the work takes."""
@@ -206,7 +211,7 @@ class OutputFolder:
     def _rests(self, mark: str) -> Iterator[Path]:
         """Siblings of that kind whose process is gone."""
         for rest, pid in _siblings(self.path, mark):
-            if rest not in _active and not _alive(pid):
+            if _active.get(rest, self) is self and not _alive(pid):
                 yield rest
 
 
@@ -222,13 +227,30 @@ def running_beside(path: Path) -> list[int]:
     return [pid for _, pid in _siblings(path, ".part-") if _alive(pid)]
 
 
-def _remove(folder: Path) -> None:
-    """Delete a folder to its end, also where an interruption comes in between; that is passed on then."""
-    try:
-        shutil.rmtree(folder, ignore_errors=True)
-    except KeyboardInterrupt:
-        shutil.rmtree(folder, ignore_errors=True)
-        raise
+def take_back_all() -> None:
+    """Discard the work that this process has not ended: for its end, when nothing of it goes on."""
+    for folder in list(_active.values()):
+        with contextlib.suppress(OSError):
+            folder.discard()
+
+
+atexit.register(take_back_all)  # its threads are through by then
+
+
+def remove(folder: Path) -> None:
+    """Delete a folder to its end, also where a thread still writes into it or an interruption comes in between."""
+    interrupted = False
+    for left in range(TRIES, 0, -1):
+        try:
+            shutil.rmtree(folder, ignore_errors=True)
+            if not os.path.lexists(folder):
+                break
+            if left > 1:
+                time.sleep(BETWEEN_S)
+        except KeyboardInterrupt:
+            interrupted = True
+    if interrupted:
+        raise KeyboardInterrupt
 
 
 def _mark(source: Path) -> tuple[int, int]:

@@ -1,9 +1,10 @@
 """Several tracks side by side on a few threads, each track strictly in order.
 
-`walk` runs `step(lane, block)` for every block of every lane. A lane's blocks run one after the other (a file is read
-from one thread at a time), lanes run side by side, and the results come back block by block in lane order, so that
-whatever follows (a sum, a cross-correlation) sees the same order on any number of threads. At most `AHEAD` blocks a
-lane are in flight, which bounds the memory.
+`with walk(step, ...) as rows` runs `step(lane, block)` for every block of every lane. A lane's blocks run one after the
+other (a file is read from one thread at a time), lanes run side by side, and the results come back block by block in
+lane order, so that whatever follows (a sum, a cross-correlation) sees the same order on any number of threads. At most
+`AHEAD` blocks a lane are in flight, which bounds the memory. Once it is left, by an error or an interruption too, no
+step runs any more: what the steps read and write can be closed and removed.
 
 How many threads: the processors there are, at most four; inside `limited_to(threads)` no more than that. Limited to
 one, nothing starts a thread: `walk` and the work of a `second_thread` run where they are called, so that an episode of
@@ -21,7 +22,7 @@ import contextlib
 import ctypes
 import os
 from collections import deque
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Generator, Iterator
 from concurrent.futures import Executor, Future, ThreadPoolExecutor
 from contextvars import ContextVar
 from typing import Any, TypeVar
@@ -98,13 +99,17 @@ class _AtOnce(Executor):
 
 def walk(
     step: Callable[[int, int], T], *, lanes: int, blocks: int, threads: int | None = None
-) -> Iterator[list[T]]:
-    """Yield, for every block in order, the lanes' results in order.
+) -> contextlib.closing[Generator[list[T], None, None]]:
+    """Give, for every block in order, the lanes' results in order, until it is left.
 
     The first exception of a step ends the walk and is raised here; steps not yet begun are dropped. On one thread the
     steps run here, in the same order.
     """
-    count = threads or thread_count()
+    return contextlib.closing(_rows(step, lanes, blocks, threads or thread_count()))
+
+
+def _rows(step: Callable[[int, int], T], lanes: int, blocks: int, count: int) -> Generator[list[T], None, None]:
+    """The rows of a walk; closing it waits for the steps that are begun."""
     if count == 1:
         yield from ([step(lane, block) for lane in range(lanes)] for block in range(blocks))
         return

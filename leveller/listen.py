@@ -192,10 +192,11 @@ def _why_bleed(found: Candidate, activity: Activity, session: Session, m: Measur
     if bright_db > BRIGHT_DB:
         when = f" while {speaker} speaks" if speaker else ""
         return f"paper or keys? high bands stand out by {bright_db:.0f} dB more than low ones{when}"
-    ratio_db = float(activity.own_to_bleed_db[part].max())
+    ratio_db = round(float(activity.own_to_bleed_db[part].max()))
+    over = f"at most {ratio_db} dB over" if ratio_db >= 0 else f"at its loudest {-ratio_db} dB under"
     if not speaker:
-        return f"open, but at most {ratio_db:.0f} dB over what the others explain"
-    return f"open while {speaker} speaks, at most {ratio_db:.0f} dB over {speaker}'s bleed: it may be bleed alone"
+        return f"open, but {over} what the others explain"
+    return f"open while {speaker} speaks, {over} {speaker}'s bleed: it may be bleed alone"
 
 
 def _speaker(found: Candidate, activity: Activity, session: Session) -> str:

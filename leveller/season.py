@@ -16,7 +16,7 @@ from __future__ import annotations
 import os
 import re
 import tomllib
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -79,13 +79,23 @@ def read_season(path: Path) -> Season:
     return readers[path.suffix.lower()](path)
 
 
+def told_from(base: Path, text: str, places: Iterable[str]) -> str:
+    """A text with these absolute paths, and those below `base`, told from there: reports do not say where work was."""
+    for place in sorted({*places, str(base)}, key=len, reverse=True):
+        if os.path.dirname(place) == place:
+            continue  # the root says nothing of anybody, and stands in every path
+        shorter = os.path.relpath(place, base)
+        text = text.replace(place + os.sep, "" if shorter == "." else shorter + os.sep)
+        text = text.replace(place, base.name if shorter == "." else shorter)
+    return text
+
+
 def _from_folder(folder: Path) -> Season:
     """Every session of a folder."""
     if (folder / SESSION_FILE).is_file():
         raise InputError(f"{folder}: holds a {SESSION_FILE}, so it is one session. Use leveller process, or give the "
                          "folder above")
-    if (folder / SEASON_FILE).is_file():
-        read_defaults(folder / SEASON_FILE)
+    title = read_defaults(folder / SEASON_FILE).title if (folder / SEASON_FILE).is_file() else None
     sessions, files, notes = _sorted_out(folder)
     if not sessions and not files:
         raise InputError(f"{folder}: no folder with audio in it, and no audio file")
@@ -93,7 +103,7 @@ def _from_folder(folder: Path) -> Season:
         _check_polyphonic(folder, files)
     names = unique_names([*REPORTS, *(path.name for path in sessions), *(path.stem for path in files)])[len(REPORTS):]
     episodes = [Episode(safe_name(name), (str(path),)) for name, path in zip(names, [*sessions, *files], strict=True)]
-    return Season(folder.name, tuple(sorted(episodes, key=lambda e: _natural(e.name))), tuple(notes))
+    return Season(title or folder.name, tuple(sorted(episodes, key=lambda e: _natural(e.name))), tuple(notes))
 
 
 def _sorted_out(folder: Path) -> tuple[list[Path], list[Path], list[str]]:
@@ -160,6 +170,9 @@ def _toml(path: Path) -> dict[str, Any]:
         return tomllib.loads(path.read_bytes().decode("utf-8-sig"))
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
         raise SettingsError(f"{path.name}: not valid TOML: {error}") from None
+    except (ValueError, RecursionError):
+        raise SettingsError(f"{path.name}: a number has thousands of digits, or lists lie too deep in each other"
+                            ) from None
     except OSError as error:
         raise InputError(f"{path}: cannot be read ({error.strerror})") from None
 
@@ -173,7 +186,7 @@ def _from_toml(path: Path) -> Season:
         raise SettingsError(f"{path.name}: names no episodes; expected [[episode]] tables, each with session = \"...\"")
     title = data.get("title", path.parent.name if path.name == SEASON_FILE else path.stem)
     rows = ((f"{path.name}: [[episode]] {n}", _flat(table)) for n, table in enumerate(tables, 1))
-    return _listed(title, rows, path.parent, str(path))
+    return _listed(title, rows, path, str(path))
 
 
 def _flat(table: Mapping[str, Any]) -> dict[str, Any]:
@@ -194,16 +207,16 @@ def _from_csv(path: Path) -> Season:
         rows.append((f"{path.name}, line {line}", said))
     if not rows:
         raise InputError(f"{path}: lists no episodes")
-    return _listed(path.stem, iter(rows), path.parent, None)
+    return _listed(path.stem, iter(rows), path, None)
 
 
-def _listed(title: str, rows: Iterator[tuple[str, dict[str, Any]]], base: Path, season: str | None) -> Season:
+def _listed(title: str, rows: Iterator[tuple[str, dict[str, Any]]], path: Path, season: str | None) -> Season:
     """Episodes of a list, each with a name of its own."""
-    found = [_episode(said, base, season, where) for where, said in rows]
+    found = [_episode(said, path.parent, season, where) for where, said in rows]
     given = [episode.name for episode, named in found if named]
     for name in given:
         if given.count(name) > 1:
-            raise SettingsError(f"{title}: the name {name!r} stands there twice; every episode needs its own")
+            raise SettingsError(f"{path.name}: the name {name!r} stands there twice; every episode needs its own")
     names = unique_names([*REPORTS, *(episode.name for episode, _ in found)])[len(REPORTS):]
     episodes = [Episode(**{**vars(episode), "name": name}) for (episode, _), name in zip(found, names, strict=True)]
     return Season(title, tuple(episodes), ())

@@ -337,7 +337,7 @@ def _checked(
     kind: type[LevellerError],
 ) -> Correction:
     """The correction with its track's name as the session has it."""
-    names = [track.name for track in tracks]
+    names, where = [track.name for track in tracks], correction.where or where
     name = correction.track
     if name not in names and name.startswith("'") and name[1:] in names:
         name = name[1:]  # as our own tables quote a name that a spreadsheet would run

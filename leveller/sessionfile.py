@@ -2,25 +2,24 @@
 
 session.toml holds, all optional but a track's `file`: `title`, `delivery`, `target_lufs`, `ceiling_dbtp`,
 `sample_rate`, `mix_channels`, `align`; tables `[[track]]`, `[[skip]]`, `[[correction]]`; and a table per stage.
-corrections.csv has the columns of `[[correction]]`; semicolons, tabs, decimal commas, a byte-order mark and any line
-ends are understood. An unknown key is refused, with the nearest known one as a hint; so is a value out of bounds.
-Times are in seconds of session time, levels in dB.
+corrections.csv has the columns of `[[correction]]`, as any spreadsheet saves them (`spreadsheet`). An unknown key is
+refused, with the nearest known one as a hint; so is a value out of bounds. Times are in seconds of session time, levels
+in dB.
 """
 
 from __future__ import annotations
 
-import csv
-import io
 import re
 import tomllib
-from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any, TypeVar
 
-from leveller.errors import AutomationError, InputError, LevellerError, SettingsError, nearest
+from leveller.errors import AutomationError, InputError, SettingsError, nearest
 from leveller.names import why_unsafe
 from leveller.settings import STAGES
+from leveller.spreadsheet import number, read_rows
 
 Record = TypeVar("Record")
 
@@ -72,6 +71,7 @@ class Correction:
     decide: str | None  # own | bleed | silence
     gain_db: float | None
     timeline: str = ""  # as of a skip
+    where: str = field(default="", compare=False, repr=False)  # file and line it stands in, for messages
 
 
 @dataclass(frozen=True)
@@ -125,7 +125,7 @@ def read_session_file(path: Path, *, known: tuple[str, ...] = SESSION_KEYS) -> S
     """
     where = path.name
     try:
-        data = tomllib.loads(_text(path, SettingsError))
+        data = tomllib.loads(_text(path))
     except tomllib.TOMLDecodeError as error:
         raise SettingsError(f"{where}: not valid TOML: {error}") from None
     except (ValueError, RecursionError):
@@ -154,37 +154,16 @@ def read_corrections(path: Path) -> tuple[Correction, ...]:
     AutomationError
         for a header or a row that is not understood; the message names file and line
     """
-    text = _text(path, AutomationError)
-    header = text.split("\n", 1)[0]
-    delimiter = max(";\t,", key=header.count)
-    rows = csv.reader(io.StringIO(text, newline=""), delimiter=delimiter)
-    names = [cell.strip() for cell in next(_csv_rows(rows, path), [])]
-    _check_header(names, path)
-    out = []
-    for row in _csv_rows(rows, path):
-        where = f"{path.name}, line {rows.line_num}"
-        if not any(cell.strip() for cell in row):
-            continue
-        if len(row) != len(names):
-            raise AutomationError(f"{where}: {len(row)} cells, but the header has {len(names)}")
-        out.append(_csv_correction(dict(zip(names, row, strict=True)), delimiter, where))
-    return tuple(out)
+    rows = read_rows(path, CORRECTION_KEYS[:3], CORRECTION_KEYS[3:], others=False)
+    return tuple(_csv_correction(cells, path.name, line) for line, cells in rows)
 
 
-def _csv_rows(rows: Any, path: Path) -> Iterator[list[str]]:
-    """The rows of a csv.reader; what it cannot read is an AutomationError."""
-    try:
-        yield from rows
-    except csv.Error as error:
-        raise AutomationError(f"{path.name}, line {rows.line_num}: not readable as CSV ({error})") from None
-
-
-def _text(path: Path, kind: type[LevellerError]) -> str:
+def _text(path: Path) -> str:
     """A text file as UTF-8 without its byte-order mark."""
     try:
         return path.read_bytes().decode("utf-8-sig")
     except UnicodeDecodeError as error:
-        raise kind(f"{path.name}: not UTF-8 text (byte {error.start}). Save it as UTF-8") from None
+        raise SettingsError(f"{path.name}: not UTF-8 text (byte {error.start}). Save it as UTF-8") from None
     except OSError as error:
         raise InputError(f"{path}: cannot be read ({error.strerror})") from None
 
@@ -315,31 +294,19 @@ def _whole(value: float | None, key: str, where: str) -> int | None:
     return None if value is None else int(value)
 
 
-def _check_header(names: list[str], path: Path) -> None:
-    """Every column known, none twice, the needed ones there."""
-    where = f"{path.name}, line 1"
-    for name in names:
-        if name not in CORRECTION_KEYS:
-            raise AutomationError(f"{where}: unknown column {name!r}{nearest(name, CORRECTION_KEYS)}; "
-                                  f"expected {', '.join(CORRECTION_KEYS)}")
-        if names.count(name) > 1:
-            raise AutomationError(f"{where}: column {name!r} stands there twice")
-    for name in CORRECTION_KEYS[:3]:
-        if name not in names:
-            raise AutomationError(f"{where}: column {name!r} is missing; expected {', '.join(CORRECTION_KEYS)}")
-
-
-def _csv_correction(cells: dict[str, str], delimiter: str, where: str) -> Correction:
+def _csv_correction(cells: tuple[str, ...], file: str, line: int) -> Correction:
     """One row; empty cells count as missing."""
-    table: dict[str, Any] = {key: cell.strip() for key, cell in cells.items() if cell.strip()}
+    where = f"{file}, line {line}"
+    table: dict[str, Any] = {key: cell for key, cell in zip(CORRECTION_KEYS, cells, strict=True) if cell}
     for key in ("from_s", "to_s", "gain_db"):
         if key in table:
-            text = table[key] if delimiter == "," else table[key].replace(",", ".")
             try:
-                table[key] = float(text)
+                table[key] = number(table[key])
             except ValueError:
                 raise AutomationError(f"{where}: {key} = {table[key]!r}: expected a number") from None
+    if "decide" in table:
+        table["decide"] = table["decide"].lower()
     try:
-        return _correction(table, where)
+        return replace(_correction(table, where), where=where)
     except SettingsError as error:
         raise AutomationError(str(error)) from None

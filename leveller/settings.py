@@ -156,12 +156,14 @@ def _checked(key: str, value: Any, spec: dataclasses.Field[Any], where: str) -> 
 
 
 def parse_assignments(assignments: list[str]) -> dict[str, str]:
-    """`["expander.range_db=18"]` as a dict; raises SettingsError where the = is missing."""
+    """`["expander.range_db=18"]` as a dict; raises SettingsError where the = is missing, and for align."""
     pairs = {}
     for text in assignments:
         key, equals, value = text.partition("=")
         if not equals:
             raise SettingsError(f"--set {text!r}: expected KEY=VALUE, such as expander.range_db=18")
+        if key.strip() == "align":
+            raise SettingsError(f"--set {text!r}: align has options of its own. Give --align or --no-align")
         pairs[key.strip()] = value.strip()
     return pairs
 

@@ -23,7 +23,7 @@ from leveller.measure.loudness import OFFSET_LU, SHORT_TERM_CELLS
 from leveller.measure.peaks import FULL_SCALE
 from leveller.plan.stretches import stretches, without_short_gaps
 from leveller.render.limiter import HEAVY_DB
-from leveller.units import HOPS_PER_S, Bools, gain_to_db, power_to_db
+from leveller.units import HOPS_PER_S, Bools, power_to_db
 
 OVER_LU = 5.0  # EBU R 128 s1: short-term loudness of short programmes at most 5 LU over the target
 UNDER_LU = 8.0  # a choice of ours: the demo as levelled stays within it
@@ -82,16 +82,15 @@ def _spot(first: int, after: int, kind: str, reason: str, weight: float, track: 
 
 
 def _full_scale(finished: Finished) -> Iterator[Spot]:
-    """Stretches in which a given file reaches full scale."""
+    """Stretches in which a given file reaches full scale; floats that pass it have lost nothing."""
     for track, peaks in zip(finished.session.tracks, finished.file_peaks, strict=True):
         for first, after in _spans(np.asarray(peaks >= FULL_SCALE)):
             here = peaks[first:after]
+            if track.is_float and here.max() > 1:
+                continue
             count = int(np.count_nonzero(here >= FULL_SCALE))
-            over_db = float(gain_to_db(float(here.max())))
-            kept = track.is_float and here.max() > 1
-            how = f"{over_db:.1f} dB over it, kept by the file's floats" if kept else "maybe clipped"
-            yield _spot(first, after, "full scale", f"{how}, for {count / HOPS_PER_S:.2f} s in all",
-                        1 if kept else 1 + count / FULL_SCALE_HOPS, track.name)
+            yield _spot(first, after, "full scale", f"maybe clipped, for {count / HOPS_PER_S:.2f} s in all",
+                        1 + count / FULL_SCALE_HOPS, track.name)
 
 
 def _limited(finished: Finished) -> Iterator[Spot]:

@@ -27,25 +27,33 @@ _NUMBER = re.compile(r"[+-]?(\d+([.,]\d*)?|[.,]\d+)([eE][+-]?\d+)?")
 
 
 def read_rows(
-    path: Path, needed: Sequence[str], optional: Sequence[str] = ()
+    path: Path, needed: Sequence[str], optional: Sequence[str] = (), *, others: bool = True
 ) -> Iterator[tuple[int, tuple[str, ...]]]:
     """Yield (line, cells) of each row: the needed columns, then the optional ones ('' where there is no such column).
+
+    Parameters
+    ----------
+    others : bool
+        whether the file may have further columns
 
     Raises
     ------
     InputError
         where the file cannot be read
     AutomationError
-        for a file that is no text, a needed column that is missing or stands there twice, or a row with too few cells
+        for a file that is no text, a column that is missing, unknown or stands there twice, or a row with too few or
+        too many cells
     """
     rows = _dialect(path)
     header, header_line = _header(rows)
+    if not others:
+        _check_known(header, (*needed, *optional), f"{path.name}, line {header_line}")
     places = _places(header, needed, optional, f"{path.name}, line {header_line}")
     least = max(places) + 1
     for line, row in rows:
         if not any(cell.strip() for cell in row):
             continue
-        if len(row) < least:
+        if len(row) < least or any(cell.strip() for cell in row[len(header) :]):  # more: a decimal comma, not quoted
             raise AutomationError(f"{path.name}, line {line}: {len(row)} cells, but the header has {len(header)}")
         yield line, tuple("" if at < 0 else _bare(row[at]) for at in places)
 
@@ -109,6 +117,14 @@ def _header(rows: Iterator[tuple[int, list[str]]]) -> tuple[list[str], int]:
     """The names on the first line, in lower case, and its number."""
     line, row = next(rows, (1, []))
     return [_bare(cell).lower() for cell in row], line
+
+
+def _check_known(header: Sequence[str], known: Sequence[str], where: str) -> None:
+    """Refuse a column of another name; one without a name is what a spreadsheet leaves of an empty one."""
+    for name in header:
+        if name and name not in known:
+            raise AutomationError(f"{where}: unknown column {name!r}{nearest(name, known)}; "
+                                  f"known: {', '.join(known)}")
 
 
 def _places(header: Sequence[str], needed: Sequence[str], optional: Sequence[str], where: str) -> list[int]:

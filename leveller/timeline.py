@@ -158,6 +158,8 @@ def _on_track(time_s: float, old: Track, new: Track, rate_hz: int) -> float:
 
 def _where(row: Skip | Correction) -> str:
     """How a message names a row."""
+    if isinstance(row, Correction) and row.where:
+        return f"{row.where}: correction of {row.track}, from_s = {row.from_s:g}"
     what = f"correction of {row.track}" if isinstance(row, Correction) else "skip"
     return f"{what}, from_s = {row.from_s:g}"
 

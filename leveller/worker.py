@@ -23,6 +23,7 @@ from leveller.fingerprint import fingerprint, made_by, note_sources, same_source
 from leveller.lanes import limited_to
 from leveller.report.season import EDITED, FAILED, FINISHED, UNCHANGED, Outcome, episode_figures, read_json
 from leveller.season import Episode
+from leveller.settings import Settings
 
 MOST_TRIES = 2  # a worker that is lost takes its episode along once, not twice
 EDITED_S = 2.0  # a table this much younger than the report was saved by somebody
@@ -107,6 +108,7 @@ def version_difference(wanted: Mapping[str, str], found: Mapping[str, str]) -> s
 def _outcome(task: Task, seat: Seat, tries: int) -> Outcome:
     """What the episode comes to."""
     folder, name = Path(task.folder), task.episode.name
+    Settings().changed(dict(task.episode.settings), where=f"{name}, in the season's list: ")
     said = read_json(folder / "report.json")
     if folder.exists() and said is None:
         raise OutputError(f"{folder}: exists and is no result of leveller's. Move it away, or choose another --out")

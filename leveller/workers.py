@@ -2,7 +2,7 @@
 
 One process a pool: a process that is killed breaks its pool and no other, so it is known which episode was with it, and
 only that pool is made anew. Processes are started afresh (spawn), import everything once, and serve many episodes. They
-ignore Ctrl-C (the batch decides), clean up on SIGTERM, and end when their batch is gone.
+ignore Ctrl-C and a closed terminal (the batch decides), clean up on SIGTERM, and end when their batch is gone.
 
 `default_jobs` counts what there is: processors this process may use, and free memory by what an episode takes at most.
 """
@@ -15,14 +15,19 @@ import os
 import signal
 import sys
 import threading
+import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import BrokenExecutor, Future, ProcessPoolExecutor
+from pathlib import Path
 from types import FrameType, TracebackType
 from typing import Any
 
+from leveller.folder import take_back_all
+from leveller.interruptions import put_off
 from leveller.lanes import keep_heap, processor_count
 from leveller.worker import busy
 
+PROC, CGROUPS = Path("/proc"), Path("/sys/fs/cgroup")
 JOB_BYTES = 600 << 20  # three hours of eight tracks stay under it
 THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")  # read when numpy is imported
 PATIENCE_S = 10.0  # for a worker to clean up
@@ -48,9 +53,10 @@ class LocalWorkers:
         """Run a function in a process that is free, a new one where that has died."""
         place = next(i for i, last in enumerate(self._last) if last is None or last.done())
         for _ in range(2):
-            pool = self._pools[place] = self._pools[place] or _new_pool()
             try:
-                with _no_interrupt():  # the process that may start now inherits this
+                with _not_from_terminals():  # a process that starts now inherits this: multiprocessing's own helper,
+                    pool = self._pools[place] = self._pools[place] or _new_pool()
+                with _not_from_terminals():  # after whose start Ctrl-C is let through again, and the worker
                     future = pool.submit(_served, function, *arguments)
             except BrokenExecutor:  # its process has died, at work or idle
                 self._pools[place] = None
@@ -67,8 +73,9 @@ class LocalWorkers:
         for pool in self._pools:
             if pool is not None:
                 pool.shutdown(wait=False, cancel_futures=True)
+        end_s = time.monotonic() + PATIENCE_S  # for all of them together
         for process in ours:
-            process.join(PATIENCE_S)
+            process.join(max(0.0, end_s - time.monotonic()))
             if process.is_alive():
                 with contextlib.suppress(OSError):
                     process.kill()
@@ -92,13 +99,35 @@ def default_jobs() -> int:
 
 
 def _free_bytes() -> int | None:
-    """Memory that programs can still take, None where the system does not say."""
-    try:
-        with open("/proc/meminfo", encoding="ascii") as file:
-            facts = dict(line.split(":", 1) for line in file)
-        return int(facts["MemAvailable"].split()[0]) * 1024
-    except (OSError, KeyError, ValueError):
-        return None
+    """Memory that programs can still take here, None where the system does not say."""
+    found = [*_free_of_machine(), *_free_of_group()]
+    return min(found) if found else None
+
+
+def _free_of_machine() -> Iterator[int]:
+    """What Linux estimates, proc(5)."""
+    with contextlib.suppress(OSError, KeyError, ValueError):
+        facts = dict(line.split(":", 1) for line in (PROC / "meminfo").read_text(encoding="ascii").splitlines())
+        yield int(facts["MemAvailable"].split()[0]) * 1024
+
+
+def _free_of_group() -> Iterator[int]:
+    """What the limits of a container or a service leave (cgroup v2, memory.max); file cache is given back on need."""
+    with contextlib.suppress(OSError, ValueError):
+        own = (PROC / "self" / "cgroup").read_text(encoding="utf-8").rpartition("0::/")[2].splitlines()
+        inner = CGROUPS / (own[0] if own else "")
+        for group in (inner, *inner.parents):
+            if group.is_relative_to(CGROUPS):
+                yield from _free_below(group)
+
+
+def _free_below(group: Path) -> Iterator[int]:
+    """What one group's limit leaves; nothing where it has none."""
+    with contextlib.suppress(OSError, ValueError, KeyError):
+        most = int((group / "memory.max").read_text(encoding="ascii"))  # "max" is no number
+        facts = dict(line.split() for line in (group / "memory.stat").read_text(encoding="ascii").splitlines())
+        cache = int(facts["inactive_file"]) + int(facts["active_file"])
+        yield max(0, most - int((group / "memory.current").read_text(encoding="ascii")) + cache)
 
 
 def _new_pool() -> ProcessPoolExecutor:
@@ -109,12 +138,12 @@ def _new_pool() -> ProcessPoolExecutor:
 
 
 @contextlib.contextmanager
-def _no_interrupt() -> Iterator[None]:
-    """Hold Ctrl-C back for a moment; it comes after it."""
+def _not_from_terminals() -> Iterator[None]:
+    """Hold back for a moment what a terminal sends to all processes; multiprocessing's own helper is not to get it."""
     if not hasattr(signal, "pthread_sigmask"):
         yield
         return
-    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT, signal.SIGHUP})
     try:
         yield
     finally:
@@ -124,7 +153,9 @@ def _no_interrupt() -> Iterator[None]:
 def _settle() -> None:
     """What a worker process does first."""
     keep_heap()
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    for name in ("SIGINT", "SIGHUP"):  # from a terminal they come to all of its processes
+        if hasattr(signal, name):
+            signal.signal(getattr(signal, name), signal.SIG_IGN)
     signal.signal(signal.SIGTERM, _leave)
     threading.Thread(target=_watch_batch, name="watch", daemon=True).start()
 
@@ -134,11 +165,14 @@ def _served(function: Callable[..., Any], *arguments: Any) -> Any:
     try:
         return function(*arguments)
     except SystemExit:
+        take_back_all()  # it may have come between two steps of the unwinding, or before there was any
         os._exit(ENDED_EXIT)
 
 
 def _leave(number: int, frame: FrameType | None) -> None:
     """Unwind, so that what is half-written is removed; a second signal does not disturb that."""
+    if put_off(number, frame):
+        return
     signal.signal(signal.SIGTERM, signal.SIG_IGN)
     sys.exit(ENDED_EXIT)
 
@@ -150,5 +184,6 @@ def _watch_batch() -> None:
         return
     batch.join()
     os.kill(os.getpid(), signal.SIGTERM)
-    busy.acquire(timeout=PATIENCE_S)
+    if busy.acquire(timeout=PATIENCE_S):
+        take_back_all()
     os._exit(ENDED_EXIT)

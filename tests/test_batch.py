@@ -6,6 +6,7 @@ import csv
 import dataclasses
 import importlib
 import json
+import operator
 import os
 import re
 import shutil
@@ -203,6 +204,32 @@ def test_jobs_say_how_much_of_the_machine_is_used(
     assert batch_module._threads_each(episodes, jobs, cluster) == threads
 
 
+def test_a_containers_memory_counts(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The narrowest limit of the groups a process is in says how many jobs there is memory for; cache is free."""
+    monkeypatch.setattr(workers, "processor_count", lambda: 16)
+    monkeypatch.setattr(workers, "PROC", tmp_path / "proc")
+    monkeypatch.setattr(workers, "CGROUPS", tmp_path / "cgroup")
+    assert workers.default_jobs() == 16
+    (tmp_path / "proc" / "self").mkdir(parents=True)
+    (tmp_path / "proc" / "meminfo").write_text(f"MemFree: 12 kB\nMemAvailable: {12 * workers.JOB_BYTES // 1024} kB\n")
+    assert workers.default_jobs() == 12
+    (tmp_path / "proc" / "self" / "cgroup").write_text("1:name=systemd:/x\n0::/box/run\n")
+
+    def limited(name: str, most: str, current: int, cache: int) -> None:
+        group = tmp_path / "cgroup" / name
+        group.mkdir(parents=True, exist_ok=True)
+        (group / "memory.max").write_text(f"{most}\n")
+        (group / "memory.current").write_text(f"{current}\n")
+        (group / "memory.stat").write_text(f"anon 1\ninactive_file {cache}\nactive_file 0\n")
+
+    limited("box/run", "max", workers.JOB_BYTES, 0)
+    assert workers.default_jobs() == 12
+    limited("box", str(6 * workers.JOB_BYTES), 4 * workers.JOB_BYTES, 3 * workers.JOB_BYTES)
+    assert workers.default_jobs() == 5
+    limited("box/run", str(workers.JOB_BYTES // 2), 0, 0)
+    assert workers.default_jobs() == 1
+
+
 def test_a_worker_keeps_to_its_threads(made: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """The limit of a task holds while its episode is processed, and no longer."""
     monkeypatch.setattr(lanes, "processor_count", lambda: 4)
@@ -332,9 +359,40 @@ def test_a_worker_lost_once_costs_nothing(season: Path, tmp_path: Path) -> None:
     assert hidden(out) == []
 
 
-@pytest.mark.parametrize("ending", [signal.SIGINT, signal.SIGKILL])
+@pytest.mark.skipif(not Path("/proc/self/status").exists(), reason="only where the system shows blocked signals")
+def test_a_terminals_signals_reach_no_helper(tmp_path: Path) -> None:
+    """From its first moment the first worker does not get Ctrl-C or a hang-up, nor does multiprocessing's tracker."""
+    (tmp_path / "look.py").write_text(
+        "from multiprocessing import resource_tracker\nfrom pathlib import Path\n"
+        "from leveller.workers import LocalWorkers\n"
+        "def blocked(text):\n    return int(text.partition('SigBlk:')[2].split()[0], 16)\n"
+        "if __name__ == '__main__':\n"
+        "    with LocalWorkers(1) as workers:\n"
+        "        worker = workers.submit(Path.read_text, Path('/proc/self/status')).result()\n"
+        "        tracker = Path(f'/proc/{resource_tracker._resource_tracker._pid}/status').read_text()\n"
+        "        print(blocked(worker), blocked(tracker))\n")
+    command = [sys.executable, str(tmp_path / "look.py")]
+    run = subprocess.run(command, capture_output=True, text=True, timeout=PATIENCE_S)
+    worker_, tracker = map(int, run.stdout.split())
+    hang_up, interrupt = (1 << number - 1 for number in (signal.SIGHUP, signal.SIGINT))
+    assert worker_ & (hang_up | interrupt) == hang_up | interrupt
+    assert tracker & hang_up
+
+
+def test_what_a_killed_season_left_goes(season: Path, tmp_path: Path, in_process: None) -> None:
+    """Work folders of dead workers go with the next run, of unchanged episodes too; what is not an episode's stays."""
+    out, dead = tmp_path / "out", 2**22 + 5  # beyond the kernel's highest number
+    batch(season, out=out, jobs=1)
+    for name in (f".ep 1.part-{dead}", f".ep 1.old-{dead}", f".ep 1.part-{os.getppid()}", f".mine.part-{dead}"):
+        (out / name / "stems").mkdir(parents=True)
+        (out / name / "stems" / "big.wav").write_bytes(b"x")
+    assert outcomes(batch(season, out=out, jobs=1))["ep 1"] == "unchanged"
+    assert sorted(hidden(out)) == sorted([f".ep 1.part-{os.getppid()}", f".mine.part-{dead}"])
+
+
+@pytest.mark.parametrize("ending", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP, signal.SIGKILL])
 def test_an_ended_batch_leaves_whole_episodes_only(season: Path, tmp_path: Path, ending: signal.Signals) -> None:
-    """After Ctrl-C, or when the batch itself is killed, finished episodes stay whole and the next run goes on."""
+    """After Ctrl-C, a shutdown, a closed terminal or a kill, finished episodes stay whole and the next run goes on."""
     for name in ("ep 2", "ep 3", "ep 10"):
         shutil.rmtree(season / name)
     long_episode(season / "ep 2")
@@ -348,7 +406,7 @@ def test_an_ended_batch_leaves_whole_episodes_only(season: Path, tmp_path: Path,
     until(lambda: not Path(f"/proc/{pid}").exists() or not hidden(out), "the end of the worker")
     assert (out / "ep 1" / "report.json").exists()
     assert not (out / "ep 2").exists()
-    if ending == signal.SIGINT:
+    if ending != signal.SIGKILL:
         assert run.returncode == 130, errors
         assert errors == ""
         assert hidden(out) == []
@@ -361,13 +419,67 @@ def test_an_ended_batch_leaves_whole_episodes_only(season: Path, tmp_path: Path,
     assert [name for name in hidden(out) if "ep 2" not in name] == []
 
 
+@pytest.mark.parametrize("place", [
+    "leveller.desk.Desk._make", "leveller.desk.Desk._end", "leveller.batch._Run._hand_out",
+    "leveller.batch.season_report", "leveller.batch.write_season"])
+def test_an_interruption_in_the_middle_of_something_waits(
+    season: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, in_process: None, place: str
+) -> None:
+    """Ctrl-C while the desk is made, work handed out, or the end tidied up: nothing is left, reports are whole."""
+    owner, _, name = place.rpartition(".")
+    holder = operator.attrgetter(owner.partition(".")[2])(sys.modules["leveller"]) if "._" in place else batch_module
+    done = getattr(holder, name)
+
+    def struck(*words: Any, **named: Any) -> Any:
+        os.kill(os.getpid(), signal.SIGINT)
+        os.kill(os.getpid(), signal.SIGTERM)
+        return done(*words, **named)
+
+    monkeypatch.setattr(holder, name, struck)
+    out = tmp_path / "out"
+    try:
+        report = batch(season, out=out, jobs=1)
+        assert report.exit_code in (7, 130)
+        assert json.loads((out / "season.json").read_text())["sentence"] == report.sentence
+    except KeyboardInterrupt:
+        assert place == "leveller.desk.Desk._make"
+        assert not out.exists()
+    assert hidden(tmp_path) == []
+
+
+def test_reports_that_cannot_be_written_are_told(
+    season: Path, tmp_path: Path, in_process: None, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """A full disk at the very end: the summary is printed all the same, earlier reports stay, the exit code is 5."""
+    out = tmp_path / "out"
+    batch(season, out=out, jobs=1)
+    before = {path.name: path.read_bytes() for path in out.glob("season.*")}
+    write = Path.write_bytes
+
+    def full(self: Path, data: bytes) -> int:
+        if self.name == "season.html":
+            raise OSError(28, "No space left on device")
+        return write(self, data)
+
+    monkeypatch.setattr(Path, "write_bytes", full)
+    with pytest.raises(SystemExit) as left:
+        cli.main(["batch", str(season), "--out", str(out)])
+    said = capsys.readouterr()
+    assert left.value.code == 5
+    assert said.err == (f"leveller: {out}: season.html cannot be written (No space left on device). The episodes are "
+                        "not touched by that; make room and give the same command again\n")
+    assert "4 episodes: 3 unchanged, 1 failed" in said.out
+    assert {path.name: path.read_bytes() for path in out.glob("season.*")} == before
+    assert hidden(out) == []
+
+
 def test_two_batches_keep_out_of_each_others_way(season: Path, tmp_path: Path) -> None:
     """A folder in which another batch is at work is refused."""
     out = tmp_path / "out"
     out.mkdir()
     other = subprocess.Popen([sys.executable, "-c", "input()"], stdin=subprocess.PIPE)
     try:
-        (out / f".season.part-{other.pid}").mkdir()
+        (out / f".season.json.part-{other.pid}").mkdir()
         with pytest.raises(OutputError, match=rf"another batch \(process {other.pid}\) is at work here"):
             batch(season, out=out)
     finally:

@@ -116,6 +116,7 @@ def test_settings_say_where_they_come_from(tmp_path: Path, capsys: pytest.Captur
     assert rows["trim.enabled"] == ["false", "on/off", "session.toml"]
     assert rows["ride.rate_db_s"] == ["0.5", "dB/s", "--set"]
     assert rows["expander.range_db"] == ["auto", "dB", "default"]
+    assert rows["align"] == ["false", "on/off", "default"]
     assert "  in force: podcast-mono (default), -20.0 LUFS (session.toml), -1.0 dBTP (podcast-mono)" in said
     assert {row[0] for row in leveller.Settings().rows()} | set(leveller.DELIVERIES) <= set(rows)
 
@@ -123,7 +124,19 @@ def test_settings_say_where_they_come_from(tmp_path: Path, capsys: pytest.Captur
 def test_reasons_of_settings_are_told_when_asked(capsys: pytest.CaptureFixture[str]) -> None:
     """--why adds the reason of each default."""
     assert run("settings", "--why") == 0
-    assert all(why in capsys.readouterr().out for why in [leveller.Settings().rows()[0][3]])
+    said = capsys.readouterr().out
+    assert [why for _, _, _, why in leveller.Settings().rows() if why not in said] == []
+
+
+def test_align_is_listed_with_its_option(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """`settings --no-align` shows what counts then, over what session.toml says, and that the option said so."""
+    (tmp_path / "session.toml").write_text("align = true\nsample_rate = 44100\n", encoding="utf-8")
+    assert run("settings", tmp_path) == 0
+    said = capsys.readouterr().out
+    assert "  align                     true on/off                       session.toml\n" in said
+    assert said.endswith("-1.0 dBTP (podcast-mono), 44100 Hz (session.toml)\n")
+    assert run("settings", tmp_path, "--no-align") == 0
+    assert "  align                    false on/off                       --no-align\n" in capsys.readouterr().out
 
 
 # Errors
@@ -135,6 +148,8 @@ def test_reasons_of_settings_are_told_when_asked(capsys: pytest.CaptureFixture[s
      "leveller: --set unknown setting 'expander.rang_db' (did you mean \"expander.range_db\"?)"),
     (["process", "{talk}", "--set", "expander.range_db"], 4,
      "leveller: --set 'expander.range_db': expected KEY=VALUE, such as expander.range_db=18"),
+    (["process", "{talk}", "--set", "align=true"], 4,
+     "leveller: --set 'align=true': align has options of its own. Give --align or --no-align"),
     (["process", "{talk}", "--set", "expander.range_db=90"], 4,
      "leveller: --set expander.range_db = '90': expected auto or a number from 0 to 60 (dB)"),
     (["process", "{talk}", "--delivery", "podcast"], 4,
@@ -194,8 +209,9 @@ def test_an_unexpected_error_is_one_line(tmp_path: Path, monkeypatch: pytest.Mon
 
 
 @pytest.mark.skipif(os.name != "posix", reason="interruption by signal")
-def test_interruption_leaves_nothing(tmp_path: Path) -> None:
-    """Ctrl-C ends with 130 and one line; neither the folder nor a part of it is left."""
+@pytest.mark.parametrize("presses", [1, 4])
+def test_interruption_leaves_nothing(tmp_path: Path, presses: int) -> None:
+    """Ctrl-C ends with 130 and one line, pressed once or impatiently; neither the folder nor a part of it is left."""
     work = tmp_path / "work"
     work.mkdir()
     shutil.copytree(DEMO, tmp_path / "demo")
@@ -205,7 +221,9 @@ def test_interruption_leaves_nothing(tmp_path: Path) -> None:
     while not any(work.iterdir()) and time.monotonic() < deadline:
         time.sleep(0.01)
     assert [path.name for path in work.iterdir()] == [f".out.part-{running.pid}"]
-    running.send_signal(signal.SIGINT)
+    for _ in range(presses):
+        running.send_signal(signal.SIGINT)
+        time.sleep(0.03)
     out, err = running.communicate(timeout=60)
     assert (running.returncode, out, err) == (130, "", "leveller: interrupted; nothing was left half-written\n")
     assert list(work.iterdir()) == []

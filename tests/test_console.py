@@ -11,7 +11,7 @@ import pytest
 
 from leveller import console
 from leveller.report.records import DeliveryFigures, Fault, MixFigures, OtherFigures, Report, VoiceFigures
-from leveller.report.text import Line, cells, format_summary, places_text, visible
+from leveller.report.text import Line, cells, format_summary, places_text, summary_blocks, visible
 
 ESCAPE = "\x1b"
 
@@ -91,6 +91,21 @@ def test_summary_word_for_word() -> None:
         "",
         "Written to levelled/The Shelf",
     ]
+
+
+def test_the_page_gets_tables_and_sentences() -> None:
+    """For the page the voices are rows of cells, and no figure of the mix depends on columns of spaces."""
+    blocks = dict(summary_blocks(REPORT))
+    assert [line.split("\t") for line in blocks["Voices"] if "\t" in line] == [
+        ["Voice, speaks", "", "speech, LUFS", "others, dB", "noise, LUFS"],
+        *([name, "in", "-41.3", "-10.4", "-70.1"] if row == "in" else ["2:03:04", "out", "-19.0", "-28.4", "-60.2"]
+          for name in ("Maren", "Odo") for row in ("in", "out")),
+        ["Gain moved", "trim, dB", "ride, dB", "comp, dB", "close, dB"],
+        *([name, "+22.3", "-6.0", "-6.0", "-18.0"] for name in ("Maren", "Odo"))]
+    assert blocks["Mix"][0] == "integrated: -19.00 LUFS, -15.99 on two channels"
+    assert blocks["Mix"][2] == "range: 5.2 LU"
+    named = dataclasses.replace(REPORT, voices=(voice("a\tb"),))
+    assert "a?b\tin" in "\n".join(dict(summary_blocks(named))["Voices"])
 
 
 @pytest.mark.parametrize("width", [80, 100, 140])

@@ -15,6 +15,7 @@ from leveller.plan.corrections import expander_again_db, reopened, spliced
 from leveller.plan.expander import expander_nodes_db
 from leveller.plan.thinning import kept_rows
 from leveller.render.gain import hop_gains_db
+from leveller.report.figures import figures_of
 from leveller.settings import Expander
 
 SETTINGS = Expander(attack_s=0.08, hold_s=0.24, release_s=0.16, lookahead_s=0.18)
@@ -208,8 +209,19 @@ def test_a_gain_offset_is_heard_with_ramps_of_50_ms(place: Path, tmp_path: Path)
     assert after[: first - 4, 1] == pytest.approx(before[: first - 4, 1], abs=ROUNDED_DB)
     assert after[last + 5 :, 1] == pytest.approx(before[last + 5 :, 1], abs=ROUNDED_DB)
     assert after[:, 2:] == pytest.approx(before[:, 2:], abs=ROUNDED_DB)
+    said = [(fault.kind, fault.track, fault.sentence, fault.places) for fault in figures_of(result).faults]
+    assert ("corrected", track, f"{track}: 1 correction of yours", ((from_s, to_s),)) in said
+    assert "knob" not in [kind for kind, *_ in said], "what the editor set is no turned recording gain"
     plan = result.plan.tracks[[t.name for t in result.session.tracks].index(track)]
     assert np.allclose(hop_gains_db(plan, result.plan.hops)[0], after[:-1, 0], atol=0.006)
+
+
+def test_a_gain_of_the_editor_is_no_lack_of_trim(place: Path, tmp_path: Path) -> None:
+    """30 dB more by the editor's wish do not make levelling say that it needs more than its 30 dB."""
+    track, from_s, to_s = longest(place, "own")
+    result = corrected(place, tmp_path, f"track,from_s,to_s,gain_db\n{track},{from_s},{to_s},30\n")
+    assert max(voice.trim_high_db for voice in figures_of(result).voices) > 30
+    assert not [text for text in figures_of(result).left_open if "needs more than" in text]
 
 
 def test_of_two_corrections_the_later_counts(place: Path, tmp_path: Path) -> None:
@@ -233,11 +245,11 @@ def test_corrections_of_the_session_file_do_the_same(place: Path, tmp_path: Path
 
 
 def test_an_unedited_speech_table_changes_nothing(place: Path, tmp_path: Path) -> None:
-    """speech.csv as written comes to no correction at all."""
+    """speech.csv as written comes to no correction at all, and that is said."""
     text = (place / "out" / "speech.csv").read_text(encoding="utf-8")
     result = corrected(place, tmp_path, text, "speech.csv")
     assert result.session.corrections == ()
-    assert result.session.notes == ()
+    assert result.session.notes == ("speech.csv: says nothing else than was decided, so it changes nothing",)
     assert again.wavs(tmp_path / "out") == again.wavs(place / "out")
 
 
@@ -295,7 +307,8 @@ def test_a_decision_about_a_room_microphone_is_refused(place: Path, tmp_path: Pa
     file.write_text("track,from_s,to_s,decide,gain_db\nseat 3,1,2,own,\n")
     with pytest.raises(SettingsError) as caught:
         pipeline.process(tmp_path / "in", out=tmp_path / "b", corrections=file)
-    assert str(caught.value) == "correction of seat 3 at 1 s: decide = own, but its role is room. Use gain_db there"
+    assert str(caught.value) == ("corrections.csv, line 2: correction of seat 3 at 1 s: decide = own, but its role "
+                                 "is room. Use gain_db there")
     file.write_text("track,from_s,to_s,decide,gain_db\nseat 3,1,2,,-6\n")
     pipeline.process(tmp_path / "in", out=tmp_path / "b", corrections=file)
     assert gains(tmp_path / "b", "seat 3")[[50, 150, 250], 0].tolist() == [0, -6, 0]

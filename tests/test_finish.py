@@ -18,7 +18,9 @@ import soundfile as sf
 
 from leveller import audio, pipeline
 from leveller.errors import InputError, LevellerError, OutputError, SettingsError
+from leveller.report.finished import finished_figures
 from leveller.settings import DELIVERIES
+from leveller.spots import spots_to_hear
 
 LUFS_BAND = 0.1  # of the target; EBU R 128 allows 0.2 LU
 PEAK_BAND_DB = 0.01
@@ -287,3 +289,14 @@ def test_the_command_says_where_to_listen(tmp_path: Path) -> None:
         "  0:00:10 mix: silence, under -63 LUFS for 6.0 s",
         "  0:00:20 cut: full scale, maybe clipped, for 0.02 s in all"]
     assert not [line for line in lines if line.startswith("  speech")]
+
+
+def test_floats_over_full_scale_are_no_place_to_hear(tmp_path: Path) -> None:
+    """Stems as leveller writes them may pass full scale: said with peak and time, and nothing to listen for."""
+    wave = np.random.default_rng(6).uniform(-0.1, 0.1, 10 * RATE_HZ).astype(np.float32)
+    wave[4 * RATE_HZ + 8] = 2.0
+    sf.write(tmp_path / "stem.wav", wave, RATE_HZ, subtype="FLOAT")
+    finished = pipeline.finish(tmp_path / "stem.wav", out=tmp_path / "out", delivery="r128")
+    assert [(fault.kind, fault.sentence, fault.places) for fault in finished_figures(finished).faults][-1] == (
+        "over full scale", "stem: peaks reach +6.0 dBFS; the file holds floats, so nothing is lost", ((4.0, 4.0),))
+    assert not [spot for spot in spots_to_hear(finished) if spot.kind == "full scale"]

@@ -6,12 +6,16 @@ import os
 import re
 import subprocess
 import sys
+import threading
 from pathlib import Path
+from types import FrameType
+from typing import Any
 
 import pytest
 
+from leveller import folder as module
 from leveller.errors import OutputError
-from leveller.folder import OutputFolder
+from leveller.folder import OutputFolder, remove, take_back_all
 
 
 def names(folder: Path) -> list[str]:
@@ -194,8 +198,120 @@ def test_second_writer_of_the_same_folder_does_not_harm_the_first(tmp_path: Path
     """Two at once on one folder in one process: the second is refused, the first comes out whole."""
     with OutputFolder(tmp_path / "out", False) as first:
         first.file("mix.wav").write_text("first")
-        with pytest.raises(OutputError, match="cannot be written here"):
+        with pytest.raises(OutputError, match="this very process is writing it already"):
             OutputFolder(tmp_path / "out", False).__enter__()
     assert names(tmp_path) == ["out", "out/mix.wav"]
     first.discard()  # too late: what is published stays
     assert names(tmp_path) == ["out", "out/mix.wav"]
+
+
+class InterruptedAt:
+    """Ctrl-C before the line of that number that the module runs (every line of the module is a moment for it)."""
+
+    def __init__(self, moment: int) -> None:
+        self.moment, self.lines = moment, 0
+
+    def __call__(self, frame: FrameType, event: str, _: object) -> Any:
+        """As `sys.settrace` asks for."""
+        if frame.f_code.co_filename != module.__file__:
+            return None
+        if event == "line":
+            self.lines += 1
+            if self.lines == self.moment:
+                raise KeyboardInterrupt
+        return self
+
+    def __enter__(self) -> InterruptedAt:
+        self._before = sys.gettrace()
+        sys.settrace(self)
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        sys.settrace(self._before)
+
+
+@pytest.mark.parametrize("older", [False, True])
+def test_interruption_at_any_line_leaves_all_or_nothing(tmp_path: Path, older: bool) -> None:
+    """Whichever line Ctrl-C comes before, there is the older state or the new folder in the end, and no hidden name."""
+    reached = set()
+    for moment in range(1, 1000):
+        home = tmp_path / str(moment)
+        (home / "a" if not older else home / "a" / "out").mkdir(parents=True)
+        if older:
+            (home / "a" / "out" / "old").write_text("old")
+        before, trace = names(home), InterruptedAt(moment)
+        try:
+            with trace, OutputFolder(home / "a" / "b" / "out" if not older else home / "a" / "out", older) as folder:
+                folder.file("stems/Host.wav").write_text("new")
+        except KeyboardInterrupt:
+            pass
+        take_back_all()  # as at the end of the process
+        after = names(home)
+        new = ["a", "a/b", "a/b/out", "a/b/out/stems", "a/b/out/stems/Host.wav"] if not older else [
+            "a", "a/out", "a/out/stems", "a/out/stems/Host.wav"]
+        assert after in (before, new), moment
+        reached.add(after == new)
+        if trace.lines < moment:
+            break
+    assert reached == {False, True}
+    assert moment > 40
+
+
+@pytest.mark.parametrize("name", ["mkdir", "rename"])
+@pytest.mark.parametrize("call", [1, 2, 3])
+def test_interruption_just_after_the_system_has_done_it(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, name: str, call: int
+) -> None:
+    """The folder is made or renamed, and Ctrl-C comes before the program knows: all or nothing all the same."""
+    (tmp_path / "out").mkdir()
+    (tmp_path / "out" / "old").write_text("old")
+    calls, real = [], getattr(Path, name)
+
+    def done_then_interrupted(self: Path, *arguments: Any, **options: Any) -> Any:
+        result = real(self, *arguments, **options)
+        calls.append(self)
+        if len(calls) == call:
+            raise KeyboardInterrupt
+        return result
+
+    monkeypatch.setattr(Path, name, done_then_interrupted)
+    ended = False
+    try:
+        with OutputFolder(tmp_path / "out", True) as folder:
+            folder.file("new").write_text("new")
+        ended = True
+    except KeyboardInterrupt:
+        pass
+    monkeypatch.undo()
+    take_back_all()
+    published = ended or (name, call) == ("rename", 2)
+    assert names(tmp_path) == (["out", "out/new"] if published else ["out", "out/old"])
+
+
+def test_process_that_ends_in_the_middle_takes_its_work_back(tmp_path: Path) -> None:
+    """A folder that is never left, as by an interruption at the wrong moment, goes with the process."""
+    code = "import sys; from leveller.folder import *; OutputFolder(Path(sys.argv[1]), False).__enter__().file('a/b')"
+    subprocess.run([sys.executable, "-c", code, tmp_path / "c" / "out"], check=True)
+    assert names(tmp_path) == []
+
+
+def test_folder_is_removed_though_a_thread_still_writes(tmp_path: Path) -> None:
+    """What comes into a folder while it is deleted is deleted with it."""
+    folder = tmp_path / "work"
+    folder.mkdir()
+    begun = threading.Event()
+
+    def write() -> None:
+        for number in range(300):
+            try:
+                (folder / f"{number}.wav").write_bytes(b"late")
+            except OSError:
+                return
+            begun.set()
+
+    writer = threading.Thread(target=write)
+    writer.start()
+    begun.wait(10)
+    remove(folder)
+    writer.join()
+    assert names(tmp_path) == []

@@ -16,8 +16,8 @@ import leveller
 
 PACKAGE = Path(leveller.__file__).parent
 ORDER = (  # the design: each room may import those before it (and its own modules), never those after it
-    "errors", "units", "names", "riff", "samples", "wav", "settings", "spreadsheet", "folder", "desk", "lanes",
-    "recursion", "decoder", "tracks", "bwf", "ixml", "audio", "sessionfile", "defaults", "takes", "drafts",
+    "errors", "units", "names", "riff", "samples", "wav", "settings", "spreadsheet", "folder", "desk", "interruptions",
+    "lanes", "recursion", "decoder", "tracks", "bwf", "ixml", "audio", "sessionfile", "defaults", "takes", "drafts",
     "duplicates", "session", "season", "fingerprint", "measure", "align", "suspects", "timeline", "attribute", "plan",
     "doubt", "automation", "edits", "kept", "listen", "render", "marks", "cut", "spots", "findings", "advice", "quiet",
     "inspection", "report", "reading", "request", "pipeline", "worker", "workers", "cluster", "batch", "console", "cli",

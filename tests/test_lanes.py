@@ -16,7 +16,8 @@ from leveller.lanes import AHEAD, limited_to, second_thread, thread_count, walk
 @pytest.mark.parametrize(("lanes", "blocks"), [(1, 1), (1, 9), (3, 5), (12, 4)])
 def test_results_come_in_order(threads: int, lanes: int, blocks: int) -> None:
     """Block by block, in lane order, on any number of threads."""
-    found = list(walk(lambda lane, block: (block, lane), lanes=lanes, blocks=blocks, threads=threads))
+    with walk(lambda lane, block: (block, lane), lanes=lanes, blocks=blocks, threads=threads) as rows:
+        found = list(rows)
     assert found == [[(block, lane) for lane in range(lanes)] for block in range(blocks)]
 
 
@@ -34,7 +35,8 @@ def test_a_lane_is_never_in_two_places() -> None:
         with lock:
             inside[lane] -= 1
 
-    list(walk(step, lanes=3, blocks=8, threads=4))
+    with walk(step, lanes=3, blocks=8, threads=4) as rows:
+        assert len(list(rows)) == 8
     assert len(wrong) == 24
     assert not any(wrong)
     assert seen == [list(range(8))] * 3
@@ -43,9 +45,10 @@ def test_a_lane_is_never_in_two_places() -> None:
 def test_no_more_than_a_few_blocks_are_in_flight() -> None:
     """While the reader dawdles, no lane gets further ahead than AHEAD blocks: memory stays bounded."""
     begun = []
-    for block, _ in enumerate(walk(lambda _, block: begun.append(block), lanes=2, blocks=20, threads=2)):
-        time.sleep(0.002)
-        assert max(begun) <= block + AHEAD
+    with walk(lambda _, block: begun.append(block), lanes=2, blocks=20, threads=2) as rows:
+        for block, _ in enumerate(rows):
+            time.sleep(0.002)
+            assert max(begun) <= block + AHEAD
 
 
 @pytest.mark.parametrize("threads", [1, 4])
@@ -60,8 +63,8 @@ def test_the_first_error_ends_the_walk(threads: int) -> None:
         return block
 
     found = []
-    with pytest.raises(OSError, match="gone"):
-        found.extend(walk(step, lanes=3, blocks=100, threads=threads))
+    with pytest.raises(OSError, match="gone"), walk(step, lanes=3, blocks=100, threads=threads) as rows:
+        found.extend(rows)
     assert found == [[0, 0, 0], [1, 1, 1]]
     assert max(begun) <= 2 + AHEAD
     assert not [thread for thread in threading.enumerate() if thread.name.startswith("lane")]
@@ -70,15 +73,36 @@ def test_the_first_error_ends_the_walk(threads: int) -> None:
 def test_a_reader_that_leaves_ends_the_walk() -> None:
     """Leaving after the first block drops the rest."""
     begun = []
-    rows = walk(lambda _, block: begun.append(block), lanes=1, blocks=1000, threads=2)
-    next(rows)
-    rows.close()
+    with walk(lambda _, block: begun.append(block), lanes=1, blocks=1000, threads=2) as rows:
+        next(rows)
     assert len(begun) <= 1 + AHEAD
+
+
+@pytest.mark.parametrize("error", [OSError, KeyboardInterrupt])
+def test_an_error_between_the_rows_leaves_no_step_at_work(error: type[BaseException]) -> None:
+    """Once the walk is left by an error, while that error is still under way, no step runs: files can be removed."""
+    begun, ended = [], []
+
+    def step(lane: int, block: int) -> None:
+        begun.append((lane, block))
+        time.sleep(0.02)
+        ended.append((lane, block))
+
+    try:
+        with walk(step, lanes=2, blocks=1000, threads=2) as rows:
+            next(rows)
+            raise error
+    except error:
+        assert sorted(begun) == sorted(ended)
+        before = len(begun)
+        time.sleep(0.1)
+        assert len(begun) == before
 
 
 def test_no_blocks_no_rows() -> None:
     """Nothing to walk."""
-    assert list(walk(lambda *_: None, lanes=2, blocks=0)) == []
+    with walk(lambda *_: None, lanes=2, blocks=0) as rows:
+        assert list(rows) == []
 
 
 def test_threads_worth_having(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -109,7 +133,8 @@ def test_limited_to_one_nothing_starts_a_thread(
     monkeypatch.setattr(lanes, "processor_count", lambda: 2)
     with limited_to(threads), second_thread() as second:
         workers = {second.submit(threading.get_ident).result()}
-        workers |= {one for row in walk(lambda *_: threading.get_ident(), lanes=3, blocks=5) for one in row}
+        with walk(lambda *_: threading.get_ident(), lanes=3, blocks=5) as rows:
+            workers |= {one for row in rows for one in row}
     assert (workers == {threading.get_ident()}) is alone
 
 

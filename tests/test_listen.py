@@ -131,6 +131,8 @@ def test_an_opening_on_bleed_is_named_with_its_reason() -> None:
     plain = heard(opening(own_to_bleed_db=2.0), m=m)[0]
     assert (plain.track, plain.decided, plain.could_be) == ("Ann", "own", "bleed")
     assert plain.reason == "open while Cem speaks, at most 2 dB over Cem's bleed: it may be bleed alone"
+    under = heard(opening(own_to_bleed_db=-2.0), m=m)[0]
+    assert under.reason == "open while Cem speaks, at its loudest 2 dB under Cem's bleed: it may be bleed alone"
     bright = heard(opening(bright_db=6.0), m=m)[0]
     assert bright.reason == "paper or keys? high bands stand out by 6 dB more than low ones while Cem speaks"
     levels[:, 1] = SILENT * STEP_DB

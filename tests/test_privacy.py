@@ -9,6 +9,7 @@ from typing import NoReturn
 import pytest
 import runs
 
+from leveller.batch import batch
 from leveller.inspection import inspect
 from leveller.pipeline import finish, process, render_again
 from leveller.reading import measure_files
@@ -36,14 +37,26 @@ def done(tmp_path_factory: pytest.TempPathFactory) -> Path:
         process(home / "talk", out=home / "first", corrections=home / "words.csv")
         render_again(home / "talk", home / "first" / "automation.csv", out=home / "second")
         finish(home / "first" / "mix.wav", out=home / "third")
+        (home / "list").mkdir()
+        (home / "list" / "season.csv").write_text(
+            "session,name,expander.range_db\n../talk,good,\n../nowhere,gone,\nbad.wav,,\n../talk,odd,1e9\n"
+            "../talk,taken,\n")
+        (home / "list" / "bad.wav").write_bytes(b"no sound" * 9)
+        (home / "fourth" / "taken").mkdir(parents=True)
+        report = batch(home / "list" / "season.csv", out=home / "fourth", jobs=1)
+        assert [outcome.reason.partition(" (")[0].partition(". ")[0] for outcome in report.episodes] == [
+            "", "../nowhere: no such file", "bad.wav: not readable as audio",
+            "odd, in the season's list: expander.range_db = 1000000000.0: expected auto or a number from 0 to 60",
+            "fourth/taken: exists and is no result of leveller's"]
         assert inspect([home / "talk"]).tracks
         assert measure_files([home / "first" / "mix.wav"])
     return home
 
 
 def test_no_connection_is_opened(done: Path) -> None:
-    """process, render, finish, inspect and measure ran to their ends without a socket, and a socket would be seen."""
-    assert [name for name in ("first", "second", "third") if not (done / name / "mix.wav").exists()] == []
+    """All commands ran to their ends without a socket, and a socket would be seen."""
+    results = ("first", "second", "third", "fourth/good")
+    assert [name for name in results if not (done / name / "mix.wav").exists()] == []
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(socket, "socket", forbidden)
         with pytest.raises(AssertionError, match="a connection was opened"):
@@ -52,7 +65,8 @@ def test_no_connection_is_opened(done: Path) -> None:
 
 def test_no_file_says_where_it_was_made(done: Path) -> None:
     """Neither the folder of the work nor the home folder stands in any byte of any file that was written."""
-    written = [path for name in ("first", "second", "third") for path in (done / name).rglob("*") if path.is_file()]
+    results = ("first", "second", "third", "fourth")
+    written = [path for name in results for path in (done / name).rglob("*") if path.is_file()]
     assert {".csv", ".json", ".html", ".wav", ".npz"} <= {path.suffix for path in written}
     secrets = [SECRET.encode(), str(done.parent).encode(), str(Path("~").expanduser()).encode() + b"/"]
     assert [path.name for path in written for secret in secrets if secret in path.read_bytes()] == []

@@ -17,6 +17,7 @@ import soundfile as sf
 
 from leveller import kept, pipeline
 from leveller.errors import AutomationError
+from leveller.report.figures import figures_of
 from leveller.session import open_session
 
 LUFS_BAND = 0.1  # of the target; EBU R 128 allows 0.2 LU
@@ -84,6 +85,8 @@ def test_an_edited_row_is_exactly_what_is_heard(place: Path, tmp_path: Path) -> 
     away = slice(0, round((from_s - 0.5) * rate_hz))
     make_up_db = result.mix.make_up_db - json.loads((place / "out" / "report.json").read_text())["mix"]["make_up_db"]
     assert np.allclose(stem[away], before[away] * 10 ** (make_up_db / 20), rtol=2e-3, atol=1e-7)
+    kinds = [fault.kind for fault in figures_of(result).faults]
+    assert "knob" not in kinds, "an edited gain is no turned recording gain"
 
 
 def test_the_delivery_is_met_again(place: Path, tmp_path: Path) -> None:

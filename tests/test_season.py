@@ -12,7 +12,7 @@ import soundfile as sf
 from leveller.errors import AutomationError, InputError, LevellerError, SettingsError
 from leveller.fingerprint import fingerprint
 from leveller.report.origins import delivery_in_force, settings_in_force
-from leveller.season import read_season
+from leveller.season import read_season, told_from
 from leveller.session import open_session
 
 
@@ -44,6 +44,8 @@ def test_a_folder_lists_its_sessions_in_natural_order(tmp_path: Path) -> None:
     assert read_season(tmp_path).notes == (
         "notes: no audio directly in it, left out", "out: written by leveller, left out")
     assert read_season(tmp_path).title == tmp_path.name
+    (tmp_path / "season.toml").write_text('title = "The Harbour"\n')
+    assert read_season(tmp_path).title == "The Harbour"
 
 
 def test_a_session_is_no_season(tmp_path: Path) -> None:
@@ -144,7 +146,24 @@ def test_a_session_overrides_its_season(tmp_path: Path) -> None:
     assert rows["expander.hold_s"] == ("0.3", "--set")
     assert rows["expander.knee_db"] == ("4", "default")
     assert delivery_in_force(tmp_path / "ep 1") == (
-        "podcast-mono (default), -20.0 LUFS (season.toml), -2.0 dBTP (session.toml)")
+        "podcast-mono (default), -20.0 LUFS (season.toml), -2.0 dBTP (session.toml), 2 channels (season.toml)")
+
+
+@pytest.mark.parametrize(("show", "own", "option", "value", "origin"), [
+    ("", "", None, "false", "default"), ("align = true\n", "", None, "true", "season.toml"),
+    ("align = true\n", "align = false\n", None, "false", "session.toml"),
+    ("", "align = true\n", None, "true", "session.toml"), ("align = true\n", "", False, "false", "--no-align"),
+    ("", "align = false\n", True, "true", "--align")])
+def test_align_is_listed_among_the_settings(
+    tmp_path: Path, show: str, own: str, option: bool | None, value: str, origin: str
+) -> None:
+    """`align` is listed with its value, as a session opened likewise takes it, and with what said so."""
+    sound(tmp_path / "ep 1" / "a.wav")
+    (tmp_path / "season.toml").write_text(show)
+    (tmp_path / "ep 1" / "session.toml").write_text(own)
+    key, shown, unit, where, _ = settings_in_force(tmp_path / "ep 1", {}, align=option)[0]
+    assert (key, shown, unit, where) == ("align", value, "on/off", origin)
+    assert open_session([tmp_path / "ep 1"], align=option).align is (value == "true")
 
 
 def test_a_delivery_of_the_session_drops_that_of_the_season(tmp_path: Path) -> None:
@@ -183,3 +202,18 @@ def test_a_bad_season_file_is_named(tmp_path: Path, text: str, message: str) -> 
         open_session([tmp_path / "ep 1"])
     with pytest.raises(SettingsError, match=re.escape(message)):
         read_season(tmp_path)
+
+
+def test_lists_nested_too_deep_are_refused(tmp_path: Path) -> None:
+    """A season.toml of brackets alone is one line of error."""
+    (tmp_path / "season.toml").write_text("a = " + "[" * 100_000)
+    with pytest.raises(SettingsError, match=r"season\.toml: a number has thousands of digits, or lists lie too deep"):
+        read_season(tmp_path)
+
+
+def test_reasons_are_told_from_a_folder() -> None:
+    """Paths below the folder and those that are named lose what lies before it; the root and other words stay."""
+    text = "/a/show/ep 1/x.wav and /a/show/ep 10/y.wav, /b/z.wav: see /a/show or /etc/x"
+    assert told_from(Path("/a/show"), text, ["/a/show/ep 1", "/b/z.wav"]) == (
+        "ep 1/x.wav and ep 10/y.wav, ../../b/z.wav: see show or /etc/x")
+    assert told_from(Path("/"), "/x/y.wav: missing", []) == "/x/y.wav: missing"

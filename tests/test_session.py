@@ -527,11 +527,15 @@ WANTED = (Correction("A", 0.5, 1.25, "own", None), Correction("B", 1.0, 2.0, Non
     "\ufefftrack;from_s;to_s;decide;gain_db\r\nA;0,5;1,25;own;\r\n;;;;\r\nB;1;2;;-6,5\r\n",
     "track\tfrom_s\tto_s\tgain_db\tdecide\r\nA\t0,5\t1,25\t\town\r\nB\t1\t2\t-6,5\t\r\n",
     'track,from_s,to_s,decide,gain_db\r"A",0.5,1.25,own,\r"B",1,2,,-6.5',
+    'sep=,\nTrack,from_s,to_s,decide,gain_db,\nA,"0,5","1,25",Own,,\nB,1,2,,\u22126.5,\n,,,,,\n',
+    'track,from_s,to_s,decide,gain_db\nA,="0.5",1.25,own,\nB,1,2,,="-6.5"\n',
 ])
 def test_corrections_of_any_spreadsheet_are_read(tmp_path: Path, content: str) -> None:
     """Commas, semicolons with decimal commas, tabs, a byte-order mark and any line ends mean the same."""
     path = tmp_path / "corrections.csv"
     path.write_bytes(content.encode())
+    assert read_corrections(path) == WANTED
+    path.write_bytes(content.removeprefix("\ufeff").encode("utf-16"))
     assert read_corrections(path) == WANTED
     assert with_toml(tmp_path, TWO, corrections=path).corrections == WANTED
 
@@ -551,13 +555,14 @@ def test_names_quoted_against_spreadsheets_are_understood(tmp_path: Path) -> Non
     ("track,from_s,to_s,to_s\n", "c.csv, line 1: column 'to_s' stands there twice"),
     ("track,from_s,to_s,decide\nA,0,1,own\nA,x,1,own\n", "c.csv, line 3: from_s = 'x': expected a number"),
     ("track,from_s,to_s,decide\nA,0,1\n", "c.csv, line 2: 3 cells, but the header has 4"),
+    ("track,from_s,to_s,gain_db\nA,0,1,-3,5\n", "c.csv, line 2: 5 cells, but the header has 4"),
     ("track,from_s,to_s,decide\nA,2,1,own\n", "c.csv, line 2: to_s = 1 does not lie behind from_s = 2"),
     ("track,from_s,to_s,decide\nA,0,1,mine\n", "c.csv, line 2: decide = 'mine': expected own, bleed, silence"),
     ("track,from_s,to_s,gain_db\nA,0,1,41\n", "c.csv, line 2: gain_db = 41.0: expected a number from -120 to 40 (dB)"),
-    ("track,from_s,to_s,gain_db\nA,0,nan,1\n", "c.csv, line 2: to_s = nan: expected a number from 0 to 604800 (s)"),
+    ("track,from_s,to_s,gain_db\nA,0,nan,1\n", "c.csv, line 2: to_s = 'nan': expected a number"),
     ("track,from_s,to_s,decide\n,0,1,own\n", 'c.csv, line 2: needs track = "..."'),
-    ("track,from_s,to_s,decide\nC,0,1,own\n", "c.csv: unknown track 'C'; known: A, B"),
-    ("track,from_s,to_s,decide\nA,3,4,own\n", "c.csv: A, from_s = 3 lies behind the session's end at 3.000 s"),
+    ("track,from_s,to_s,decide\nC,0,1,own\n", "c.csv, line 2: unknown track 'C'; known: A, B"),
+    ("track,from_s,to_s,decide\nA,3,4,own\n", "c.csv, line 2: A, from_s = 3 lies behind the session's end at 3.000 s"),
     ("track,from_s,to_s,decide\nA\udce9,3,4,own\n", "c.csv: not UTF-8 text (byte 26). Save it as UTF-8"),
 ])
 def test_corrections_that_cannot_be_understood_name_file_and_line(tmp_path: Path, content: str, message: str) -> None:

@@ -58,6 +58,7 @@ def test_what_is_no_number_is_none(cell: str) -> None:
     ("a,bb\n1,2\n", "t.csv, line 1: column 'b' is missing (did you mean \"bb\"?); needed are a, b"),
     ("a,b,b\n1,2,3\n", "t.csv, line 1: column 'b' stands there twice"),
     ("a,c,b\n1,2,3\n4,5\n", "t.csv, line 3: 2 cells, but the header has 3"),
+    ("a,b,c\n1,2,3,\n1,2,3,5\n", "t.csv, line 3: 4 cells, but the header has 3"),
     (b"a,b\n\xff,1\n", "t.csv: not UTF-8 text (byte 4). Save it as UTF-8"),
 ])
 def test_what_cannot_be_understood_is_refused(tmp_path: Path, text: str | bytes, message: str) -> None:

@@ -139,7 +139,8 @@ def test_a_correction_that_may_mean_two_places_is_refused(
     unsure = corrections(tmp_path / "unsure.csv", f"host,20,21,,{BY_DB}", column="")
     line = refused(capsys, tmp_path / "out", "process", talk / "in", "--align", "--corrections", unsure)
     assert re.fullmatch(
-        r"leveller: correction of host, from_s = 20: --align moves this by \+(4\.99|5\.00)\d s, and nothing says which "
+        r"leveller: unsure\.csv, line 2: "
+        r"correction of host, from_s = 20: --align moves this by \+(4\.99|5\.00)\d s, and nothing says which "
         r"times are meant\. Add a column timeline: opened \(as the files lie\) or aligned \(as in the tables of a run "
         r"with --align\)\n", line)
     same = corrections(tmp_path / "same.csv", f"guest,30,31,,{BY_DB}", column="")
@@ -175,7 +176,8 @@ def test_tables_of_another_alignment_are_refused(
     """Where the session is lined up otherwise than when a table was written, the table is refused."""
     file = corrections(tmp_path / "c.csv", f"host,25,26,,{BY_DB},aligned+4.2000")
     line = refused(capsys, tmp_path / "out", "process", talk / "in", "--align", "--corrections", file)
-    assert re.fullmatch(r"leveller: correction of host, from_s = 25: its times \(aligned\+4\.2000\) are of a "
+    assert re.fullmatch(r"leveller: c\.csv, line 2: "
+                        r"correction of host, from_s = 25: its times \(aligned\+4\.2000\) are of a "
                         rf"session lined up otherwise, now it is {ALIGNED}\. Make it again from this "
                         r"session's own report\n", line)
     file = corrections(tmp_path / "c.csv", f"host,25,26,,{BY_DB},moved")

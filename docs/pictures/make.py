@@ -3,9 +3,9 @@
     python docs/pictures/make.py
 
 before_after.svg is drawn from what a run measured: for each microphone the K-weighted level (ITU-R BS.1770-5) of
-every 0.1 s, in the source and, with the gain of the automation and the make-up, in its stem. Blue where the
-microphone's own voice was decided, grey elsewhere. report.png is report.html in Debian's chromium, taken through
-chromedriver.
+every 0.1 s, in the source and, with the gain of the automation and the make-up, in its stem. In the page's colours:
+green where the microphone's own voice was decided, grey elsewhere. report.png is report.html in Debian's chromium,
+taken through chromedriver.
 """
 
 from __future__ import annotations
@@ -26,7 +26,7 @@ STEP_HOPS = 10
 BOTTOM_LUFS, TOP_LUFS = -70.0, -10.0
 LINES_LUFS = (-60, -40, -20)
 WIDTH, ROW, GAP, LEFT, TOP, LABEL = 470, 92, 14, 60, 44, 26
-INK, FAINT, OWN, OTHER, TARGET = "#24292f", "#d0d7de", "#0b6e8a", "#b3bac1", "#b3261e"
+INK, FAINT, SHEET, OWN, OTHER = "#211d18", "#ddd4c2", "#fffdf7", "#14605a", "#b8b0a0"  # of report/page.css, but OTHER
 
 
 def levels_lufs(result: Result, track: int, *, after: bool) -> np.ndarray:
@@ -50,7 +50,7 @@ def drawing(result: Result) -> str:
     out = [f'<svg xmlns="http://www.w3.org/2000/svg" viewBox="0 0 {LEFT + 2 * WIDTH + 40} {height}" '
            f'font-family="sans-serif" font-size="13" fill="{INK}" role="img">',
            "<title>Levels of the three microphones before and after</title>",
-           '<rect width="100%" height="100%" fill="#ffffff"/>']
+           f'<rect width="100%" height="100%" fill="{SHEET}"/>']
     for side, heading in enumerate(("before: as recorded", "after: stems with make-up gain")):
         x = LEFT + side * (WIDTH + 24)
         out.append(f'<text x="{x}" y="22" font-weight="bold">{heading}</text>')

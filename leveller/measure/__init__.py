@@ -97,12 +97,13 @@ def measure(
                 grids.keep(lane, rows)
             return low
 
-        for block, row in enumerate(walk(step, lanes=len(meters), blocks=blocks)):
-            arrival.push(row)
-            if block % RELEASED_BLOCKS == 0:
-                release(grids.levels)
-            on_progress("measure", min((block + 1) * frames, session.frames) / session.rate_hz,
-                        session.frames / session.rate_hz)
+        with walk(step, lanes=len(meters), blocks=blocks) as rows:
+            for block, row in enumerate(rows):
+                arrival.push(row)
+                if block % RELEASED_BLOCKS == 0:
+                    release(grids.levels)
+                on_progress("measure", min((block + 1) * frames, session.frames) / session.rate_hz,
+                            session.frames / session.rate_hz)
         for lane, meter in enumerate(meters):
             grids.keep(lane, meter.bands.result())
         return _collected(meters, grids, arrival)

@@ -40,7 +40,8 @@ def check_corrections(session: Session) -> None:
     roles = {track.name: track.role for track in session.tracks}
     for correction in session.corrections:
         if correction.decide is not None and roles[correction.track] != "voice":
-            raise SettingsError(f"correction of {correction.track} at {correction.from_s:g} s: decide = "
+            where = f"{correction.where}: " if correction.where else ""
+            raise SettingsError(f"{where}correction of {correction.track} at {correction.from_s:g} s: decide = "
                                 f"{correction.decide}, but its role is {roles[correction.track]}. Use gain_db there")
 
 

@@ -12,7 +12,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from contextlib import ExitStack
+from contextlib import ExitStack, closing
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -131,8 +131,9 @@ class Bus:
         """One pass over the programme."""
         meter = Remeter(before, make_up.nodes_db, make_up.make_up_db, self._rate_hz, self._channels)
         total_s, done = programme.frames / self._rate_hz, 0
-        with WavWriter(path, self._rate_hz, self._channels, "pcm24", expected_frames=programme.frames) as writer:
-            for block in programme.delivered(make_up):
+        with (WavWriter(path, self._rate_hz, self._channels, "pcm24", expected_frames=programme.frames) as writer,
+              closing(programme.delivered(make_up)) as blocks):
+            for block in blocks:
                 writer.write(block)
                 meter.push(block)
                 done += len(block)
@@ -160,9 +161,10 @@ def _write_stems(
         def step(lane: int, block: int) -> Samples:
             return lanes[lane].next(min(frames, session.frames - block * frames), block * hops_per_block)
 
-        for block, row in enumerate(walk(step, lanes=len(lanes), blocks=blocks)):
-            bus.push(summed(row))
-            on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
+        with walk(step, lanes=len(lanes), blocks=blocks) as rows:
+            for block, row in enumerate(rows):
+                bus.push(summed(row))
+                on_progress("render", min(length_s, (block + 1) * frames / session.rate_hz), length_s)
 
 
 class _StemLane:

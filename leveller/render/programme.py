@@ -6,7 +6,7 @@ that take the make-up gain in place while they are summed, or stems of 24 bit th
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Generator, Sequence
 from contextlib import ExitStack
 from pathlib import Path
 from typing import Protocol
@@ -22,6 +22,7 @@ from leveller.session import Session
 from leveller.units import db_to_gain
 
 Samples = npt.NDArray[np.float32]
+Blocks = Generator[Samples, None, None]  # to be closed before what it reads and writes
 
 
 class Programme(Protocol):
@@ -30,7 +31,7 @@ class Programme(Protocol):
     @property
     def frames(self) -> int: ...
 
-    def delivered(self, make_up: MakeUp) -> Iterator[Samples]:
+    def delivered(self, make_up: MakeUp) -> Blocks:
         """Its blocks from the start, after make-up and limiter."""
 
 
@@ -56,7 +57,7 @@ class SpilledSum:
         """Add the next block."""
         self._spill.append(block)
 
-    def delivered(self, make_up: MakeUp) -> Iterator[Samples]:
+    def delivered(self, make_up: MakeUp) -> Blocks:
         """As `Programme`."""
         at = 0
         for block in self._spill.blocks(self._block_frames):
@@ -84,7 +85,7 @@ class ScaledStems:
     def __exit__(self, *_: object) -> None:
         self._open.close()
 
-    def delivered(self, make_up: MakeUp) -> Iterator[Samples]:
+    def delivered(self, make_up: MakeUp) -> Blocks:
         """As `Programme`; a second walk takes the stems from the first one's gain to its own."""
         wanted = float(db_to_gain(make_up.make_up_db))
         factor = np.float32(wanted / self._gain)
@@ -98,9 +99,10 @@ class ScaledStems:
             return scaled
 
         blocks = -(-self.frames // self._block_frames)
-        for block, row in enumerate(walk(step, lanes=len(self._files), blocks=blocks)):
-            yield apply_nodes(summed(row), make_up.nodes_db, first_frame=block * self._block_frames,
-                              cell_frames=self._cell_frames, make_up_db=0.0)
+        with walk(step, lanes=len(self._files), blocks=blocks) as rows:
+            for block, row in enumerate(rows):
+                yield apply_nodes(summed(row), make_up.nodes_db, first_frame=block * self._block_frames,
+                                  cell_frames=self._cell_frames, make_up_db=0.0)
         self._gain = wanted
 
     def keep(self) -> None:
@@ -124,7 +126,7 @@ class LimitedStems:
     def __exit__(self, *_: object) -> None:
         pass
 
-    def delivered(self, make_up: MakeUp) -> Iterator[Samples]:
+    def delivered(self, make_up: MakeUp) -> Blocks:
         """As `Programme`; each walk writes the stems anew."""
         cell_frames = peak_cell_frames(self._rate_hz)
         with ExitStack() as stack:
@@ -139,8 +141,9 @@ class LimitedStems:
                 writers[lane].write(limited)
                 return limited
 
-            for row in walk(step, lanes=len(files), blocks=-(-self.frames // self._block_frames)):
-                yield summed(row)
+            with walk(step, lanes=len(files), blocks=-(-self.frames // self._block_frames)) as rows:
+                for row in rows:
+                    yield summed(row)
 
     def keep(self) -> None:
         """Nothing is delivered any more: put the stems in place."""

@@ -12,8 +12,10 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from leveller.advice import DC_DBFS
 from leveller.measure.peaks import PeakReading
-from leveller.plan import PARTS, TrackGain
+from leveller.plan import CAUSES, PARTS, TrackGain
+from leveller.plan.corrections import offset_nodes_db
 from leveller.plan.levels import k_power, level_lufs
 from leveller.plan.stretches import stretches
 from leveller.report.quantities import shown
@@ -27,8 +29,7 @@ if TYPE_CHECKING:
 
 NOT_LINED_UP = "not lined up"
 KINDS = ("set aside", "note", NOT_LINED_UP, "skip", "tone", "silent", "nobody", "clipped", "over full scale", "DC",
-         "repaired", "knob", "bed")
-DC_DBFS = -50.0  # a choice of ours: an offset over this costs headroom and clicks at cuts
+         "repaired", "knob", "corrected", "bed")
 SILENT_DBFS = -90.0  # a choice of ours: a track that never gets over the last bit of 16 carries nothing
 HEAVY_LIMITING_DB = 6.0  # common practice, no source: more is heard on speech
 KNOB_DB = 0.5  # a choice of ours: a smaller step is not worth a line
@@ -45,6 +46,12 @@ def faults_of(result: Result, voices: tuple[VoiceFigures, ...]) -> tuple[Fault, 
 def left_open(report: Report, result: Result) -> tuple[str, ...]:
     """Sentences on what was not done or not reached."""
     return (*mix_left_open(report), *_left_open(report, result))
+
+
+def over_full_scale(name: str, peak_dbfs: float, at_s: float) -> Fault:
+    """A file of floats whose peaks pass full scale."""
+    return Fault("over full scale", name, f"{name}: peaks reach {peak_dbfs:+.1f} dBFS; the file holds floats, so "
+                 "nothing is lost", ((at_s, at_s),))
 
 
 def _session_faults(result: Result) -> Iterator[Fault]:
@@ -68,8 +75,9 @@ def _session_faults(result: Result) -> Iterator[Fault]:
 
 
 def _track_faults(result: Result) -> Iterator[Fault]:
-    """What the meters found, track by track."""
+    """What the meters found, and what the editor overruled, track by track."""
     for i, track in enumerate(result.session.tracks):
+        yield from _corrected(result, track.name)
         peaks, repaired = result.measurements.peaks[i], result.measurements.repaired_frames[i]
         if repaired:
             yield Fault("repaired", track.name, f"{track.name}: {_count(repaired, 'sample')} that held no number "
@@ -85,14 +93,19 @@ def _track_faults(result: Result) -> Iterator[Fault]:
         yield from _knob_faults(track.name, result.plan.tracks[i])
 
 
+def _corrected(result: Result, name: str) -> Iterator[Fault]:
+    """The corrections in force on a track, so that nobody wonders whether a file of them was taken."""
+    places = tuple(sorted((c.from_s, c.to_s) for c in result.session.corrections if c.track == name))
+    if places:
+        yield Fault("corrected", name, f"{name}: {_count(len(places), 'correction')} of yours", places)
+
+
 def _waveform_faults(name: str, peaks: PeakReading, padded: float) -> Iterator[Fault]:
     """Clipping, peaks over full scale, DC."""
     if peaks.clipped:
         yield Fault("clipped", name, f"{name}: clipped in {_count(len(peaks.clipped), 'place')}", peaks.clipped)
     if peaks.sample_peak_dbfs > 0:
-        at = peaks.sample_peak_s
-        yield Fault("over full scale", name, f"{name}: peaks reach {peaks.sample_peak_dbfs:+.1f} dBFS; the file holds "
-                    "floats, so nothing is lost", ((at, at),))
+        yield over_full_scale(name, peaks.sample_peak_dbfs, peaks.sample_peak_s)
     dc_dbfs = gain_to_db(max(map(abs, peaks.dc_offset)) * padded)
     if dc_dbfs > DC_DBFS:
         yield Fault("DC", name, f"{name}: DC offset of {dc_dbfs:.0f} dBFS, left as it is; high_pass_hz = 20 for this "
@@ -100,9 +113,9 @@ def _waveform_faults(name: str, peaks: PeakReading, padded: float) -> Iterator[F
 
 
 def _knob_faults(name: str, gain: TrackGain) -> Iterator[Fault]:
-    """Places where the trim steps, since the recording gain did."""
-    trim = gain.parts_cdb[:, PARTS.index("auto_trim")]
-    for row, after in stretches(np.diff(trim) != 0):
+    """Places where the trim steps, since the recording gain did; a step that the editor made is none."""
+    trim, by_hand = gain.parts_cdb[:, PARTS.index("auto_trim")], gain.cause == CAUSES.index("edit")
+    for row, after in stretches((np.diff(trim) != 0) & ~by_hand[:-1] & ~by_hand[1:]):
         step_db = int(trim[after] - trim[row]) / 100
         if abs(step_db) >= KNOB_DB:
             place = (int(gain.hop[row]) / HOPS_PER_S, int(gain.hop[after]) / HOPS_PER_S)
@@ -141,11 +154,20 @@ def _left_open(report: Report, result: Result) -> Iterator[str]:
             yield f"{voice.track}: only {voice.speaks_s:.1f} s of speech, too little to match its level"
     limit_db = result.session.settings.trim.most_db
     for voice in report.voices:
-        if voice.before_lufs is not None and max(abs(voice.trim_low_db), abs(voice.trim_high_db)) >= limit_db > 0:
+        if voice.before_lufs is not None and _most_trim_db(result, voice.track) >= limit_db > 0:
             yield f"{voice.track}: needs more than the {limit_db:g} dB of trim that trim.most_db allows"
     for stage in ("expander", "trim", "ride", "compressor"):
         if not getattr(result.session.settings, stage).enabled:
             yield f"{stage}.enabled is off: this stage was left out"
+
+
+def _most_trim_db(result: Result, name: str) -> float:
+    """The furthest that levelling itself trims a track, without what the editor added."""
+    i = next(k for k, track in enumerate(result.session.tracks) if track.name == name)
+    gain = result.plan.tracks[i]
+    added_db = offset_nodes_db(result.session, i, result.measurements.hops)[gain.hop]
+    trim_db = gain.parts_cdb[:, PARTS.index("auto_trim")] / 100 - added_db
+    return float(np.abs(trim_db[gain.cause != CAUSES.index("edit")]).max(initial=0.0))
 
 
 def mix_left_open(report: Report) -> Iterator[str]:

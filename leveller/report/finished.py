@@ -7,16 +7,18 @@ the settings it holds those of the limiter, the only stage that was at work.
 from __future__ import annotations
 
 import dataclasses
+from collections.abc import Iterator
 
 from leveller.cut import Finished
 from leveller.folder import OutputFolder
 from leveller.report.cut_page import write_cut_page
-from leveller.report.faults import mix_left_open
+from leveller.report.faults import mix_left_open, over_full_scale
 from leveller.report.figures import delivery_figures, mix_figures
 from leveller.report.records import Fault, Report
 from leveller.report.tables import write_mix, write_report
 from leveller.report.text import summary_blocks
 from leveller.spots import spots_to_hear
+from leveller.units import HOPS_PER_S, gain_to_db
 
 
 def finished_figures(finished: Finished) -> Report:
@@ -44,4 +46,12 @@ def _faults(finished: Finished) -> tuple[Fault, ...]:
     repaired = [Fault("repaired", name, f"{name}: {count} sample{'' if count == 1 else 's'} that held no number "
                       "(NaN or Inf) silenced", ())
                 for name, count in zip(names, finished.repaired_frames, strict=True) if count]
-    return (*said, *repaired)
+    return (*said, *repaired, *_over_full_scale(finished))
+
+
+def _over_full_scale(finished: Finished) -> Iterator[Fault]:
+    """Files that pass full scale and lose nothing, since they hold floats."""
+    for track, peaks in zip(finished.session.tracks, finished.file_peaks, strict=True):
+        peak = float(peaks.max(initial=0.0))
+        if track.is_float and peak > 1:
+            yield over_full_scale(track.name, float(gain_to_db(peak)), int(peaks.argmax()) / HOPS_PER_S)

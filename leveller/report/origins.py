@@ -19,12 +19,23 @@ from leveller.settings import DEFAULT_DELIVERY, Settings, delivery_named
 
 DEFAULT = "default"
 SET = "--set"
+ALIGN_OPTION = {True: "--align", False: "--no-align"}
+ALIGN_WHY = "off takes the tracks as they lie; on lines up those of separate recorders"
 
 Row = tuple[str, str, str, str, str]  # key, value, unit, where it came from, reason of the default
 
 
-def settings_in_force(session: Path | None, assignments: Mapping[str, Any]) -> list[Row]:
-    """All settings as they would count for a session; no audio is opened.
+def settings_in_force(session: Path | None, assignments: Mapping[str, Any], *, align: bool | None = None) -> list[Row]:
+    """All settings as they would count for a session, `align` first; no audio is opened.
+
+    Parameters
+    ----------
+    session : Path or None
+        A folder or a session.toml; None for the defaults alone.
+    assignments : mapping of key to value
+        As `--set` gives them.
+    align : bool or None
+        As `--align` and `--no-align` give it; None where neither is given.
 
     Raises
     ------
@@ -38,11 +49,12 @@ def settings_in_force(session: Path | None, assignments: Mapping[str, Any]) -> l
     def origin(key: str) -> str:
         return SET if key in assignments else said.where_of(key) if key in written else DEFAULT
 
-    return [(key, value_text(value), unit, origin(key), why) for key, value, unit, why in settings.rows()]
+    stages = [(key, value_text(value), unit, origin(key), why) for key, value, unit, why in settings.rows()]
+    return [_align_row(said, align), *stages]
 
 
 def delivery_in_force(session: Path | None) -> str:
-    """Name, target and ceiling that would count for a session, each with where it came from.
+    """Name, target and ceiling that would count for a session, rate and channels where given, each with its origin.
 
     Raises
     ------
@@ -58,14 +70,25 @@ def delivery_in_force(session: Path | None) -> str:
 
     target = chosen.target_lufs if said.target_lufs is None else said.target_lufs
     ceiling = chosen.ceiling_dbtp if said.ceiling_dbtp is None else said.ceiling_dbtp
-    return ", ".join((
-        part(chosen.name, "delivery", DEFAULT), part(f"{target:.1f} LUFS", "target_lufs", chosen.name),
-        part(f"{ceiling:.1f} dBTP", "ceiling_dbtp", chosen.name)))
+    parts = [part(chosen.name, "delivery", DEFAULT), part(f"{target:.1f} LUFS", "target_lufs", chosen.name),
+             part(f"{ceiling:.1f} dBTP", "ceiling_dbtp", chosen.name)]
+    if said.sample_rate is not None:
+        parts.append(part(f"{said.sample_rate} Hz", "sample_rate", DEFAULT))
+    if said.mix_channels is not None:
+        parts.append(part("2 channels" if said.mix_channels == 2 else "1 channel", "mix_channels", DEFAULT))
+    return ", ".join(parts)
 
 
 def value_text(value: Any) -> str:
     """A value as session.toml and --set take it."""
     return str(value).lower() if isinstance(value, bool) else f"{value:g}" if isinstance(value, float) else str(value)
+
+
+def _align_row(said: SessionFile, option: bool | None) -> Row:
+    """Whether tracks are lined up: the option says, else a file, else they are not."""
+    value = said.align if option is None else option
+    origin = said.where_of("align") if option is None else ALIGN_OPTION[option]
+    return ("align", value_text(bool(value)), "on/off", DEFAULT if value is None else origin, ALIGN_WHY)
 
 
 def _said(session: Path | None) -> SessionFile:

@@ -171,8 +171,23 @@ function fill() {
   byId("keys-list").append(...KEYS.flatMap(([key, does]) => [make("dt", {}, key), make("dd", {}, does)]));
   byId("summary-box").hidden = !record.summary.length;
   for (const {heading, lines: texts} of record.summary)
-    byId("summary").append(make("h3", {}, heading), make("ul", {}, ...texts.map((text) => make("li", {}, text))));
+    byId("summary").append(make("h3", {}, heading), ...summed(texts));
   byId("legend").append(...KIND.legend.map(([kind, text]) => make("li", {class: kind}, text)));
+}
+
+// Sentences as lists; lines with tabs as tables, the first of each its head.
+function summed(texts) {
+  const out = [];
+  for (const text of texts) {
+    const kind = text.includes("\t") ? "TABLE" : "UL";
+    if (out.at(-1)?.tagName !== kind) out.push(make(kind.toLowerCase()));
+    const table = out.at(-1);
+    if (kind === "UL") { table.append(make("li", {}, text)); continue; }
+    const scope = table.rows.length ? "row" : "col", cells = text.split("\t");
+    table.append(make("tr", {}, ...cells.map((cell, i) => cell && (scope === "col" || i === 0)
+      ? make("th", {scope}, cell) : make("td", {}, cell))));
+  }
+  return out;
 }
 
 function fillHear() {

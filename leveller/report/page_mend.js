@@ -115,6 +115,7 @@ function mendText(mend) {
 }
 
 if (record.timeline !== "opened") byId("again").append(" --align");
+byId("by-hand").hidden = !record.by_hand;
 
 function listMends() {
   byId("count").textContent = mends.list.length ? `(${mends.list.length})` : "(none yet)";

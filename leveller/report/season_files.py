@@ -9,7 +9,6 @@ processing took, which the reports of an episode never have.
 from __future__ import annotations
 
 import json
-import os
 from pathlib import Path
 from typing import Any
 
@@ -27,17 +26,40 @@ SEASON_COLUMNS = (
 JSON_FORM = 1  # raised when a key of season.json changes its meaning
 
 
-def write_season(folder: Path, report: SeasonReport) -> None:
-    """Write the three files; raises OutputError where that cannot be."""
-    texts = {"season.csv": season_csv(report), "season.json": season_json(report), "season.html": season_page(report)}
-    for name, text in texts.items():
-        fresh = folder / f".{name}.part-{os.getpid()}"
-        try:
-            fresh.write_bytes(text.encode("utf-8", "backslashreplace"))
-            fresh.replace(folder / name)
-        except OSError as error:
-            fresh.unlink(missing_ok=True)
-            raise OutputError(f"{folder / name}: cannot be written ({error.strerror})") from error
+class SeasonUnwritten(OutputError):
+    """The season's reports cannot be written; what they would say is in `report`."""
+
+    def __init__(self, message: str, report: SeasonReport) -> None:
+        super().__init__(message)
+        self.report = report
+
+
+def write_season(folder: Path, report: SeasonReport, *, by: Path) -> None:
+    """Write the three files, all of them or none.
+
+    Parameters
+    ----------
+    folder : Path
+        where they go
+    report : SeasonReport
+    by : Path
+        the batch's own folder on the same file system, where they are written first; it goes in any case, so that an
+        interrupted run leaves nothing beside the reports
+
+    Raises
+    ------
+    SeasonUnwritten
+        where that cannot be; it has the report, so that it can be told at least
+    """
+    texts = {"season.csv": season_csv, "season.json": season_json, "season.html": season_page}
+    try:
+        for name, text in texts.items():
+            (by / name).write_bytes(text(report).encode("utf-8", "backslashreplace"))
+        for name in texts:
+            (by / name).replace(folder / name)
+    except OSError as error:
+        raise SeasonUnwritten(f"{folder}: {name} cannot be written ({error.strerror}). The episodes are not touched by "
+                              "that; make room and give the same command again", report) from error
 
 
 def season_csv(report: SeasonReport) -> str:

@@ -19,7 +19,7 @@ import numpy.typing as npt
 
 from leveller.listen import Place
 from leveller.measure.levels import SILENT, level_to_db
-from leveller.plan import STATES, TrackGain, states_of
+from leveller.plan import CAUSES, STATES, TrackGain, states_of
 from leveller.report import page
 from leveller.sessionfile import GAIN_BOUNDS
 from leveller.timeline import timeline_of
@@ -29,6 +29,7 @@ if TYPE_CHECKING:
     from leveller.pipeline import Result
 
 MOST_CELLS = 3_000_000  # bytes of drawn levels over all tracks; an hour of three tracks has 1 080 000
+EDIT = CAUSES.index("edit")
 TOP_PERCENTILE = 99.9  # of a track's audible cells: what the drawing's upper edge stands for
 SILENT_TOP_DB = -20.0  # the upper edge of a silent track's drawing
 SESSION = page.PageKind(
@@ -72,6 +73,7 @@ def _record(result: Result, places: Sequence[Place], summary: page.Summary) -> d
         "skips": [{"from_s": skip.from_s, "to_s": skip.to_s, "why": skip.why} for skip in session.skips],
         "places": [_place(place) for place in places],
         "summary": page.summary_record(summary),
+        "by_hand": not result.fingerprint and any(EDIT in gain.cause for gain in result.plan.tracks),
         "corrections": [{"track": c.track, "from_s": c.from_s, "to_s": c.to_s, "decide": c.decide, "gain_db": c.gain_db}
                         for c in session.corrections]}
 

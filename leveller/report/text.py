@@ -29,6 +29,9 @@ LONG_S = 1.0  # a place longer than this is printed with its end
 SHORTEST_NAME = 8
 LEGEND = ("in: the source; out: its stem, before the limiter",
           "others: while only others speak, against own speech; noise: while nobody speaks")
+LEVELS = (("speech, LUFS", "before_lufs", "after_lufs"), ("others, dB", "bleed_before_db", "bleed_after_db"),
+          ("noise, LUFS", "noise_before_lufs", "noise_after_lufs"))  # heading, figures in and out
+MOVES = (("trim", "trim_db"), ("ride", "ride_db"), ("comp", "compressor_db"), ("close", "expander_db"))
 _HIDDEN = ("Cc", "Cf", "Cs", "Zl", "Zp")  # control, format (text direction too), surrogates, line ends
 
 
@@ -73,11 +76,11 @@ def format_summary(
 
 
 def summary_blocks(report: Report) -> list[tuple[str, list[str]]]:
-    """The summary as headings with their lines, for the page."""
+    """The summary as headings with their lines, for the page; lines with tabs are rows of a table, its head first."""
     blocks = [
         ("Delivery", _delivery_lines(report, None)),
-        ("Voices", _voice_lines(report, None) + _other_lines(report, None)),
-        ("Mix", _mix_lines(report.mix)), ("Sources", _list_lines("Sources", map(fault_text, report.faults), None)),
+        ("Voices", _voice_rows(report) + _other_lines(report, None)),
+        ("Mix", _mix_sentences(report.mix)), ("Sources", _list_lines("Sources", map(fault_text, report.faults), None)),
         ("Left open", _list_lines("Left open", report.left_open, None))]
     return [(heading, [line.text for line in lines if line.text != heading]) for heading, lines in blocks if lines]
 
@@ -180,17 +183,28 @@ def _voice_lines(report: Report, width: int | None) -> list[Line]:
     """The table of voices."""
     if not report.voices:
         return []
-    pairs = (("speech, LUFS", "before_lufs", "after_lufs"), ("others, dB", "bleed_before_db", "bleed_after_db"),
-             ("noise, LUFS", "noise_before_lufs", "noise_after_lufs"))
-    moves = (("trim", _cell("trim_db")), ("ride", _cell("ride_db")), ("comp", _cell("compressor_db")),
-             ("close", _cell("expander_db")))
     getters: list[tuple[Column, Callable[[VoiceFigures], str]]] = [(Column("speaks"), _cell("speaks_s"))]
-    for group, before, after in pairs:
+    for group, before, after in LEVELS:
         getters += [(Column("in", group), _cell(before)), (Column("out", group), _cell(after))]
-    getters += [(Column(title, "gain moved, dB"), get) for title, get in moves]
+    getters += [(Column(title, "gain moved, dB"), _cell(name)) for title, name in MOVES]
     rows = [[voice.track, *(get(voice) for _, get in getters)] for voice in report.voices]
     return [*format_table([Column("Voice"), *(column for column, _ in getters)], rows, width=width),
             *(Line(text, DIM) for sentence in LEGEND for text in folded(sentence, width, indent=""))]
+
+
+def _voice_rows(report: Report) -> list[Line]:
+    """The same as two narrow tables, for the page: levels in and out, and what moved the gain."""
+    if not report.voices:
+        return []
+    levels = [("Voice, speaks", "", *(group for group, _, _ in LEVELS))]
+    moves = [("Gain moved", *(f"{title}, dB" for title, _ in MOVES))]
+    for voice in report.voices:
+        name = visible(voice.track)
+        levels += [(name, "in", *(shown(voice, before) for _, before, _ in LEVELS)),
+                   (shown(voice, "speaks_s"), "out", *(shown(voice, after) for _, _, after in LEVELS))]
+        moves += [(name, *(shown(voice, figure) for _, figure in MOVES))]
+    rows = [*levels, *((sentence,) for sentence in LEGEND), *moves]
+    return [Line("\t".join(row)) for row in rows]
 
 
 def _cell(name: str) -> Callable[[VoiceFigures], str]:
@@ -204,11 +218,11 @@ def _other_lines(report: Report, width: int | None) -> list[Line]:
     return _list_lines("Other tracks", texts, width)
 
 
-def _mix_lines(mix: MixFigures) -> list[Line]:
-    """The mix, a figure a line: name, number, unit, when."""
+def _mix_rows(mix: MixFigures) -> list[tuple[str, str, str, str]]:
+    """The mix, a figure a row: name, number, unit, when."""
     two = "" if mix.two_channels_lufs is None else f"{shown(mix, 'two_channels_lufs')} on two channels"
     spoken = [] if mix.speech_lufs is None else [("speech", shown(mix, "speech_lufs"), "LUFS", "")]
-    rows = [
+    return [
         ("integrated", shown(mix, "integrated_lufs"), "LUFS", two),
         *spoken,
         ("range", shown(mix, "range_lu"), "LU", ""),
@@ -218,8 +232,17 @@ def _mix_lines(mix: MixFigures) -> list[Line]:
         ("make-up gain", shown(mix, "make_up_db"), "dB", ""),
         ("limiting, most", shown(mix, "limiting_most_db"), "dB", _limiting(mix)),
     ]
+
+
+def _mix_lines(mix: MixFigures) -> list[Line]:
+    """The mix in columns, for the console."""
     return [Line("Mix", HEAD), *(Line(f"  {name:<17}{_at_point(number)} {unit:<4}  {when}".rstrip())
-                                 for name, number, unit, when in rows)]
+                                 for name, number, unit, when in _mix_rows(mix))]
+
+
+def _mix_sentences(mix: MixFigures) -> list[Line]:
+    """The mix where nothing stands in columns, for the page."""
+    return [Line(f"{name}: {number} {unit}{', ' if when else ''}{when}") for name, number, unit, when in _mix_rows(mix)]
 
 
 def _limiting(mix: MixFigures) -> str:

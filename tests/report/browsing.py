@@ -82,6 +82,7 @@ class Page:
         for key in held:
             actions.key_up(key)
         actions.perform()
+        self.drawn()
 
     def drag(self, start: tuple[float, float], end: tuple[float, float] | None = None) -> None:
         """Click at a point of the score, or drag to another; from its upper left corner."""
@@ -94,13 +95,19 @@ class Page:
             pointer.move_to_location(*(round(b + s + part * (e - s)) for b, s, e in zip(box, start, end, strict=True)))
         pointer.pointer_up()
         actions.perform()
+        self.drawn()
+
+    def drawn(self) -> None:
+        """Wait until what was asked for is on the page: it draws with the next frame, and that one is over then."""
+        self.driver.execute_async_script(
+            "const done = arguments[0]; requestAnimationFrame(() => requestAnimationFrame(() => done()))")
 
     def actions(self) -> Any:
         from selenium.webdriver.common.action_chains import ActionChains
 
         return ActionChains(self.driver, duration=20)
 
-    def wait(self, script: str, *, seconds: float = 5.0) -> Any:
+    def wait(self, script: str, *, seconds: float = 30.0) -> Any:
         """Until a script's answer is true."""
         end = time.monotonic() + seconds
         while not (answer := self.script(script)):
@@ -126,7 +133,7 @@ class Page:
         for old in downloads.glob("corrections*.csv"):
             old.unlink()
         self.find("#save").click()
-        end = time.monotonic() + 5
+        end = time.monotonic() + 30
         while not (found := list(downloads.glob("corrections*.csv"))):
             assert time.monotonic() < end, "no corrections.csv was saved"
             time.sleep(0.02)
