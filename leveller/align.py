@@ -3,7 +3,7 @@
 Recorders of their own start when they like and run on clocks of their own. `find_alignment` compares every track with a
 reference where both hear the same sounds (bleed, a clap), and a track that does not hear the reference with one that is
 known already. Tracks of one file have one clock. `aligned` gives the session with the tracks moved, their clocks and
-their polarity put right; `alignment_notes` only warns, and looks closely only where the arrivals look odd.
+their polarity put right. (Where that is not asked for, `suspects` warns.)
 
 Conventions: session times of the reference. A track that is late by offset_s at 0 and whose clock is fast by drift_ppm
 hears the reference's sound of t at t + offset_s + drift_ppm * 1e-6 * t. The track's frames then lie
@@ -24,12 +24,11 @@ import numpy as np
 
 from leveller.audio import parts_of
 from leveller.measure import Measurements
-from leveller.measure.arrival import LAG_S, Arrivals
 from leveller.measure.claps import CLAP_HEIGHT, common_clap
 from leveller.measure.clocks import Fit, Heard, clock_of
 from leveller.measure.levels import level_to_db
 from leveller.measure.onsets import ENOUGH_SCORE, Line, common_line, onsets
-from leveller.measure.polarity import agreement, heights_of, signs_of
+from leveller.measure.polarity import heights_of, signs_of
 from leveller.session import Session, Track
 
 LEAST_S = 0.006  # two metres of air: microphones that stand differently look that far apart without any fault
@@ -39,13 +38,7 @@ LEAST_DRIFT_S = 0.0015  # by the session's end; less is no drift
 LEAST_PLACES = 3
 LEAST_SHARE = 0.4  # of the clear places
 DRIFT_SPAN_S = 20.0  # over less time the slope means nothing
-STEADY_LAGS = 4  # arrivals this near to the commonest lag agree with it
-STEADY_SHARE = 0.15  # chance is 0.05
-STEADY_S = 0.0015  # what the commonest lag may move from the first half to the second
-LEAST_ARRIVALS = 40
-AHEAD_DB = 6.0
-CORRECTS, LEFT = "--align corrects it", "so it was not aligned"  # how notes on tracks that do not line up end
-SURE_OF_SIGN = 0.9  # of what a track has in common with others, its sign must explain so much
+LEFT = "so it was not aligned"  # how the note on a track that nothing is known of ends
 
 
 @dataclass(frozen=True)
@@ -96,7 +89,7 @@ def find_alignment(
     tracks = [i for i, track in enumerate(session.tracks) if track.role != "bed"]
     if len(tracks) < 2:
         return ()
-    reference = _reference(session, tracks)
+    reference = reference_of(session, tracks)
     looked_at = [i for i in tracks if (suspects is None or i in suspects) and i != reference]
     known = {i: _Clock(None) for i in tracks if i not in looked_at}
     heard = {i: Heard(session.tracks[i], onsets(m.levels[:, i]), level_to_db(m.voice_levels[:, i])) for i in tracks}
@@ -114,7 +107,7 @@ def aligned(session: Session, found: Sequence[Alignment]) -> Session:
     Its notes say what was moved and what was left alone.
     """
     by_name = {a.track: a for a in found}
-    turned = _turned(found)
+    turned = turned_tracks(found)
     tracks, starts, notes = [], [], []
     for track in session.tracks:
         record = by_name.get(track.name)
@@ -122,7 +115,7 @@ def aligned(session: Session, found: Sequence[Alignment]) -> Session:
         if record is not None:
             track, start_s = _moved(track, record, session, start_s)
             track = dataclasses.replace(track, polarity=track.polarity * (-1 if track.name in turned else 1))
-            notes += _said(record, session, track.name in turned)
+            notes += said_of(record, session, track.name in turned)
         tracks.append(track)
         starts.append(start_s)
     if tracks == list(session.tracks) and not notes:
@@ -141,43 +134,6 @@ def aligned(session: Session, found: Sequence[Alignment]) -> Session:
         zero_s=zero / session.rate_hz if moved else session.zero_s)
 
 
-def warns_of_alignment(note: str) -> bool:
-    """Whether a session's note tells of a track that does not line up with the others now."""
-    return f". {CORRECTS}" in note or note.endswith(LEFT)
-
-
-def alignment_notes(session: Session, m: Measurements, *, polarity: bool = True) -> tuple[str, ...]:
-    """Sentences for a run without correction: tracks that do not line up, and those that are only upside down.
-
-    Costs next to nothing where the arrivals behave: where the voice of each track comes first there and stays so.
-    """
-    suspects = _suspects(session, m)
-    found = find_alignment(session, m, suspects=suspects) if suspects else ()
-    turned = _turned(found)
-    notes = tuple(f"{line}. {CORRECTS}" for a in found if a.offset_s is not None
-                  for line in _said(a, session, a.track in turned, done=False))
-    return notes + (_polarity_notes(session, m, known=turned) if polarity else ())
-
-
-def _polarity_notes(session: Session, m: Measurements, *, known: set[str]) -> tuple[str, ...]:
-    """Sentences on tracks that are upside down, but those that have one already; from what is measured anyway."""
-    heights = heights_of(m.arrivals, m.levels.shape[1])
-    beds = [i for i, track in enumerate(session.tracks) if track.role == "bed"]
-    heights[beds], heights[:, beds] = 0, 0
-    if not (heights < 0).any():
-        return ()
-    reference = _reference(session, [i for i in range(len(session.tracks)) if i not in beds])
-    signs = signs_of(heights, reference=reference)
-    notes = []
-    for i, track in enumerate(session.tracks):
-        if signs[i] != -1 or track.name in known or agreement(heights, signs, i) < SURE_OF_SIGN:
-            continue
-        other = session.tracks[int(heights[i].argmin())].name
-        notes.append(f"{track.name}: upside down against {other} (correlation {heights[i].min():.2f}), so their sum "
-                     f"partly cancels. {CORRECTS}, or polarity = {-track.polarity} for it in session.toml")
-    return tuple(notes)
-
-
 def misaligned(session: Session, found: Alignment) -> bool:
     """Whether the track is off by more than its place in the room explains."""
     if found.offset_s is None or found.drift_ppm is None:
@@ -187,7 +143,7 @@ def misaligned(session: Session, found: Alignment) -> bool:
     return late_s > (LEAST_S if found.way_s is not None else LONGEST_WAY_S) or abs(drifted_s) > LEAST_S
 
 
-def _reference(session: Session, tracks: list[int]) -> int:
+def reference_of(session: Session, tracks: list[int]) -> int:
     """The first track of the file that holds the most of them; of voices before others."""
     files = [parts_of(session.tracks[i]) for i in tracks]
     return max(tracks, key=lambda i: (session.tracks[i].role == "voice", files.count(parts_of(session.tracks[i])), -i))
@@ -272,7 +228,7 @@ def _record(session: Session, i: int, clock: _Clock | None, reference: int) -> A
                      clock.places)
 
 
-def _turned(found: Sequence[Alignment]) -> set[str]:
+def turned_tracks(found: Sequence[Alignment]) -> set[str]:
     """The tracks that are upside down: the fewer ones, and never the reference of two."""
     down = {a.track for a in found if a.polarity == -1}
     up = {a.track for a in found if a.polarity == 1}
@@ -290,8 +246,8 @@ def _moved(track: Track, found: Alignment, session: Session, start_s: float) -> 
     return track, (start_s - found.offset_s) / speed
 
 
-def _said(found: Alignment, session: Session, turned: bool, *, done: bool = True) -> list[str]:
-    """One line on a track that is off or unknown."""
+def said_of(found: Alignment, session: Session, turned: bool, *, done: bool = True) -> list[str]:
+    """One line on a track that is off or unknown, none on another; `done` where it was put right."""
     if found.offset_s is None or found.drift_ppm is None:
         return [f"{found.track}: no sound in common with the other tracks, {LEFT}"]
     parts = []
@@ -308,48 +264,3 @@ def _said(found: Alignment, session: Session, turned: bool, *, done: bool = True
         f", within {LONGEST_WAY_S * 1000:.0f} ms, since only one of the two hears the other")
     return [f"{found.track}: {', '.join(parts)}{against} (confidence {found.confidence:.2f}{unsure})"
             + (", put right" if done else "")]
-
-
-def _suspects(session: Session, m: Measurements) -> list[int]:
-    """Tracks that no chain of well-behaved pairs, or of files, joins to the reference."""
-    tracks = [i for i, track in enumerate(session.tracks) if track.role != "bed"]
-    if len(tracks) < 2:
-        return []
-    joined, grown = {_reference(session, tracks)}, True
-    edges = [pair for p, pair in enumerate(m.arrivals.pairs) if _behaves(m, m.arrivals, p)]
-    files = {i: parts_of(session.tracks[i]) for i in tracks}
-    edges += [(i, k) for i in tracks for k in tracks if i < k and files[i] == files[k]]
-    while grown:
-        more = {j for pair in edges if joined & set(pair) for j in pair}
-        grown = not more <= joined
-        joined |= more
-    return [i for i in tracks if i not in joined]
-
-
-def _behaves(m: Measurements, arrivals: Arrivals, p: int) -> bool:
-    """Whether the voice of either track comes first there, by like ways, early and late in the session."""
-    i, j = arrivals.pairs[p]
-    hop = np.minimum(arrivals.hop, m.hops - 1)
-    level = [level_to_db(m.voice_levels[:, k]) for k in (i, j)]
-    over = [(lv[hop] - np.percentile(lv[:: max(1, len(lv) // 20000)], 95)) for lv in level]
-    ahead = over[0] - over[1]
-    commonest = []
-    for own in (ahead > AHEAD_DB, ahead < -AHEAD_DB):
-        at = np.flatnonzero(own & (np.maximum(over[0], over[1]) > -15))
-        if len(at) < LEAST_ARRIVALS:
-            continue
-        halves = [_commonest(arrivals.lag[part, p]) for part in (at, *np.array_split(at, 2))]
-        if halves[0] is None:
-            continue
-        if halves[1] is None or halves[2] is None or abs(halves[1] - halves[2]) * LAG_S > STEADY_S:
-            return False
-        commonest.append(halves[0])
-    return len(commonest) == 2 and abs(sum(commonest)) / 2 * LAG_S < LEAST_S and commonest[0] < commonest[1]
-
-
-def _commonest(lag: np.ndarray[tuple[int, ...], np.dtype[np.int16]]) -> int | None:
-    """The lag round which the most lie; None where they lie anywhere."""
-    low = int(lag.min(initial=0))
-    counts = np.convolve(np.bincount(lag - low), np.ones(2 * STEADY_LAGS + 1), "same")
-    at = int(counts.argmax())
-    return at + low if counts[at] >= STEADY_SHARE * len(lag) else None

@@ -1,13 +1,12 @@
-"""Opens tracks and yields aligned blocks; the sole user of soundfile and soxr.
+"""Opens audio files and the tracks in them; the sole user of soundfile and soxr.
 
-A `TrackReader` walks one track in *session* time: silence before its offset, the source resampled to the session's
-rate, silence behind its end, so that every reader of a session gives blocks of the same frames. Files are decoded in
-chunks of a fixed size and the resampler sees only those, so the bytes do not depend on how much is read at once.
-Readers on one polyphonic file share its decode; a take split into several files is read as one. Sources are opened for
-reading only.
+`probe` says what a file is, having made sure that it can be read to its end; `pieces` and `preview` look at some places
+of it, `file_blocks` walks it at its own rate. `open_readers` opens all tracks of a session, each a `TrackReader` at the
+session's rate; those on one polyphonic file share its decode, and a take split into several files is read as one.
+Sources are opened for reading only.
 
-Audio is float32, `(frames,)` for one channel or `(frames, channels)`. What is written is the business of `wav`; own
-chunks and truncated files that of `riff`.
+Audio is float32, `(frames,)` for one channel or `(frames, channels)`. How a track is walked in session time is the
+business of `tracks`, what is written that of `wav`, own chunks and truncated files that of `riff`.
 """
 
 from __future__ import annotations
@@ -29,7 +28,6 @@ from leveller.riff import append_chunks, is_little_wav, missing_bytes, read_chun
 from leveller.samples import (
     AudioSource,
     FileFacts,
-    HighPass,
     Part,
     Preview,
     Samples,
@@ -38,13 +36,14 @@ from leveller.samples import (
     parts_of,
     repair,
 )
+from leveller.tracks import TrackReader
 from leveller.units import HOPS_PER_S
 from leveller.wav import FloatSpill, FloatWav, Kind, SampleFile, WavWriter
 
 __all__ = [
     "AudioSource", "FileFacts", "FloatSpill", "FloatWav", "Part", "Preview", "Resampler", "TrackReader", "WavWriter",
     "append_chunks", "clock_rate_hz", "open_readers", "parts_of", "pieces", "preview", "probe", "read_chunks",
-    "spread_starts",
+    "spread_starts", "track_seconds",
 ]
 
 RATES_HZ = (8000, 192000)
@@ -101,6 +100,11 @@ def pieces(path: Path | Sequence[Part], starts: Sequence[int], *, frames: int) -
     """Read some places of a file, each `(frames, channels)`; zeros where a place lies outside the file.
 
     The same array is filled again for each place. The files of a split take (`parts_of(track)`) count as one.
+
+    Raises
+    ------
+    InputError
+        where the file cannot be opened or read there.
     """
     with _open_samples(path) if isinstance(path, Path) else _open_parts(path) as file:
         length = file.frames if isinstance(path, Path) else sum(part.frames for part in path)  # that are taken
@@ -118,6 +122,18 @@ def pieces(path: Path | Sequence[Part], starts: Sequence[int], *, frames: int) -
                                      f"({_detail(error)}). {WAY_OUT}") from error
                 repair(block)
             yield block
+
+
+def track_seconds(track: AudioSource, rate_hz: int, starts_s: Sequence[float]) -> Iterator[Samples]:
+    """Seconds of a track, each of shape=(source_rate_hz, its channels), that begin at session times.
+
+    `rate_hz` is that of the session. Nothing is resampled, so a line of a spectrum is 1 Hz at any rate of the source;
+    edges and errors as of `pieces`.
+    """
+    hz = track.source_rate_hz
+    places = [round((start_s - track.offset_frames / rate_hz) * hz) for start_s in starts_s]
+    for block in pieces(parts_of(track), places, frames=hz):
+        yield block[:, list(track.channels)]
 
 
 def preview(path: Path | Sequence[Part], facts: FileFacts) -> Preview:
@@ -157,95 +173,6 @@ class Resampler:
         return out
 
 
-class TrackReader:
-    """One track in session time; a context manager. Use each reader from one thread at a time.
-
-    Attributes
-    ----------
-    repaired_frames : int
-        frames read so far in which a NaN or Inf was silenced
-    blocks_read : int
-        chunks that its file has decoded so far, for all readers of that file together
-    """
-
-    def __init__(self, track: AudioSource, rate_hz: int, *, decoder: Decoder | None = None, user: int = 0) -> None:
-        self.track = track
-        self.repaired_frames = 0
-        self._decoder = decoder or Decoder(_open_parts(parts_of(track)), track, 1)
-        self._user = user
-        self._resampler = Resampler(clock_rate_hz(track), rate_hz, channels=track.width, quality=READ_QUALITY)
-        self._pick_buffer = np.empty((CHUNK_FRAMES,), np.float32)
-        self._position = 0  # in session frames
-        self._chunk = 0
-        self._piece: Samples = np.empty((0,) if track.width == 1 else (0, 2), np.float32)
-        self._filter = None if track.high_pass_hz is None else HighPass(track.high_pass_hz, rate_hz, track.width)
-
-    def __enter__(self) -> TrackReader:
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.close()
-
-    @property
-    def blocks_read(self) -> int:
-        """Chunks decoded so far by this reader's file."""
-        return self._decoder.blocks_read
-
-    def close(self) -> None:
-        """Leave the file; closing twice does no harm."""
-        self._decoder.leave(self._user)
-
-    def read(self, frames: int, *, out: Samples | None = None) -> Samples:
-        """The next `frames` of session time, `(frames,)` or `(frames, 2)`; zeros outside the track.
-
-        `out` is filled and returned where it is given, else a new array.
-        """
-        shape = (frames,) if self.track.width == 1 else (frames, 2)
-        block = np.empty(shape, np.float32) if out is None else out
-        start = self.track.offset_frames - self._position
-        first = min(max(start, 0), frames)
-        last = min(max(start + self.track.frames, 0), frames)
-        block[:first] = 0
-        self._fill(block[first:last])
-        block[last:] = 0
-        self._position += frames
-        return block
-
-    def _fill(self, block: Samples) -> None:
-        """The next samples of the track itself."""
-        done = 0
-        while done < len(block):
-            if not len(self._piece):
-                if self._chunk == self._decoder.chunk_count:
-                    block[done:] = 0  # the resampler may end a frame early
-                    break
-                self._piece = self._next_piece()
-            part = self._piece[: len(block) - done]
-            block[done : done + len(part)] = part
-            self._piece = self._piece[len(part) :]
-            done += len(part)
-        if self.track.polarity < 0:
-            np.negative(block, out=block)
-        if self._filter is not None and len(block):
-            self._filter.apply(block)
-
-    def _next_piece(self) -> Samples:
-        """One chunk of the source at the session's rate."""
-        chunk, repaired = self._decoder.chunk(self._user, self._chunk)
-        self._chunk += 1
-        channels = self.track.channels
-        if repaired is not None:
-            self.repaired_frames += int(np.count_nonzero(repaired[:, list(channels)].any(axis=1)))
-        if len(channels) == 1:
-            picked = chunk[:, channels[0]]
-        elif self.track.width == 2:
-            picked = chunk[:, list(channels)]
-        else:
-            picked = np.add(chunk[:, channels[0]], chunk[:, channels[1]], out=self._pick_buffer[: len(chunk)])
-            picked *= np.float32(0.5)
-        return self._resampler.push(picked, last=self._chunk == self._decoder.chunk_count)
-
-
 @contextlib.contextmanager
 def open_readers(session: SourceList) -> Iterator[list[TrackReader]]:
     """Readers of all tracks, in session order; those on one file (at one offset) share its decode."""
@@ -257,13 +184,21 @@ def open_readers(session: SourceList) -> Iterator[list[TrackReader]]:
         for (parts, _), tracks in groups.items():
             decoder = Decoder(_open_parts(parts), tracks[0], len(tracks))
             for user, track in enumerate(tracks):
-                reader = TrackReader(track, session.rate_hz, decoder=decoder, user=user)
+                resampler = Resampler(
+                    clock_rate_hz(track), session.rate_hz, channels=track.width, quality=READ_QUALITY)
+                reader = TrackReader(track, session.rate_hz, decoder=decoder, user=user, resampler=resampler)
                 readers[track.name] = stack.enter_context(reader)
         yield [readers[track.name] for track in session.tracks]
 
 
 def file_blocks(path: Path, frames: int, *, length: int | None = None) -> Iterator[Samples]:
-    """A file (its first `length` frames) in blocks, shape=(frames, channels), at its own rate, the last one shorter."""
+    """A file (its first `length` frames) in blocks, shape=(frames, channels), at its own rate, the last one shorter.
+
+    Raises
+    ------
+    InputError
+        where the file cannot be opened, or read any further.
+    """
     with _open(path) as file:
         left = file.frames if length is None else length
         while left > 0:

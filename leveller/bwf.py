@@ -27,6 +27,7 @@ HEAD = struct.Struct("<256s32s32s10s8sQH")  # description, originator, reference
 LOUDNESS = struct.Struct("<5h")  # @412: integrated, range, true peak, momentary, short-term
 LOUDNESS_AT = 412
 VERSION = 2
+ORIGINATOR = b"leveller"
 UNUSED = 0x7FFF  # EBU Tech 3285, version 2
 MOST_HUNDREDTHS = 9999  # values beyond 99.99 either way are not valid (Tech 3285 version 2, from memory)
 CUE = struct.Struct("<II4sIII")  # id, position, chunk, chunk start, block start, frame in the chunk
@@ -69,42 +70,37 @@ def read_bext(path: Path) -> Bext | None:
 def bext_chunk(
     *,
     description: str,
-    originator: str = "leveller",
     time_reference: int | None,
     loudness: Loudness | None = None,
     date: str = "",
     time: str = "",
-    coding_history: str = "",
 ) -> bytes:
     """Payload of a `bext` chunk, version 2.
 
     Parameters
     ----------
-    description, originator : str
-        written in ASCII, cut after 256 and 32 characters
+    description : str
+        written in ASCII, cut after 256 characters
     time_reference : int or None
         frames since midnight at the file's start, at the file's rate; None is written as 0
     loudness : Loudness, optional
         each rounded to a hundredth; what is missing, infinite or beyond 99.99 is marked as unused
     date, time : str
         of the source's `bext` (yyyy-mm-dd, hh:mm:ss); never those of the run
-    coding_history : str
-        lines such as 'A=PCM,F=48000,W=24,M=mono'
 
     Returns
     -------
     bytes
-        602 bytes and the history
+        602 of them, without a coding history
     """
     head = HEAD.pack(
-        ascii_text(description).encode()[:256], ascii_text(originator).encode()[:32], b"",
-        ascii_text(date).encode()[:10], ascii_text(time).encode()[:8], time_reference or 0, VERSION)
+        ascii_text(description).encode()[:256], ORIGINATOR, b"", ascii_text(date).encode()[:10],
+        ascii_text(time).encode()[:8], time_reference or 0, VERSION)
     measured = loudness or Loudness()
     levels = LOUDNESS.pack(*(_hundredths(level) for level in (
         measured.integrated_lufs, measured.range_lu, measured.max_true_peak_dbtp, measured.max_momentary_lufs,
         measured.max_short_term_lufs)))
-    history = "".join(f"{ascii_text(line)}\r\n" for line in coding_history.splitlines()).encode()
-    return (head.ljust(LOUDNESS_AT, b"\0") + levels).ljust(BEXT_BYTES, b"\0") + history
+    return (head.ljust(LOUDNESS_AT, b"\0") + levels).ljust(BEXT_BYTES, b"\0")
 
 
 def cue_chunks(places: Sequence[tuple[int, int, str]]) -> list[tuple[bytes, bytes]]:

@@ -22,14 +22,13 @@ from leveller.attribute import Activity
 from leveller.automation import track_index
 from leveller.errors import AutomationError, nearest
 from leveller.folder import OutputFolder
-from leveller.plan import STATES
+from leveller.plan import OWN, STATES
 from leveller.plan.stretches import stretches
 from leveller.session import Correction, Session
 from leveller.spreadsheet import columns_of, number, read_rows
 from leveller.units import HOPS_PER_S, seconds_to_hops
 
 SPEECH_COLUMNS = ("from_s", "to_s", "track", "state")
-_OWN = STATES.index("own")
 _UNSAID, _AGREED = -1, -2
 
 Grid = npt.NDArray[np.int8]
@@ -105,7 +104,7 @@ def _wanted(path: Path, session: Session, activity: Activity) -> Grid:
     for line, cells in read_rows(path, SPEECH_COLUMNS):
         first, after, track, state = _row(cells, session, hops, f"{path.name}, line {line}")
         part = out[first:after, track]
-        differs = activity.own[first:after, track] != (state == _OWN)
+        differs = activity.own[first:after, track] != (state == OWN)
         part[differs] = state
         part[~differs & (part == _UNSAID)] = _AGREED
     return out

@@ -67,9 +67,9 @@ def fingerprint(
     return hashlib.sha256(json.dumps(parts, default=dataclasses.asdict).encode()).hexdigest()
 
 
-def source_files(sources: Sequence[Path | str], season: Path | None = None) -> list[Path]:
+def source_files(sources: Sequence[Path | str]) -> list[Path]:
     """Every audio file that a session reads, each once."""
-    return list(dict.fromkeys(file.path for file in located(sources, season)[2]))
+    return list(dict.fromkeys(file.path for file in located(sources)[2]))
 
 
 def same_sources(files: Sequence[Path], folder: Path, written: Sequence[Mapping[str, Any]]) -> bool:

@@ -21,7 +21,7 @@ import numpy.typing as npt
 
 from leveller.advice import AIR_MOST_S, advise
 from leveller.align import Alignment as TrackAlignment
-from leveller.align import aligned, alignment_notes, find_alignment
+from leveller.align import aligned, find_alignment
 from leveller.attribute import Activity, attribute
 from leveller.attribute.coupling import LEAST_EVER, NONE_DB
 from leveller.attribute.tone import steady_tone
@@ -35,6 +35,7 @@ from leveller.measure.polarity import heights_of, signs_of
 from leveller.plan.levels import k_power, level_lufs, own_power, own_speech, spoken_alone
 from leveller.quiet import floor_lufs, gaps, pauses, quiet_seconds, room_tone, runs
 from leveller.session import Session, open_session
+from leveller.suspects import alignment_notes
 from leveller.timeline import check_asked, retimed
 from leveller.units import HOP_S, HOPS_PER_S, Bools, db_to_power, frames_to_hops
 
@@ -75,13 +76,12 @@ def inspect(
     InputError, SettingsError
     """
     session = open_session(sources, align=align, **opening)
-    align = session.align
-    check_asked(session, (), align=align)
+    check_asked(session)
     measurements = measure(session, on_progress=on_progress)
     found: tuple[TrackAlignment, ...] = ()
-    if align:
+    if session.align:
         found = find_alignment(session, measurements)
-        as_opened, session = session, retimed(session, aligned(session, found), align=True)
+        as_opened, session = session, retimed(session, aligned(session, found))
         if session.tracks != as_opened.tracks:
             measurements = measure(session, on_progress=on_progress)
     else:

@@ -35,7 +35,8 @@ from leveller.session import Session
 MEASUREMENTS_FILE = ".measurements.npz"
 ROWS_FILE = ".automation.npz"
 END_BYTES = 1 << 20
-_MEASURING = ("measure/*.py", "audio.py", "decoder.py", "samples.py", "lanes.py", "units.py")  # shape the numbers
+_MEASURING = (  # what shapes the numbers
+    "measure/*.py", "audio.py", "decoder.py", "lanes.py", "samples.py", "tracks.py", "units.py", "wav.py")
 _DAMAGE = (OSError, EOFError, ValueError, KeyError, TypeError, IndexError, zipfile.BadZipFile, zlib.error,
            NotImplementedError, RuntimeError)
 

@@ -41,7 +41,6 @@ MOSTLY = 0.5  # of a candidate, so that another microphone counts as muted
 BRIGHT_DB = 3.0  # high bands over low ones: a voice under a voice fills the low ones
 SETTLED_HOPS = 30  # a doubt looks that far; round what the editor decided nothing is asked again
 
-Grid = npt.NDArray[np.float32]
 Row = npt.NDArray[np.float32]
 
 

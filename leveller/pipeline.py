@@ -12,37 +12,32 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from leveller.align import aligned, alignment_notes, find_alignment
+from leveller.align import aligned, find_alignment
 from leveller.attribute import Activity, attribute
-from leveller.audio import parts_of
 from leveller.automation import NO_ROWS, read_automation, row_keys, write_automation
 from leveller.cut import Finished, deliver_cut, open_cut
-from leveller.edits import differences, is_speech_table, keep_file, with_speech_table, without_effect
-from leveller.errors import SettingsError
-from leveller.fingerprint import digests_of, fingerprint
+from leveller.edits import differences, keep_file, without_effect
+from leveller.fingerprint import digests_of
 from leveller.folder import OutputFolder
 from leveller.kept import MEASUREMENTS_FILE, ROWS_FILE, keep_measurements, keep_rows, kept_measurements, kept_rows
 from leveller.lanes import second_thread
 from leveller.listen import Place, places_to_hear
 from leveller.marks import mark_files
 from leveller.measure import Measurements, OnProgress, measure, no_progress
-from leveller.names import safe_name
 from leveller.plan import GainPlan, make_plan
-from leveller.plan.corrections import check_corrections, overruled
+from leveller.plan.corrections import overruled
 from leveller.render.mix import LEVELS, Mix, render
 from leveller.report.finished import write_finished
-from leveller.report.page import write_page
+from leveller.report.session_page import write_page
 from leveller.report.tables import write_tables
 from leveller.report.text import summary_blocks
-from leveller.session import Session, open_session
-from leveller.timeline import check_asked, check_table, retimed
+from leveller.request import Request, cut_folder, default_out, output_folder, source_paths
+from leveller.session import Session
+from leveller.suspects import alignment_notes
+from leveller.timeline import check_table, retimed
 from leveller.units import frames_to_hops
 
 __all__ = ["Finished", "Result", "finish", "process", "render_again"]
-
-DEFAULT_OUT = Path("levelled")
-KEPT_BYTES = 40 + 28  # of measurements, a hop and track, and of the levels that lie in a file meanwhile
-MARGIN_BYTES = 64 << 20  # tables, page and what else is small
 
 
 @dataclass(frozen=True)
@@ -118,17 +113,16 @@ def process(
     LevellerError
         With one line that says what, where and the way out; nothing is written then.
     """
-    session = _opened(sources, delivery, stems, settings, accept_short, align, corrections, season)
-    mark, align = _mark(sources, delivery, stems, settings, accept_short, align, corrections, season), session.align
-    folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session, stems),
-                          sources=source_paths(session))
+    asked = Request(sources, delivery, stems, settings, corrections, accept_short, align, season)
+    session, mark = asked.opened(), asked.fingerprint()
+    folder = output_folder(session, out, replace=replace, stems=stems)
     with folder, second_thread() as second:
-        session, measurements = _measured([folder.path], session, align, on_progress, folder.work)
-        beside = _begun(second, session, measurements, align)
+        session, measurements = _measured([folder.path], session, on_progress, folder.work)
+        beside = _begun(second, session, measurements)
         keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
         activity = attribute(measurements, session)
         measurements = measurements.without_bands()
-        session = _with_table(session, activity, corrections, align)
+        session = asked.with_speech_table(session, activity)
         plan = make_plan(measurements, activity, session)
         result = _delivered(folder, session, measurements, activity, plan, stems, mark, beside, on_progress)
         if corrections is not None:
@@ -175,32 +169,31 @@ def render_again(
         `AutomationError` for a row that cannot be rendered, with file and line.
     """
     automation = Path(automation)
-    session = _opened(sources, delivery, stems, settings, accept_short, align, corrections, tables=[automation])
-    align = session.align
-    folder = OutputFolder(_out(out, session), replace, needed_bytes=_needed_bytes(session, stems),
-                          sources=source_paths(session))
-    homes = dict.fromkeys((automation.parent, folder.path, _out(None, session)))
+    asked = Request(sources, delivery, stems, settings, corrections, accept_short, align)
+    session = asked.opened(tables=[automation])
+    folder = output_folder(session, out, replace=replace, stems=stems)
+    homes = dict.fromkeys((automation.parent, folder.path, default_out(session)))
     measurements = None
-    if align:  # the rows of the file belong to the session as it was lined up
-        session, measurements = _measured(homes, session, align, on_progress, None)
-        check_table(automation, session, align=align)
+    if session.align:  # the rows of the file belong to the session as it was lined up
+        session, measurements = _measured(homes, session, on_progress, None)
+        check_table(automation, session)
     hops = frames_to_hops(session.frames, session.rate_hz)
     written = next((rows for home in homes if (rows := kept_rows(home, session, hops)) is not None), None)
     read = read_automation(automation, session, hops=hops, written=NO_ROWS if written is None else written)
     with folder, second_thread() as second:
         if measurements is None:
-            session, measurements = _measured(homes, session, align, on_progress, folder.work)
-        beside = _begun(second, session, measurements, align)
+            session, measurements = _measured(homes, session, on_progress, folder.work)
+        beside = _begun(second, session, measurements)
         keep_measurements(folder.file(MEASUREMENTS_FILE), measurements, session)
         activity = attribute(measurements, session)
         measurements = measurements.without_bands()
-        session = _with_table(session, activity, corrections, align)
+        session = asked.with_speech_table(session, activity)
         if written is None:
             planned = make_plan(measurements, activity, session)
             read = read_automation(automation, session, hops=hops, written=row_keys(planned))
         notes = (*differences(automation.parent, session), *without_effect(settings, corrections), *read.notes)
         session = dataclasses.replace(session, notes=(*session.notes, *notes))
-        mark = "" if notes else _mark(sources, delivery, stems, settings, accept_short, align, corrections)
+        mark = "" if notes else asked.fingerprint()
         result = _delivered(folder, session, measurements, activity, read.plan, stems, mark, beside, on_progress)
         keep_file(folder, automation)
     return result
@@ -241,36 +234,15 @@ def finish(
     """
     given = [paths] if isinstance(paths, str | Path) else paths
     session = open_cut([Path(path) for path in given], delivery=delivery, settings=settings, accept_short=accept_short)
-    wanted = Path(out) if out is not None else DEFAULT_OUT / f"{safe_name(session.title)} finished"
-    needed = session.frames * session.mix_channels * (4 + 3) + MARGIN_BYTES
-    folder = OutputFolder(wanted, replace, needed_bytes=needed, sources=source_paths(session))
-    with folder:
+    with cut_folder(session, out, replace=replace) as folder:
         finished = dataclasses.replace(deliver_cut(session, folder, on_progress),
                                        digests=digests_of(source_paths(session)))
         write_finished(folder, finished)
     return finished
 
 
-def _opened(
-    sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
-    accept_short: bool, align: bool | None, corrections: Path | None, season: Path | None = None,
-    tables: Sequence[Path] = (),
-) -> Session:
-    """The session, with its options checked."""
-    if stems not in LEVELS:
-        raise SettingsError(f"stems {stems!r}: expected {' or '.join(LEVELS)}")
-    paths = _listed(sources)
-    table = corrections is not None and is_speech_table(Path(corrections))
-    session = open_session(paths, delivery=delivery, assignments=settings, accept_short=accept_short,
-                           corrections=None if table else corrections, season=season, align=align)
-    check_corrections(session)
-    check_asked(session, [*tables, *([Path(corrections)] if corrections is not None and table else [])],
-                align=session.align)
-    return session
-
-
 def _measured(
-    homes: Iterable[Path], session: Session, align: bool, on_progress: OnProgress, work: Path | None
+    homes: Iterable[Path], session: Session, on_progress: OnProgress, work: Path | None
 ) -> tuple[Session, Measurements]:
     """The session and its measurements, kept ones where there are any; its tracks lined up where that is asked for."""
     homes = list(homes)
@@ -280,38 +252,16 @@ def _measured(
         return kept or measure(one, on_progress=on_progress, folder=work)
 
     measurements = measurements_of(session)
-    if not align:
+    if not session.align:
         return session, measurements
-    lined_up = retimed(session, aligned(session, find_alignment(session, measurements)), align=align)
+    lined_up = retimed(session, aligned(session, find_alignment(session, measurements)))
     return lined_up, measurements if lined_up.tracks == session.tracks else measurements_of(lined_up)
 
 
-def _begun(second: Executor, session: Session, measurements: Measurements, align: bool) -> _Beside:
+def _begun(second: Executor, session: Session, measurements: Measurements) -> _Beside:
     """Warnings of tracks that do not line up (unless they were lined up), and the sources' digests, begun."""
-    notes = second.submit(lambda: () if align else alignment_notes(session, measurements))
+    notes = second.submit(lambda: () if session.align else alignment_notes(session, measurements))
     return _Beside(notes, second.submit(digests_of, source_paths(session)))
-
-
-def _listed(sources: Sequence[Path | str] | Path | str) -> list[Path | str]:
-    """One source or several, as a list."""
-    return [sources] if isinstance(sources, str | Path) else list(sources)
-
-
-def _mark(
-    sources: Sequence[Path | str] | Path | str, delivery: str | None, stems: str, settings: Mapping[str, Any] | None,
-    accept_short: bool, align: bool | None, corrections: Path | None, season: Path | None = None,
-) -> str:
-    """The fingerprint of the run, for report.json."""
-    return fingerprint(_listed(sources), delivery=delivery, stems=stems, settings=settings,
-                       corrections=corrections, accept_short=accept_short, align=align, season=season)
-
-
-def _with_table(session: Session, activity: Activity, corrections: Path | None, align: bool) -> Session:
-    """The session with the corrections of an edited speech.csv, where that is what was given."""
-    if corrections is None or not is_speech_table(Path(corrections)):
-        return session
-    check_table(Path(corrections), session, align=align)
-    return with_speech_table(session, activity, Path(corrections))
 
 
 def _delivered(
@@ -331,21 +281,3 @@ def _delivered(
     write_page(folder.file("report.html"), result, places, summary_blocks(report))
     keep_rows(folder.file(ROWS_FILE), plan, session)
     return result
-
-
-def source_paths(session: Session) -> list[Path]:
-    """Every file the session reads."""
-    return [part.path for track in session.tracks for part in parts_of(track)] + [s.path for s in session.set_aside]
-
-
-def _out(out: Path | str | None, session: Session) -> Path:
-    """The output folder asked for, or the default one."""
-    return Path(out) if out is not None else DEFAULT_OUT / safe_name(session.title)
-
-
-def _needed_bytes(session: Session, stems: str) -> int:
-    """Room for float stems, limited ones beside them where those are asked for, the mix, and what is kept."""
-    per_track = 4 if stems == LEVELS[0] else 4 + 3
-    frame_bytes = session.mix_channels * (per_track * len(session.tracks) + 3)
-    kept_bytes = KEPT_BYTES * len(session.tracks) * frames_to_hops(session.frames, session.rate_hz)
-    return session.frames * frame_bytes + kept_bytes + MARGIN_BYTES

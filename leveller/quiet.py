@@ -57,7 +57,17 @@ def floor_lufs(m: Measurements, track: int, quiet: Bools) -> float | None:
 
 
 def room_tone(m: Measurements, track: int, quiet: Bools, floor: float | None) -> tuple[RoomTone, ...]:
-    """The best stretches for patching, best first; empty where no pause lasts long enough."""
+    """The best stretches for patching, best first; empty where no pause lasts long enough.
+
+    Parameters
+    ----------
+    m : Measurements
+    track : int
+    quiet : shape=(hops,)
+        `pauses`
+    floor : float, optional
+        `floor_lufs` of the track; None for one that is silent throughout
+    """
     if floor is None:
         return ()
     lufs = smoothed(level_to_db(m.k_levels[:, track])) + np.float32(OFFSET_LU)

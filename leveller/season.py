@@ -4,8 +4,7 @@
   it (a polyphonic recording); hidden ones, and output folders of leveller's own, are not. A season.toml in it that
   names episodes is the list instead.
 * A TOML list: `[[episode]]` tables beside the show's defaults (`defaults`): `session` (a path, or a list of audio
-  files), `name`, `delivery`, `stems`, `corrections`, `accept_short`, `align`, and a table
-  per stage.
+  files), `name`, `delivery`, `stems`, `corrections`, `accept_short`, `align`, and a table per stage.
 * A CSV list: the same as columns, settings by dotted name (`expander.range_db`); an empty cell says nothing.
 
 Paths in a list count from where the list lies. What a row says is stronger than session.toml. Whether an episode can be

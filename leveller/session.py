@@ -207,7 +207,7 @@ def _folder_title(folder: Path) -> str:
 
 
 def audio_files(folder: Path) -> list[Path]:
-    """The audio files directly in a folder, by name."""
+    """The audio files directly in a folder, by name; raises InputError where it cannot be read."""
     try:
         with os.scandir(folder) as entries:
             names = [folder / entry.name for entry in entries if entry.is_file()]

@@ -34,23 +34,23 @@ def timeline_of(session: Session) -> str:
     return OPENED if session.zero_s is None else f"{ALIGNED}+{session.zero_s:.4f}"
 
 
-def check_asked(session: Session, tables: Sequence[Path], *, align: bool) -> None:
+def check_asked(session: Session, tables: Sequence[Path] = ()) -> None:
     """Refuse early what only an aligned run can place.
 
     Raises
     ------
     InputError, SettingsError, AutomationError
     """
-    if align:
+    if session.align:
         return
     rows: tuple[Skip | Correction, ...] = (*session.skips, *session.corrections)
     for row in rows:
-        _check_said(row, session, align=False)
+        _check_said(row, session)
     for table in tables:
-        check_table(table, session, align=False)
+        check_table(table, session)
 
 
-def check_table(path: Path, session: Session, *, align: bool) -> None:
+def check_table(path: Path, session: Session) -> None:
     """Refuse a speech.csv or automation.csv that was written on another timeline than the session's; as `check_asked`.
 
     Cells left empty in a table that has the column are as the others.
@@ -64,10 +64,10 @@ def check_table(path: Path, session: Session, *, align: bool) -> None:
             raise AutomationError(f"{path.name}: was written before the tracks were lined up, so its times are others. "
                                   "Take that of a run with --align, or leave --align out")
         if one != OPENED:
-            _check_aligned(one, session, path.name, AutomationError, align)
+            _check_aligned(one, session, path.name, AutomationError)
 
 
-def retimed(opened: Session, session: Session, *, align: bool) -> Session:
+def retimed(opened: Session, session: Session) -> Session:
     """A session with its skips and corrections on its own timeline.
 
     Parameters
@@ -75,9 +75,7 @@ def retimed(opened: Session, session: Session, *, align: bool) -> Session:
     opened : Session
         as its files lie
     session : Session
-        the same, lined up or not
-    align : bool
-        whether it was asked for; only the wording depends on it
+        the same, lined up
 
     Raises
     ------
@@ -87,11 +85,11 @@ def retimed(opened: Session, session: Session, *, align: bool) -> Session:
     skips, corrections = [], []
     notes: list[str] = []
     for skip in session.skips:
-        _check_said(skip, session, align=align)
+        _check_said(skip, session)
         by_s = 0.0 if skip.timeline.startswith(ALIGNED) else session.zero_s or 0.0
         skips.append(dataclasses.replace(skip, from_s=skip.from_s + by_s, to_s=skip.to_s + by_s))
     for correction in session.corrections:
-        _check_said(correction, session, align=align)
+        _check_said(correction, session)
         moved = correction if correction.timeline.startswith(ALIGNED) else _moved(correction, opened, session)
         corrections += [] if moved is None else [moved]
         notes += [] if moved else [f"{_where(correction)}: lies before anything sounds once lined up, left out"]
@@ -111,20 +109,20 @@ def _said_in(path: Path) -> set[str]:
     return {cells[0] for _, cells in read_rows(path, (TIMELINE_COLUMN,)) if cells[0]}
 
 
-def _check_said(row: Skip | Correction, session: Session, *, align: bool) -> None:
+def _check_said(row: Skip | Correction, session: Session) -> None:
     """Refuse a row of another timeline, or one that lies behind the end of this one."""
     if row.timeline.startswith(ALIGNED):
         kind: type[LevellerError] = AutomationError if isinstance(row, Correction) else SettingsError
-        _check_aligned(row.timeline, session, _where(row), kind, align)
+        _check_aligned(row.timeline, session, _where(row), kind)
         length_s = session.frames / session.rate_hz
         if row.from_s >= length_s:
             raise kind(f"{_where(row)} lies behind the session's end at {length_s:.3f} s")
 
 
-def _check_aligned(said: str, session: Session, where: str, kind: type[LevellerError], align: bool) -> None:
+def _check_aligned(said: str, session: Session, where: str, kind: type[LevellerError]) -> None:
     """Refuse times of tracks that were lined up where they are not, or not in that way."""
     if session.zero_s is None:
-        way_out = ("no track had to be moved now. Make it again from this session's own report" if align else
+        way_out = ("no track had to be moved now. Make it again from this session's own report" if session.align else
                    "they are not now. Give --align here too")
         raise kind(f"{where}: its times ({said}) are of a session whose tracks --align had lined up; {way_out}")
     zero_s = float(said.partition("+")[2] or session.zero_s)

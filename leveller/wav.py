@@ -189,7 +189,13 @@ class WavWriter:
 
 
 class FloatWav:
-    """A finished 32-bit float WAV file, walked block by block; a block may be put back changed. A context manager."""
+    """A finished 32-bit float WAV file, walked block by block; a block may be put back changed. A context manager.
+
+    Raises
+    ------
+    OutputError
+        where the file cannot be opened, read back or written; it names the file.
+    """
 
     def __init__(self, path: Path, channels: int) -> None:
         self.path = path
@@ -242,7 +248,13 @@ class FloatWav:
 
 
 class FloatSpill:
-    """A temporary file of raw float32 frames: append blocks, then walk them from the start; a context manager."""
+    """A temporary file of raw float32 frames: append blocks, then walk them from the start; a context manager.
+
+    Raises
+    ------
+    OutputError
+        where the file cannot be written, or is shorter than what was appended; it names the file.
+    """
 
     def __init__(self, path: Path, channels: int = 1) -> None:
         self.path, self.channels, self.frames = path, channels, 0

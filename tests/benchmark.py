@@ -52,17 +52,18 @@ for _ in range(24_000):
 """
 STAGES = """
 import sys, time
-from leveller import pipeline
-def timed(name):
-    step = getattr(pipeline, name)
+from leveller import pipeline, request
+def timed(name, home=pipeline):
+    step = getattr(home, name)
     def run(*args, **kwargs):
         wall, cpu = time.perf_counter(), time.process_time()
         out = step(*args, **kwargs)
         print(f"{name:20s} {time.perf_counter() - wall:8.2f} {time.process_time() - cpu:8.2f}")
         return out
-    setattr(pipeline, name, run)
-for name in ("open_session", "measure", "attribute", "make_plan", "render", "write_automation", "write_tables",
-             "write_page", "keep_measurements"):
+    setattr(home, name, run)
+timed("open_session", request)
+for name in ("measure", "attribute", "make_plan", "render", "write_automation", "write_tables", "write_page",
+             "keep_measurements"):
     timed(name)
 print(f"{'stage':20s} {'wall s':>8s} {'CPU s':>8s}")
 pipeline.process(sys.argv[2:], out=sys.argv[1])

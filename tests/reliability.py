@@ -18,11 +18,9 @@ References: SI-SDR: fast-bss-eval. Ripple of two paths of amplitude 1 and a, 20 
 
 from __future__ import annotations
 
-import argparse
 import sys
 import tempfile
 from collections.abc import Iterator, Sequence
-from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -36,15 +34,14 @@ from conditions import (  # noqa: E402
     CONDITIONS,
     OURS,
     REFERENCES,
-    VOICE_SETS,
     Condition,
     build,
     expander_cut_db,
-    named,
     opened,
     without_last,
 )
 from conversations import Conversation  # noqa: E402
+from sweep import Job, sweep, table  # noqa: E402
 
 from leveller.attribute import attribute  # noqa: E402
 from leveller.attribute.decode import sure_of  # noqa: E402
@@ -109,20 +106,6 @@ class Found:
     better_db: dict[str, float]  # SI-SDR, by method, mean over microphones
     si_sdr_db: float  # before
     comb: Comb
-
-
-@dataclass(frozen=True)
-class Job:
-    """One session to judge."""
-
-    condition: int
-    which: int
-    seed: int
-    voices: str
-
-    def run(self) -> tuple[Job, Found]:
-        """All figures of the session."""
-        return self, found_in(CONDITIONS[self.condition], self.which, seed=self.seed, voices=VOICE_SETS[self.voices])
 
 
 def found_in(condition: Condition, which: int, *, seed: int, voices: tuple[str, ...]) -> Found:
@@ -242,13 +225,6 @@ def ripple_db(ratio_db: np.ndarray) -> np.ndarray:
     return 20 * np.log10((1 + a) / (1 - a))
 
 
-def jobs(patterns: Sequence[str], seeds: Sequence[int], voices: Sequence[str]) -> list[Job]:
-    """Every session of the conditions whose name contains one of the patterns."""
-    wanted = [condition for pattern in patterns for condition in named(pattern)]
-    return [Job(i, which, seed, name) for i, condition in enumerate(CONDITIONS) if condition in wanted
-            for which in range(len(condition.specs)) for name in voices for seed in seeds]
-
-
 def by_condition(found: list[tuple[Job, Found]]) -> Iterator[tuple[str, list[Found]]]:
     """Sessions of each condition, then all."""
     for i, condition in enumerate(CONDITIONS):
@@ -256,17 +232,6 @@ def by_condition(found: list[tuple[Job, Found]]) -> Iterator[tuple[str, list[Fou
         if part:
             yield condition.name, part
     yield "all", [f for _, f in found]
-
-
-def table(headings: Sequence[str], rows: Sequence[Sequence[str]]) -> Iterator[str]:
-    """A Markdown table, the first column on the left."""
-    widths = [max(len(row[c]) for row in (headings, *rows)) for c in range(len(headings))]
-    for k, row in enumerate((headings, *rows)):
-        first, *others = (cell.ljust(w) if c == 0 else cell.rjust(w)
-                          for c, (cell, w) in enumerate(zip(row, widths, strict=True)))
-        yield "| " + " | ".join([first, *others]) + " |"
-        if k == 0:
-            yield f"|{'-' * (widths[0] + 2)}|" + "|".join("-" * (w + 1) + ":" for w in widths[1:]) + "|"
 
 
 def share(part: float, whole: float) -> str:
@@ -314,23 +279,5 @@ def report(found: list[tuple[Job, Found]]) -> str:
                 "two open %", "there before dB", "there after dB"), [sound_row(*row) for row in rows])]) + "\n"
 
 
-def main() -> None:
-    parser = argparse.ArgumentParser(description=(__doc__ or "").splitlines()[0])
-    parser.add_argument("--only", nargs="+", default=[""], metavar="WORDS",
-                        help="conditions whose name contains one of these")
-    parser.add_argument("--seeds", type=int, default=3, metavar="N", help="conversations of each kind (default 3)")
-    parser.add_argument("--voices", choices=[*VOICE_SETS, "both"], default="held-out")
-    parser.add_argument("--markdown", type=Path, metavar="FILE", help="write the tables there, too")
-    parser.add_argument("--jobs", type=int, default=2, metavar="N", help="processes (default 2)")
-    args = parser.parse_args()
-    voices = list(VOICE_SETS) if args.voices == "both" else [args.voices]
-    todo = jobs(args.only, range(FIRST_SEED, FIRST_SEED + args.seeds), voices)
-    with ProcessPoolExecutor(args.jobs) as pool:
-        text = report(list(pool.map(Job.run, todo)))
-    print(f"{len(todo)} sessions.\n\n{text}", end="")
-    if args.markdown:
-        args.markdown.write_text(text, encoding="utf-8")
-
-
 if __name__ == "__main__":
-    main()
+    sweep(__doc__ or "", found_in, report, first_seed=FIRST_SEED)

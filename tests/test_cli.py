@@ -20,7 +20,7 @@ import leveller
 from leveller import cli
 
 DEMO = Path(__file__).parents[1] / "demo_session"
-HELP_CPU_S = 0.3  # the issue: over the bare interpreter
+HELP_CPU_S = 0.3  # what we promise: over the bare interpreter
 
 
 @pytest.fixture(scope="module")

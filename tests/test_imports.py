@@ -17,10 +17,10 @@ import leveller
 PACKAGE = Path(leveller.__file__).parent
 ORDER = (  # the design: each room may import those before it (and its own modules), never those after it
     "errors", "units", "names", "riff", "samples", "wav", "settings", "spreadsheet", "folder", "desk", "interruptions",
-    "lanes", "recursion", "decoder", "bwf", "ixml", "audio", "sessionfile", "defaults", "takes", "drafts",
-    "duplicates", "session", "season", "fingerprint", "measure", "align", "timeline", "attribute", "plan", "doubt",
-    "automation", "edits", "kept", "listen", "render", "marks", "cut", "spots", "findings", "advice", "quiet",
-    "inspection", "report", "reading", "pipeline", "worker", "workers", "cluster", "batch", "console", "cli",
+    "lanes", "recursion", "decoder", "tracks", "bwf", "ixml", "audio", "sessionfile", "defaults", "takes", "drafts",
+    "duplicates", "session", "season", "fingerprint", "measure", "align", "suspects", "timeline", "attribute", "plan",
+    "doubt", "automation", "edits", "kept", "listen", "render", "marks", "cut", "spots", "findings", "advice", "quiet",
+    "inspection", "report", "reading", "request", "pipeline", "worker", "workers", "cluster", "batch", "console", "cli",
     "__main__")
 OWNERS = {  # outside library: the modules that may import it
     "soundfile": {"audio"}, "soxr": {"audio"}, "webrtcvad": {"measure.voice"}, "rich": {"console"}, "typer": {"cli"}}

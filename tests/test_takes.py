@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
+import dataclasses
 import itertools
 import struct
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -13,6 +13,7 @@ import pytest
 import soundfile
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
+from sources import read_all, source
 
 from leveller import audio
 from leveller.decoder import CHUNK_FRAMES
@@ -243,35 +244,15 @@ def test_split_take_equals_the_whole_file(
         files.append(audio.Part(tmp_path / f"p{number}.wav", int(end - start)))
         soundfile.write(files[-1].path, x[start:end], RATE_HZ, "PCM_24")
     soundfile.write(tmp_path / "whole.wav", x, RATE_HZ, "PCM_24")
-    frames = round(len(x) * rate_hz / RATE_HZ)
-    one = Split("one", tmp_path / "whole.wav", frames, len(x))
-    many = Split("many", files[0].path, frames, len(x), tuple(files))
-    with audio.TrackReader(one, rate_hz) as reader:
-        expected = reader.read(frames + 100)
-    with audio.TrackReader(many, rate_hz) as reader:
-        got = np.concatenate([reader.read(size) for size in [*cuts, frames + 100]])[: frames + 100]
+    one = source(tmp_path / "whole.wav", rate_hz=rate_hz)
+    frames = one.frames
+    many = dataclasses.replace(one, path=files[0].path, parts=tuple(files))
+    expected = read_all(one, [frames + 100], rate_hz)
+    got = read_all(many, [*cuts, frames + 100], rate_hz)[: frames + 100]
     assert got.tobytes() == expected.tobytes()
     starts = [-50, 0, *(int(edge) - 20 for edge in edges), 5, len(x)]
     for a, b in zip(audio.pieces(one.path, starts, frames=64), audio.pieces(files, starts, frames=64), strict=True):
         assert a.tobytes() == b.tobytes()
-
-
-@dataclass(frozen=True)
-class Split:
-    """A track of several files as far as a reader asks."""
-
-    name: str
-    path: Path
-    frames: int
-    source_frames: int
-    parts: tuple[audio.Part, ...] = ()
-    channels: tuple[int, ...] = (0,)
-    width: int = 1
-    offset_frames: int = 0
-    source_rate_hz: int = RATE_HZ
-    is_float: bool = False
-    polarity: int = 1
-    high_pass_hz: float | None = None
 
 
 def test_split_polyphonic_take_is_decoded_once(tmp_path: Path) -> None:

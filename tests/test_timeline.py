@@ -21,7 +21,6 @@ from leveller.timeline import retimed
 
 RATE_HZ = 16_000
 EARLY_S = 5.0  # guest's recorder was started so much before host's
-ZERO_BAND_S = 0.002  # as found: the band of tests/test_align.py, twice
 ALIGNED = r"aligned\+(4\.99[89]\d|5\.00[01]\d)"
 BY_DB = -30.0
 
@@ -220,7 +219,7 @@ def test_a_correction_follows_the_clock_of_its_track(tmp_path: Path) -> None:
         corrections=tuple(Correction(name, 3000.0, 3001.0, "own", None, "opened") for name in ("first", "second")))
     second = dataclasses.replace(opened.tracks[1], offset_frames=2 * RATE_HZ, clock_ppm=300.0)
     lined_up = dataclasses.replace(opened, tracks=(opened.tracks[0], second), zero_s=0.0)
-    placed = retimed(opened, lined_up, align=True)
+    placed = retimed(opened, lined_up)
     assert placed.skips[0].from_s == placed.corrections[0].from_s == 3000.0
     assert placed.corrections[1].from_s == pytest.approx(2 + 3000 / 1.0003)
     assert placed.corrections[1].to_s == pytest.approx(2 + 3001 / 1.0003)
@@ -229,6 +228,6 @@ def test_a_correction_follows_the_clock_of_its_track(tmp_path: Path) -> None:
     later = dataclasses.replace(opened, tracks=(opened.tracks[0], late))
     before = dataclasses.replace(later, corrections=(Correction("second", 0.5, 1.5, "own", None, "opened"),))
     gone = dataclasses.replace(before, tracks=opened.tracks, zero_s=0.0)
-    placed = retimed(before, gone, align=True)
+    placed = retimed(before, gone)
     assert placed.corrections == ()
     assert "correction of second, from_s = 0.5: lies before anything sounds once lined up, left out" in placed.notes

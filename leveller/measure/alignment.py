@@ -20,7 +20,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import parts_of, pieces
+from leveller.audio import track_seconds
 from leveller.session import Session, Track
 
 BAND_HZ = (100, 4000)
@@ -96,11 +96,9 @@ def _direct(height: Matrix) -> int:
 
 def _spectra(track: Track, rate_hz: int, starts_s: Sequence[float]) -> npt.NDArray[np.complex64]:
     """Spectra of 1 s windows in `BAND_HZ`, as the session takes the track (its polarity turned where it says so)."""
-    source_hz = track.source_rate_hz
-    places = [round((at - track.offset_frames / rate_hz) * source_hz) for at in starts_s]
-    window = (np.hanning(source_hz + 1)[:-1] * track.polarity).astype(np.float32)
-    out = np.zeros((len(places), BAND_HZ[1] - BAND_HZ[0]), np.complex64)
-    for row, block in enumerate(pieces(parts_of(track), places, frames=source_hz)):
-        lines = np.fft.rfft(block[:, list(track.channels)].mean(axis=1) * window)[slice(*BAND_HZ)]
+    window = (np.hanning(track.source_rate_hz + 1)[:-1] * track.polarity).astype(np.float32)
+    out = np.zeros((len(starts_s), BAND_HZ[1] - BAND_HZ[0]), np.complex64)
+    for row, second in enumerate(track_seconds(track, rate_hz, starts_s)):
+        lines = np.fft.rfft(second.mean(axis=1) * window)[slice(*BAND_HZ)]
         out[row, : len(lines)] = lines
     return out

@@ -41,6 +41,7 @@ SIDE_LOBES_S, SIDE_LOBE = 0.00035, 1 / 3
 CLEAR = 0.075  # height of a peak that counts; without a common sound few reach it (measured, see tests)
 LOUD_WITHIN_DB = 20.0
 OWN_DB, AHEAD_DB = -12.0, 1.5  # own speech against the track's loud hops, and against the other track
+NO_LEVEL_DB = -200.0  # where there is no hop, or nobody else: softer than any sound
 NEAR_S = 0.0008  # from the line: people move their heads
 STEEPEST = 500e-6
 WORTH_A_SLOPE = 1.15  # a drift must explain so much more than none
@@ -112,12 +113,12 @@ class Heard:
     def loud_db(self) -> float:
         """The middle of the hops that are near the loudest, however little is said."""
         near = self.level_db[self.level_db > np.percentile(self.level_db, 99.5) - LOUD_WITHIN_DB]
-        return float(np.median(near)) if len(near) else -200.0
+        return float(np.median(near)) if len(near) else NO_LEVEL_DB
 
     def over_db(self, at_s: float) -> float:
         """The loudest hop of a place that begins at a time of its own, against the loud hops of the track."""
         begin = max(round(at_s * HOPS_PER_S), 0)
-        return float(self.level_db[begin : begin + round(PLACE_S * HOPS_PER_S)].max(initial=-200.0)) - self.loud_db
+        return float(self.level_db[begin : begin + round(PLACE_S * HOPS_PER_S)].max(initial=NO_LEVEL_DB)) - self.loud_db
 
     def own_time(self, other: Heard, at_s: float) -> float:
         """The time here when it is at_s at another one."""
@@ -282,7 +283,7 @@ def _read(
 def _side(first: Heard, second: Heard, others: Sequence[Heard], at_s: float, line: Line) -> int:
     """Whose own voice a place holds: +1 or -1, 0 for neither's."""
     over = first.over_db(at_s), second.over_db(at_s + line.offset_hops * HOP_S + line.drift * at_s)
-    rival = max((other.over_db(other.own_time(first, at_s)) for other in others), default=-200.0)
+    rival = max((other.over_db(other.own_time(first, at_s)) for other in others), default=NO_LEVEL_DB)
     if max(over) < max(OWN_DB, rival) or abs(over[0] - over[1]) < AHEAD_DB:
         return 0
     return 1 if over[0] > over[1] else -1

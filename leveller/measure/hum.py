@@ -17,7 +17,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from leveller.audio import AudioSource, parts_of, pieces
+from leveller.audio import AudioSource, track_seconds
 from leveller.units import power_to_db
 
 MAINS_HZ = (50, 60)
@@ -57,12 +57,11 @@ def read_hum(track: AudioSource, rate_hz: int, starts_s: Sequence[float]) -> Hum
         where the file has become unreadable.
     """
     source_hz = track.source_rate_hz
-    places = [round((at - track.offset_frames / rate_hz) * source_hz) for at in sorted(starts_s)]
     window = np.hanning(source_hz + 1)[:-1]
     scale = 2.0 / (source_hz * float(np.sum(window**2)))
     powers = []
-    for block in pieces(parts_of(track), places, frames=source_hz):
-        one = block[:, list(track.channels)].mean(axis=1, dtype=np.float64)
+    for second in track_seconds(track, rate_hz, sorted(starts_s)):
+        one = second.mean(axis=1, dtype=np.float64)
         lines = np.fft.rfft((one - one.mean()) * window)[: HIGHEST_HZ + 2 * AROUND_HZ]
         powers.append((lines.real**2 + lines.imag**2) * scale)
     return hum_in(np.median(powers, axis=0)) if len(powers) >= LEAST_PIECES else None

@@ -29,6 +29,8 @@ MOST_DRIFT = 400e-6  # cheap quartz stays within 100 ppm; common practice, no so
 GROUPS = 4
 RISE_HOPS = 2
 MOST_RISE_DB = 12.0
+FLOOR_PERCENTILE = 10
+PERCENTILE_HOPS = 20_000  # of as many at least, where there are so many, it is taken
 OVER_FLOOR_DB = 4.0
 CLAP_DB = 8.0  # the least rise of all bands that makes a clap
 CLAP_WEIGHT = 3.0
@@ -60,7 +62,8 @@ def onsets(levels: Levels) -> Onsets:
     out = np.zeros((len(db), GROUPS + 1), np.float32)
     if np.count_nonzero(heard) < HOPS_PER_S:
         return out
-    floor = np.percentile(db[heard][:: max(1, np.count_nonzero(heard) // 20000)], 10, axis=0) + OVER_FLOOR_DB
+    thinned = db[heard][:: max(1, np.count_nonzero(heard) // PERCENTILE_HOPS)]
+    floor = np.percentile(thinned, FLOOR_PERCENTILE, axis=0) + OVER_FLOOR_DB
     np.maximum(db, floor.astype(np.float32), out=db)
     rise = np.zeros_like(db)
     rise[RISE_HOPS:] = db[RISE_HOPS:] - db[:-RISE_HOPS]
@@ -71,13 +74,13 @@ def onsets(levels: Levels) -> Onsets:
     return out
 
 
-def common_line(first: Onsets, second: Onsets, *, reach: int = REACH_HOPS) -> Line:
+def common_line(first: Onsets, second: Onsets) -> Line:
     """The line of offset and drift on which two tracks share the most onsets.
 
     Its score is 0 where a track is silent; below `ENOUGH_SCORE` it is chance.
     """
     hops = min(len(first), len(second))
-    reach = min(reach, max(hops - STRETCH_HOPS // 8, 1))
+    reach = min(REACH_HOPS, max(hops - STRETCH_HOPS // 8, 1))
     starts = list(range(0, max(hops - STRETCH_HOPS // 2, 1), STRETCH_HOPS))
     evidence = np.stack([_evidence(first, second, start, reach) for start in starts])
     middles = np.array([(start + min(start + STRETCH_HOPS, hops)) / 2 for start in starts])

@@ -33,7 +33,7 @@ def as_columns(block: npt.NDArray[Any], channels: int) -> npt.NDArray[Any]:
 class Pieces:
     """Fixed-length pieces of a stream, with context on both sides."""
 
-    def __init__(self, frames: int, channels: int, *, before: int = 0, after: int = 0) -> None:
+    def __init__(self, frames: int, channels: int, *, before: int, after: int = 0) -> None:
         self.frames = frames
         self.channels = channels
         self._before = before

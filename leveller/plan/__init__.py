@@ -20,7 +20,7 @@ from leveller.attribute import Activity
 from leveller.measure import Measurements
 from leveller.measure.levels import level_to_db
 from leveller.plan.compressor import compressor_nodes_db
-from leveller.plan.corrections import corrected_curve, overruled, spliced
+from leveller.plan.corrections import EXPANDER, TRIM, corrected_curve, overruled, spliced
 from leveller.plan.expander import auto_range_db, expander_nodes_db, opened
 from leveller.plan.levels import level_lufs, own_power, own_speech, spoken_alone
 from leveller.plan.ride import ride_nodes_db
@@ -34,6 +34,7 @@ TOLERANCE_DB = 0.1
 MOST_ROWS = 1_000_000
 GAIN_LIMITS_DB = (-120.0, 40.0)
 STATES = ("silence", "bleed", "own")
+SILENCE, BLEED, OWN = range(len(STATES))
 CAUSES = ("hold", "trim", "opening", "closing", "ride", "compressor", "edit")
 
 Nodes = npt.NDArray[np.float32]
@@ -59,6 +60,11 @@ class GainPlan:
     range_db: tuple[float, ...]  # of each track's expander; 0 where there is none
 
 
+def states_of(own: Bools, bleed: Bools) -> npt.NDArray[np.int8]:
+    """Index into `STATES` of each hop, of the shape of both."""
+    return np.where(own, OWN, np.where(bleed, BLEED, SILENCE)).astype(np.int8)
+
+
 def make_plan(m: Measurements, activity: Activity, session: Session) -> GainPlan:
     """Decide the gain of every track."""
     counted, alone = own_speech(activity), spoken_alone(activity)
@@ -81,7 +87,7 @@ def make_plan(m: Measurements, activity: Activity, session: Session) -> GainPlan
             parts = _voice_parts(m, activity, session, i, heard, trims[i], ranges[i])
         else:
             parts = np.zeros((m.hops + 1, len(PARTS)), np.float32)
-        parts[:, 0] += session.tracks[i].trim_db
+        parts[:, TRIM] += session.tracks[i].trim_db
         return parts, corrected_curve(parts, i, activity.own, open_, session, range_db=ranges[i])
 
     return GainPlan(m.hops, _thinned(curves_of, len(session.tracks), overruled(activity, session)), tuple(ranges))
@@ -155,9 +161,9 @@ def _track_gain(
     """Rounded rows of one track with state and cause."""
     parts = np.rint(curve[rows].astype(np.float64) * 100).astype(np.int32)
     low, high = (round(100 * limit) for limit in GAIN_LIMITS_DB)
-    parts[:, 0] += np.clip(parts.sum(axis=1), low, high) - parts.sum(axis=1)
+    parts[:, TRIM] += np.clip(parts.sum(axis=1), low, high) - parts.sum(axis=1)
     hop = np.minimum(rows, len(activity.own) - 1)
-    state = np.where(activity.own[hop, track], 2, np.where(activity.bleed[hop, track], 1, 0)).astype(np.int8)
+    state = states_of(activity.own[hop, track], activity.bleed[hop, track])
     causes = _causes(parts)
     causes[touched & (causes != CAUSES.index("hold"))] = CAUSES.index("edit")
     return TrackGain(rows, parts, parts.sum(axis=1, dtype=np.int32), state, causes)
@@ -168,6 +174,6 @@ def _causes(parts: npt.NDArray[np.int32]) -> npt.NDArray[np.int8]:
     moves = np.diff(parts, axis=0, append=parts[-1:])
     most = np.abs(moves).argmax(axis=1)
     named = np.array([CAUSES.index(c) for c in ("trim", "opening", "ride", "compressor")], np.int8)[most]
-    named[(most == 1) & (moves[:, 1] < 0)] = CAUSES.index("closing")
+    named[(most == EXPANDER) & (moves[:, EXPANDER] < 0)] = CAUSES.index("closing")
     named[~moves.any(axis=1)] = CAUSES.index("hold")
     return np.asarray(named)

@@ -14,7 +14,7 @@ from __future__ import annotations
 
 import dataclasses
 import itertools
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 
 import numpy as np
 import numpy.typing as npt
@@ -62,18 +62,16 @@ def overruled(activity: Activity, session: Session) -> Activity:
 def closed_by_hand(session: Session, track: int, hops: int) -> Bools:
     """Hops that the editor has decided to be bleed or silence, shape=(hops,)."""
     out = np.zeros(hops, np.bool_)
-    for correction in session.corrections:
-        if correction.decide is not None and _index(correction, session) == track:
-            out[_hops_of(correction)] = correction.decide != "own"
+    for place, word in _decisions(session, track):
+        out[place] = word != "own"
     return out
 
 
 def decided_by_hand(session: Session, track: int, hops: int) -> Bools:
     """Hops that the editor has decided, whichever way, shape=(hops,)."""
     out = np.zeros(hops, np.bool_)
-    for correction in session.corrections:
-        if correction.decide is not None and _index(correction, session) == track:
-            out[_hops_of(correction)] = True
+    for place, _ in _decisions(session, track):
+        out[place] = True
     return out
 
 
@@ -109,9 +107,8 @@ def corrected_curve(
 def _own_of(session: Session, track: int, own: Bools) -> Bools:
     """The own voice of one track with the editor's decisions, shape=(hops,)."""
     out = own.copy()
-    for correction in session.corrections:
-        if correction.decide is not None and _index(correction, session) == track:
-            out[_hops_of(correction)] = correction.decide == "own"
+    for place, word in _decisions(session, track):
+        out[place] = word == "own"
     return out
 
 
@@ -242,6 +239,13 @@ def _ramped(depth_db: Nodes, attack: int, release: int) -> Nodes:
         opening = (right - here) * np.maximum(0, 1 - edge[::-1] / attack)
         np.maximum(out[first : after + 1], here + np.maximum(closing, opening), out=out[first : after + 1])
     return out
+
+
+def _decisions(session: Session, track: int) -> Iterator[tuple[slice, str]]:
+    """Hops and word of each decision about a track, in order: the later counts."""
+    for correction in session.corrections:
+        if correction.decide is not None and _index(correction, session) == track:
+            yield _hops_of(correction), correction.decide
 
 
 def _hops_of(correction: Correction) -> slice:

@@ -28,8 +28,7 @@ EARLY_S = 0.6  # a breath takes 0.25 to 0.45 s and ends just before the first wo
 SHORT_GAP_S = 0.4  # closing and opening take 0.24 s
 CLEAN_DB = 24.0
 AUTO_RANGE_DB = (6.0, 18.0)
-LONE_RANGE_DB = 6.0  # with one microphone there is only noise to turn down
-LONE_PAUSE_S = 1.0  # ... and only in longer pauses
+LONE_PAUSE_S = 1.0  # with one microphone there is only noise to turn down, and only in longer pauses
 DOUBT_QUANTILE = 0.75
 
 Nodes = npt.NDArray[np.float32]  # (hops + 1,) dB at hop edges

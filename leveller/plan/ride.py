@@ -19,6 +19,7 @@ from leveller.units import HOPS_PER_S, Bools
 CELL_S = 0.25
 STRENGTH = 0.65
 PRIOR_CELLS = 2.0  # as much as half a second of speech at the usual level
+LOUDEST_DB = 6.0  # the louder a piece the more it counts, up to so much over where the voice shall lie
 UNUSUAL_DB = 9.0  # pieces further from the moment's level are laughter or whispers
 
 Grid = npt.NDArray[np.float32]
@@ -66,7 +67,7 @@ def _smoothed(level: Grid, weight: Grid, window_s: float) -> Grid:
     kernel = np.exp(-0.5 * (np.arange(-reach, reach + 1) / sigma) ** 2)
     usual: npt.NDArray[np.float64] = np.full(len(level), float(np.average(level, weights=weight)))
     for _ in range(2):
-        heard = weight * (np.abs(level - usual) < UNUSUAL_DB) * 10 ** (np.minimum(level, 6) / 20)
+        heard = weight * (np.abs(level - usual) < UNUSUAL_DB) * 10 ** (np.minimum(level, LOUDEST_DB) / 20)
         top = np.convolve(level * heard, kernel, "full")[reach : reach + len(level)]
         bottom = np.convolve(heard, kernel, "full")[reach : reach + len(level)]
         usual = top / (bottom + PRIOR_CELLS)
@@ -76,13 +77,17 @@ def _smoothed(level: Grid, weight: Grid, window_s: float) -> Grid:
 
 def _within_rate(wanted: Grid, step_db: float) -> Grid:
     """The curve nearest to the wanted one whose steps stay within bounds: mean of its upper and lower envelope."""
-    upper, lower = wanted.astype(np.float64), wanted.astype(np.float64)
-    ramp = np.arange(len(wanted)) * step_db
-    upper = np.maximum(np.maximum.accumulate(upper + ramp) - ramp,
-                       (np.maximum.accumulate((upper + ramp[::-1])[::-1])[::-1]) - ramp[::-1])
-    lower = np.minimum(np.minimum.accumulate(lower - ramp) + ramp,
-                       (np.minimum.accumulate((lower - ramp[::-1])[::-1])[::-1]) + ramp[::-1])
-    return np.asarray((upper + lower) / 2, np.float32)
+    values = wanted.astype(np.float64)
+    return np.asarray((_upper_envelope(values, step_db) - _upper_envelope(-values, step_db)) / 2, np.float32)
+
+
+def _upper_envelope(values: npt.NDArray[np.float64], step: float) -> npt.NDArray[np.float64]:
+    """The lowest curve that is nowhere under the values and whose steps stay within bounds either way."""
+    rise = np.arange(len(values)) * step
+    fall = rise[::-1]
+    from_left = np.maximum.accumulate(values + rise) - rise
+    from_right = np.maximum.accumulate((values + fall)[::-1])[::-1] - fall
+    return np.asarray(np.maximum(from_left, from_right))
 
 
 def _standing(curve: npt.NDArray[np.floating], still: Bools, rate_db_s: float) -> npt.NDArray[np.floating]:

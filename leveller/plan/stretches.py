@@ -1,4 +1,8 @@
-"""Stretches of hops: [from, to) pairs out of a row of flags, and back."""
+"""Stretches of hops: out of a row of flags, and back.
+
+A stretch is a first hop and the hop after the last one; a row of flags, one a hop, is the same said the other way. What
+lasts too short to count is filled or dropped in flags, what reaches further is widened in stretches.
+"""
 
 from __future__ import annotations
 

@@ -13,7 +13,6 @@ import numpy as np
 import numpy.typing as npt
 
 from leveller.advice import DC_DBFS
-from leveller.align import warns_of_alignment
 from leveller.measure.peaks import PeakReading
 from leveller.plan import CAUSES, PARTS, TrackGain
 from leveller.plan.corrections import offset_nodes_db
@@ -21,6 +20,7 @@ from leveller.plan.levels import k_power, level_lufs
 from leveller.plan.stretches import stretches
 from leveller.report.quantities import shown
 from leveller.report.records import Fault, Report
+from leveller.suspects import warns_of_alignment
 from leveller.units import HOPS_PER_S, Bools, db_to_gain, gain_to_db, seconds_to_hops
 
 if TYPE_CHECKING:

@@ -1,4 +1,8 @@
-"""A finished cut -> the same kinds of report as a session has: delivery, mix, what was said of the files, the page."""
+"""A finished cut -> the same kinds of report as a session has: delivery, mix, what was said of the files, the page.
+
+A cut has no voices and no decisions: the tables of those are not written, and report.json has empty lists for them. Of
+the settings it holds those of the limiter, the only stage that was at work.
+"""
 
 from __future__ import annotations
 

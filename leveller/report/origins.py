@@ -1,4 +1,8 @@
-"""Every setting with its value and where that came from: the default, season.toml, session.toml or the command line."""
+"""Every setting with its value and where that came from: the default, season.toml, session.toml or the command line.
+
+Nothing is opened but the two files; what they say of settings and delivery is checked as `open_session` checks it, so
+that what `process` would refuse of them is refused here too.
+"""
 
 from __future__ import annotations
 

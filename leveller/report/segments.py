@@ -15,7 +15,7 @@ import numpy.typing as npt
 from leveller.attribute import Activity
 from leveller.attribute.decode import sure_of
 from leveller.measure.loudness import power_to_lufs
-from leveller.plan import STATES
+from leveller.plan import OWN, states_of
 from leveller.plan.levels import k_power
 from leveller.plan.stretches import without_short_gaps
 from leveller.units import Bools
@@ -24,7 +24,6 @@ if TYPE_CHECKING:
     from leveller.pipeline import Result
 
 SHORTEST_HOPS = 20
-SILENCE, BLEED, OWN = (STATES.index(state) for state in ("silence", "bleed", "own"))
 
 
 @dataclass(frozen=True)
@@ -40,7 +39,7 @@ class Segments:
 
 def segments_of(result: Result, track: int) -> Segments:
     """Stretches of one track."""
-    state = states_of(result.activity, track)
+    state = steady_states(result.activity, track)
     first = np.concatenate([[0], np.flatnonzero(np.diff(state)) + 1])
     end = np.append(first[1:], len(state))
     length = end - first
@@ -50,11 +49,10 @@ def segments_of(result: Result, track: int) -> Segments:
     return Segments(first, end, kinds, sure, np.where(kinds == OWN, power_to_lufs(power), np.nan))
 
 
-def states_of(activity: Activity, track: int) -> npt.NDArray[np.int8]:
+def steady_states(activity: Activity, track: int) -> npt.NDArray[np.int8]:
     """State of every hop, index into `plan.STATES`, without flicker."""
     own, bleed = activity.own[:, track], activity.bleed[:, track]
-    heard = _steady(bleed | own)
-    return np.where(own, OWN, np.where(heard, BLEED, SILENCE)).astype(np.int8)
+    return states_of(own, _steady(bleed | own))
 
 
 def _steady(flags: Bools) -> Bools:

@@ -67,7 +67,7 @@ def write_speech(path: Path, result: Result) -> None:
     _write(path, SPEECH_COLUMNS, [text for _, _, text in sorted(rows)], result.session)
 
 
-def write_listen(path: Path, places: Sequence[Place], session: Session | None = None) -> None:
+def write_listen(path: Path, places: Sequence[Place], session: Session) -> None:
     """The places to hear, the most doubtful first."""
     _write(path, LISTEN_COLUMNS, [
         f"{place.from_s:.2f},{place.to_s:.2f},{text_cell(place.track)},{place.decided},{place.could_be},"

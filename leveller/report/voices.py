@@ -17,14 +17,13 @@ from leveller.measure.levels import SILENT
 from leveller.measure.loudness import power_to_lufs
 from leveller.plan import PARTS, TrackGain
 from leveller.plan.levels import k_power, level_lufs, own_power, own_speech, spoken_alone
+from leveller.quiet import LEAST_PAUSE_HOPS
 from leveller.render.gain import hop_gains_db
 from leveller.report.records import OtherFigures, VoiceFigures
 from leveller.units import HOPS_PER_S, Bools
 
 if TYPE_CHECKING:
     from leveller.pipeline import Result
-
-LEAST_PAUSE_HOPS = 50  # less silence than this has no noise level
 
 Grid = npt.NDArray[np.float32]
 
