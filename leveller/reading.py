@@ -56,14 +56,25 @@ def measure_files(
     facts = [probe(path, accept_short=accept_short) for path in paths]
     total_s, before_s = sum(fact.frames / fact.rate_hz for fact in facts), 0.0
     out = []
-    for path, fact in zip(paths, facts, strict=True):
-        out.append(_one_file(path, fact, before_s, total_s, on_progress))
+    for path, name, fact in zip(paths, told_apart(paths), facts, strict=True):
+        out.append(_one_file(path, name, fact, before_s, total_s, on_progress))
         before_s += fact.frames / fact.rate_hz
     return out
 
 
+def told_apart(paths: Sequence[Path]) -> list[str]:
+    """The name of each file, with as many of its folders as tell it from the others: 'ep 1/mix.wav', 'ep 2/mix.wav'."""
+    whole = [Path(os.path.abspath(path)).parts for path in paths]
+
+    def shared(parts: tuple[str, ...], count: int) -> bool:
+        return any(other != parts and other[-count:] == parts[-count:] for other in whole)
+
+    counts = [next(n for n in range(1, len(parts) + 1) if not shared(parts, n)) for parts in whole]
+    return [Path(*parts[-count:]).as_posix() for parts, count in zip(whole, counts, strict=True)]
+
+
 def _one_file(
-    path: Path, facts: FileFacts, before_s: float, total_s: float, on_progress: OnProgress
+    path: Path, name: str, facts: FileFacts, before_s: float, total_s: float, on_progress: OnProgress
 ) -> FileReading:
     """One pass over one file."""
     rate_hz, channels = facts.rate_hz, facts.channels
@@ -77,6 +88,6 @@ def _one_file(
         frames += len(block)
         on_progress("read", before_s + frames / rate_hz, total_s)
     heard, peak = loudness.result(), peaks.result()
-    return FileReading(file=path.name, repaired_frames=repaired, **loudness_figures(
+    return FileReading(file=name, repaired_frames=repaired, **loudness_figures(
         heard, true_peak_dbtp=peak.true_peak_dbtp, true_peak_s=peak.true_peak_s, channels=channels, rate_hz=rate_hz,
         length_s=frames / rate_hz))

@@ -105,6 +105,17 @@ def test_measure_reads_files(tmp_path: Path, capsys: pytest.CaptureFixture[str])
     assert reading["true_peak_dbtp"] == pytest.approx(0, abs=0.05)
 
 
+def test_measured_files_of_one_name_are_told_apart(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """mix.wav of two episodes come with their folders; a name that no other file has stays without."""
+    files = [tmp_path / "ep 1" / "mix.wav", tmp_path / "ep 2" / "mix.wav", tmp_path / "ep 2" / "other.wav"]
+    for path in files:
+        path.parent.mkdir(exist_ok=True)
+        soundfile.write(path, np.zeros(4800), 48000)
+    assert run("measure", *files, files[0], "--json") == 0
+    assert [reading["file"] for reading in json.loads(capsys.readouterr().out)] == [
+        "ep 1/mix.wav", "ep 2/mix.wav", "other.wav", "ep 1/mix.wav"]
+
+
 def test_settings_say_where_they_come_from(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     """Each setting is named as default, session.toml or --set; all deliveries are listed."""
     (tmp_path / "session.toml").write_text(

@@ -71,7 +71,7 @@ class LoudnessFigures:
 class FileReading(LoudnessFigures):
     """What one file reads that was given to `measure`."""
 
-    file: str  # its name without folders
+    file: str  # its name, with folders only where another file has the same one
     repaired_frames: int  # held NaN or Inf, silenced
 
 
