@@ -1,6 +1,6 @@
 // What is heard: one file at a time, the mix, a stem or a source, always at the score's position.
 
-const sound = {what: "mix", playing: null, until: null, players: new Map(), broken: new Map(), turn: 0};
+const sound = {what: "mix", playing: null, starting: null, until: null, players: new Map(), broken: new Map(), turn: 0};
 
 function heardFile(what, track) {
   if (what === "mix") return {url: "mix.wav", offset: 0, why: "", note: ""};
@@ -38,6 +38,8 @@ async function playFrom(time, until = null) {
   const turn = ++sound.turn, file = heardFile(sound.what, view.track);
   if (whyNot(sound.what, view.track)) return refuse(file, whyNot(sound.what, view.track));
   const player = playerOf(file.url);
+  sound.starting = player;
+  sound.until = until;
   try {
     await ready(player);
     if (turn !== sound.turn) return;
@@ -45,13 +47,18 @@ async function playFrom(time, until = null) {
     player.currentTime = time - file.offset;
     await player.play();
   } catch (error) {
-    if (turn === sound.turn) refuse(file, player.error || player.readyState === 0
+    if (turn !== sound.turn) return;
+    sound.starting = null;
+    refuse(file, player.error || player.readyState === 0
       ? "no such file here, or this browser cannot play it" : error.message, Boolean(player.error));
     return;
   }
-  if (turn !== sound.turn) { player.pause(); return; }
+  if (turn !== sound.turn) {
+    if (player !== (sound.playing?.player ?? sound.starting)) player.pause();
+    return;
+  }
+  sound.starting = null;
   sound.playing = {player, offset: file.offset};
-  sound.until = until;
   shownPlaying();
   requestAnimationFrame(follow);
 }
@@ -67,6 +74,7 @@ function stop() {
   sound.turn += 1;
   if (sound.playing) sound.playing.player.pause();
   sound.playing = null;
+  sound.starting = null;
   sound.until = null;
   shownPlaying();
 }
@@ -84,8 +92,9 @@ function follow() {
   requestAnimationFrame(follow);
 }
 
+// A file may take a moment to start; who asks again meanwhile wants silence.
 function playOrPause() {
-  if (sound.playing) stop();
+  if (sound.playing || sound.starting) stop();
   else if (view.picked) playFrom(view.picked.from, view.picked.to);
   else playFrom(view.time >= record.length_s - 0.05 ? 0 : view.time);
 }
@@ -93,7 +102,7 @@ function playOrPause() {
 // Another file at the same position; a stretch that was playing plays on.
 function hear(what) {
   sound.what = what;
-  if (sound.playing) playFrom(view.time, sound.until);
+  if (sound.playing || sound.starting) playFrom(view.time, sound.until);
   else shownPlaying();
 }
 

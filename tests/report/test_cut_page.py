@@ -162,6 +162,20 @@ def test_keys_move_mark_and_jump(page: Page) -> None:
     assert page.text("#span") == "30 s a line"
 
 
+def test_asked_again_before_it_sounds_it_stays_silent(page: Page) -> None:
+    """Play pressed twice before the file could start is silence; three times, sound; nothing is complained of."""
+    press = "for (let i = 0; i < arguments[0]; i++) document.getElementById('play').click()"
+    page.keys("HOME")  # browsers let nothing sound before a key is pressed
+    page.script(press, 2)
+    time.sleep(0.5)
+    assert (page.text("#play"), page.text("#clock")) == ("Play", "0:00.00")
+    page.script(press, 3)
+    page.wait("return document.getElementById('play').textContent === 'Pause'")
+    page.wait("return document.getElementById('clock').textContent > '0:00.30'")
+    assert page.text("#play") == "Pause"
+    assert page.text("#trouble") == ""
+
+
 def test_given_file_and_finished_mix_play_at_one_position(page: Page) -> None:
     """1 is the given file where it lies, 2 the finished mix; a file no browser plays is disabled with a word why."""
     assert page.script("return document.getElementById('hear-source').disabled")
