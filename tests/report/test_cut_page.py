@@ -104,26 +104,24 @@ def test_hostile_names_stay_text(page: Page, finished: Finished, tmp_path: Path)
 
 def test_it_says_what_was_done(page: Page, finished: Finished) -> None:
     """At a position the page names each peak, the gain and the loudness as the run has them."""
-    page.keys("n")
-    hop = round(100 * finished_time(page))
+    page.keys("END", control=True)
+    page.keys(*["ARROW_LEFT"] * 90)  # nothing plays: to 21 s, where it is loud
+    assert page.text("#clock") == "0:21.00"
+    hop = 2100
     said = page.text("#reading").split(": ", 1)[1]
     for name in (SCRIPT_NAME, IMAGE_NAME):
         said = said.replace(name, "")
-    peaks = [outline[hop] for outline in (*finished.file_peaks, finished.mix_peaks)]
-    levels = [20 * np.log10(peak) for peak in peaks]
-    short_term = finished.mix.short_term_lufs[hop // 10 * 10 - 300]
-    expected = [*levels, finished.mix.make_up_db, finished.limiter_db[hop], short_term]
-    assert numbers(said) == pytest.approx(expected, abs=0.31)  # half a dB a step; each figure has one decimal
+    near = [figures_at(finished, at) for at in (hop - 1, hop, hop + 1)]  # the clock is rounded, the position is not
+    assert any(numbers(said) == pytest.approx(figures, abs=0.31) for figures in near)  # half a dB a step, one decimal
     assert "on target" in page.text("#facts")
     assert "2 files" in page.text("#facts")
 
 
-def finished_time(page: Page) -> float:
-    """The position in seconds, still."""
-    page.keys(" ")
-    page.wait("return document.getElementById('play').textContent === 'Play'")
-    minutes, seconds = page.text("#clock").split(":")
-    return 60 * float(minutes) + float(seconds)
+def figures_at(finished: Finished, hop: int) -> list[float]:
+    """Peaks of files and mix, make-up and limiter gain in dB, short-term loudness, as the run has them at a hop."""
+    levels = [20 * np.log10(outline[hop]) for outline in (*finished.file_peaks, finished.mix_peaks)]
+    short_term = finished.mix.short_term_lufs[hop // 10 * 10 - 300]
+    return [*levels, finished.mix.make_up_db, finished.limiter_db[hop], short_term]
 
 
 def test_places_are_those_of_the_run(page: Page, finished: Finished) -> None:
