@@ -39,8 +39,6 @@ from leveller.session import Session, Track, audio_files
 from leveller.settings import Settings, delivery_named
 from leveller.units import hop_to_frame
 
-DEFAULT_OUT = Path("levelled")
-MARGIN_BYTES = 16 << 20  # tables and what else is small
 BY_CHANNELS = {1: "podcast-mono", 2: "podcast-stereo"}
 
 Samples = npt.NDArray[np.float32]
