@@ -4,7 +4,7 @@ A "yes" under an equally loud voice fills only some bands of its own, each now a
 (`bleed`) stays near what bleed gives, hop by hop. Over `WINDOW_HOPS` it does not: the mean of what the strongest
 bands say lies clearly over what this microphone ever shows while only others speak. The measure, in dB, is the excess
 of the strongest bands less half of the excess of all (a coupling estimated too low lifts all of them, a voice a few)
-and less a little of what is bright (paper and keys stand out in the high bands).
+and less half of what is bright (paper and keys stand out in the high bands).
 
 How far bleed scatters depends on room and microphone: a lapel's lies 2 dB over that of a close microphone, a live
 room's is narrower than a far table's. So the limit is each microphone's own: the median of the measure while somebody
@@ -28,7 +28,7 @@ from leveller.units import Bools
 
 WINDOW_HOPS = 27
 OF_ALL = 0.5  # of the excess of all bands
-OF_BRIGHT = 0.15  # of the excess of the high bands over the low ones
+OF_BRIGHT = 0.5  # of the excess of the high bands over the low ones
 SPREADS = 3.4  # upper decile less median of bleed
 UPPER = 0.9
 NATS_PER_DB = 1.2
