@@ -17,12 +17,11 @@ All is worked out track by track, so that memory stays small.
 
 from __future__ import annotations
 
-from typing import Any
-
 import numpy as np
 import numpy.typing as npt
 
 from leveller.attribute import Activity
+from leveller.attribute.answers import mean_round
 from leveller.measure import Measurements
 from leveller.measure.levels import level_to_db
 from leveller.plan.stretches import stretches
@@ -87,13 +86,6 @@ def bleed_features(activity: Activity, m: Measurements, track: int) -> dict[str,
 def silent(m: Measurements, track: int) -> Bools:
     """Whether one microphone gives digital zero, shape=(hops,)."""
     return np.asarray(level_to_db(m.voice_levels[:, track]) < MUTED_DB)
-
-
-def mean_round(values: npt.NDArray[Any], hops: int) -> Row:
-    """Mean over so many hops round each (odd); beyond the ends is nothing."""
-    half = hops // 2
-    total = np.cumsum(np.pad(values.astype(np.float64), (half + 1, half)))
-    return np.asarray((total[hops:] - total[:-hops]) / hops, np.float32)
 
 
 def most_round(values: Row, hops: int) -> Row:

@@ -8,8 +8,8 @@ The story, each step a module:
 4. `coupling`  from the hops labelled so far: how much of every voice each microphone hears;
 5. `bleed`     from the coupling: what the others explain at each microphone, and the evidence for own voice;
 6. back to 4 with the hops in which one microphone clearly has its own voice and no other has, `ROUNDS` times;
-7. `leads`     a microphone that clearly hears first has its own voice; `knocks`: sounds too short for a voice say
-   nothing;
+7. `answers`   a few bands that stand out of the bleed for a quarter of a second: a short answer under another voice;
+   `leads`: a microphone that clearly hears first has its own voice; `knocks`: sounds too short for a voice say nothing;
 8. `decode`    evidence into states over time;
 9. `knobs`     recording gains that were turned in the middle.
 
@@ -27,6 +27,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from leveller.attribute.answers import with_answers
 from leveller.attribute.bleed import CLIP, Evidence, Half, evidence_of
 from leveller.attribute.coupling import NONE_DB, Coupling, estimate_coupling
 from leveller.attribute.decode import margins
@@ -101,6 +102,7 @@ def _decided(m: Measurements, programme: Bools) -> Activity:
         labels = _relabelled(evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail), near_voice, seeds)
     coupling = estimate_coupling(m.levels, floor_db, labels, lags)
     evidence = evidence_of(m.levels, floor_db, coupling, tail_db_per_hop=tail, details=True)
+    evidence = replace(evidence, own=with_answers(evidence, programme))
     voice = without_knocks(with_leads(evidence, m.arrivals, coupling), m.levels)
     voice[~programme] = 0
     margin = margins(voice)
