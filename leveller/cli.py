@@ -10,19 +10,17 @@ from __future__ import annotations
 
 import contextlib
 import os
-import signal
 import sys
 import traceback
 from collections.abc import Iterator, Sequence
 from pathlib import Path
-from types import FrameType
 from typing import Annotated, Any
 
 import typer
 
 from leveller import __version__, console
 from leveller.errors import LevellerError
-from leveller.interruptions import put_off
+from leveller.interruptions import Keyboard
 from leveller.lanes import keep_heap
 
 THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
@@ -260,24 +258,12 @@ def main(arguments: Sequence[str] | None = None) -> None:
     for name in THREAD_LIMITS:
         os.environ.setdefault(name, "1")
     keep_heap()
-    ours = arguments is None and signal.getsignal(signal.SIGINT) is signal.default_int_handler  # else nohup ignores it
-    if ours:
-        signal.signal(signal.SIGINT, _interrupt)
     for stream in (sys.stdout, sys.stderr):
         with contextlib.suppress(AttributeError):  # not every stream can change its ways
             stream.reconfigure(errors="backslashreplace")  # type: ignore[union-attr]
-    code = _run(list(sys.argv[1:] if arguments is None else arguments))
-    if ours:
-        signal.signal(signal.SIGINT, signal.SIG_IGN)  # all is done: Python's own leaving is not to be disturbed
+    with Keyboard() if arguments is None else contextlib.nullcontext():
+        code = _run(list(sys.argv[1:] if arguments is None else arguments))
     sys.exit(code)
-
-
-def _interrupt(number: int, frame: FrameType | None) -> None:
-    """End the work at the first Ctrl-C; the tidying up that follows is brief, and another would leave it undone."""
-    if put_off(number, frame):
-        return
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
-    raise KeyboardInterrupt
 
 
 def _run(arguments: list[str]) -> int:

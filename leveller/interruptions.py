@@ -1,4 +1,7 @@
-"""Ctrl-C and its kin as a question to ask, so that none of them comes in the middle of something.
+"""Ctrl-C and its kin: none of them is lost, and none comes in the middle of something that it would spoil.
+
+One session is interrupted from the keyboard, wherever the program is (`Keyboard`): what is begun unwinds, and output
+folders tidy up behind themselves (`folder`). Impatience does not disturb that: for a moment more of them do nothing.
 
 A season is interrupted from the keyboard (SIGINT), by a system that shuts down or a timer (SIGTERM), or by a terminal
 that is closed (SIGHUP). As an exception any of these might come between the start of a process and its note, or while
@@ -6,7 +9,8 @@ what is left is being removed. Inside `Interruptions` they are only remembered; 
 the program waits for others (a cluster that may not answer), `at_once` lets the next one through as it comes.
 
 While a library is being imported nothing may be raised (`put_off`): an extension takes an exception in its start for a
-fault. soxr's ends the process there (nanobind: abort), numpy's makes an ImportError of it, others drop it.
+fault. soxr's ends the process there (nanobind: abort), numpy's makes an ImportError of it, others drop it. What comes
+into the end of an object is dropped by Python itself; `Keyboard` hears of that and lets it come once more.
 
 Signals that are ignored (nohup) or that somebody else has taken stay so. Handlers can be set in the main thread only;
 in any other one nothing is done.
@@ -17,13 +21,16 @@ from __future__ import annotations
 import contextlib
 import os
 import signal
+import sys
 import threading
+import time
 from collections.abc import Iterator
 from types import FrameType, TracebackType
 
 NAMES = ("SIGINT", "SIGTERM", "SIGHUP")  # the last one not on every system
 IMPORTS = "<frozen importlib"  # the code that is in the stack while something is imported
 AGAIN_S = 0.05
+QUIET_S = 1.0  # after one that is under way; tidying up is through by then
 
 
 def put_off(number: int, frame: FrameType | None) -> bool:
@@ -32,8 +39,52 @@ def put_off(number: int, frame: FrameType | None) -> bool:
         frame = frame.f_back
     if frame is None:
         return False
-    threading.Timer(AGAIN_S, os.kill, (os.getpid(), number)).start()
+    _once_more(number)
     return True
+
+
+def _once_more(number: int) -> None:
+    """Let a signal come again in a moment."""
+    threading.Timer(AGAIN_S, os.kill, (os.getpid(), number)).start()
+
+
+class Keyboard:
+    """Ctrl-C ends what this process does, from the first one on; a context manager round all of it.
+
+    On leaving, Ctrl-C does nothing any more: the process ends by itself. Where Ctrl-C is ignored already, or somebody
+    else takes it, nothing is done.
+    """
+
+    def __init__(self) -> None:
+        self._raised_s = -QUIET_S
+        self._reported = sys.unraisablehook
+
+    def __enter__(self) -> Keyboard:
+        if signal.getsignal(signal.SIGINT) is signal.default_int_handler:
+            signal.signal(signal.SIGINT, self._interrupt)
+            sys.unraisablehook = self._dropped
+        return self
+
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+                 ) -> None:
+        if signal.getsignal(signal.SIGINT) == self._interrupt:
+            signal.signal(signal.SIGINT, signal.SIG_IGN)
+            sys.unraisablehook = self._reported
+
+    def _interrupt(self, number: int, frame: FrameType | None) -> None:
+        """The handler."""
+        if put_off(number, frame) or time.monotonic() < self._raised_s + QUIET_S:
+            return
+        self._raised_s = time.monotonic()
+        raise KeyboardInterrupt
+
+    def _dropped(self, dropped: sys.UnraisableHookArgs) -> None:
+        """Python has told of an exception that cannot be raised where it came."""
+        if isinstance(dropped.exc_value, KeyboardInterrupt):
+            self._raised_s = -QUIET_S
+            _once_more(signal.SIGINT)
+        else:
+            self._reported(dropped)
 
 
 class Interruptions:

@@ -93,16 +93,21 @@ def wait_for_work(running: subprocess.Popen[str], work: Path) -> bool:
 
 
 def work_seconds(job: str, place: Path, work: Path) -> float:
-    """How long a run lasts from the moment its work folder appears."""
-    work.mkdir(parents=True)
-    running = started(job, place, work / "out")
-    assert wait_for_work(running, work)
-    begun = time.monotonic()
-    assert running.wait(timeout=120) == 0
-    assert running.stderr is not None
-    running.stderr.close()
-    shutil.rmtree(work)
-    return time.monotonic() - begun
+    """From the moment its work folder appears until the folder is there, the shortest of three runs."""
+    found = []
+    for _ in range(3):
+        work.mkdir(parents=True)
+        running = started(job, place, work / "out")
+        assert wait_for_work(running, work)
+        begun = time.monotonic()
+        while running.poll() is None and not (work / "out").exists():
+            time.sleep(0.002)
+        found.append(time.monotonic() - begun)
+        assert running.wait(timeout=120) == 0
+        assert running.stderr is not None
+        running.stderr.close()
+        shutil.rmtree(work)
+    return min(found)
 
 
 def killed(job: str, place: Path, work: Path, kind: signal.Signals, moment: random.Random, length_s: float) -> bool:
@@ -114,7 +119,7 @@ def killed(job: str, place: Path, work: Path, kind: signal.Signals, moment: rand
     before = contents(place)
     running = started(job, place, work / "out", *(["--replace"] if replacing else []))
     begun = moment.random() < 0.8 and wait_for_work(running, work)
-    time.sleep(moment.uniform(0, 1.1 * length_s))
+    time.sleep(moment.uniform(0, length_s))
     running.send_signal(kind)
     _, said = running.communicate(timeout=120)
     assert contents(place) == before, "a source was changed"

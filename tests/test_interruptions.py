@@ -64,6 +64,59 @@ def test_none_comes_into_an_import(tmp_path: Path) -> None:
     assert (run.returncode, run.stdout, run.stderr) == (130, "imported whole\n", "")
 
 
+DROPPED = """
+import os, signal, time
+from leveller import cli
+
+class Ending:
+    def __del__(self):
+        os.kill(os.getpid(), signal.SIGINT)
+        sum(range(1000))
+
+def work(arguments):
+    try:
+        Ending()
+        time.sleep(20)
+    except KeyboardInterrupt:
+        return 130
+    return 0
+
+cli._run = work
+cli.main()
+"""
+
+IMPATIENT = """
+import atexit, os, signal, time
+from leveller import cli
+
+def press():
+    os.kill(os.getpid(), signal.SIGINT)
+    sum(range(1000))
+
+def work(arguments):
+    try:
+        press()
+        time.sleep(20)
+    except KeyboardInterrupt:
+        press()
+        press()
+        return 130
+    return 0
+
+atexit.register(press)
+cli._run = work
+cli.main()
+"""
+
+
+@pytest.mark.parametrize("script", [DROPPED, IMPATIENT], ids=["dropped", "impatient"])
+def test_ctrl_c_ends_a_command_once_and_for_all(tmp_path: Path, script: str) -> None:
+    """Also where it comes into the end of an object, where Python drops it; and further ones disturb nothing then."""
+    (tmp_path / "run.py").write_text(script)
+    run = subprocess.run([sys.executable, str(tmp_path / "run.py")], capture_output=True, text=True, timeout=15)
+    assert (run.returncode, run.stdout, run.stderr) == (130, "", "")
+
+
 def test_what_is_ignored_stays_so(monkeypatch: pytest.MonkeyPatch) -> None:
     """nohup's SIGHUP, and a handler that somebody else has set for SIGTERM, are left alone."""
     heard: list[int] = []
