@@ -21,9 +21,8 @@ import typer
 from leveller import __version__, console
 from leveller.errors import LevellerError
 from leveller.interruptions import Keyboard
-from leveller.lanes import keep_heap
+from leveller.lanes import THREAD_LIMITS, keep_heap
 
-THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
 USAGE_EXIT, INTERRUPTED_EXIT, UNEXPECTED_EXIT = 2, 130, 1
 INTERRUPTED = "interrupted; nothing was left half-written"
 

@@ -30,6 +30,7 @@ from typing import Any, TypeVar
 T = TypeVar("T")
 AHEAD = 2  # blocks in flight per lane; one leaves a thread idle whenever lanes and threads do not divide
 MOST_THREADS = 4  # readers and writers of one disk gain nothing from more
+THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")  # of BLAS, read as numpy is imported
 
 ARENA_MAX, MMAP_THRESHOLD, TRIM_THRESHOLD, TOP_PAD = -8, -3, -1, -2  # of glibc's mallopt (malloc.h)
 BLOCK_BYTES = 4 << 20  # arrays up to this are taken from the heap; those of a block of one channel are smaller

@@ -24,12 +24,11 @@ from typing import Any
 
 from leveller.folder import take_back_all
 from leveller.interruptions import put_off
-from leveller.lanes import keep_heap, processor_count
+from leveller.lanes import THREAD_LIMITS, keep_heap, processor_count
 from leveller.worker import busy
 
 PROC, CGROUPS = Path("/proc"), Path("/sys/fs/cgroup")
 JOB_BYTES = 600 << 20  # three hours of eight tracks stay under it
-THREAD_LIMITS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")  # read when numpy is imported
 PATIENCE_S = 10.0  # for a worker to clean up
 ENDED_EXIT = 143
 

@@ -35,7 +35,7 @@ class SeasonUnwritten(OutputError):
 
 
 def write_season(folder: Path, report: SeasonReport, *, by: Path) -> None:
-    """Write the three files, all of them or none.
+    """Write the three files, each whole or as it was; where one of them has no room, none is touched.
 
     Parameters
     ----------
