@@ -176,8 +176,8 @@ def _why_lost(found: Candidate, activity: Activity, session: Session, _: Measure
     all_db = float(activity.own_to_bleed_db[part].mean())
     speaker, seconds = _speaker(found, activity, session), (found.after - found.first) / HOPS_PER_S
     what = f"a short answer may be under {speaker}'s voice" if speaker else "a word may be lost"
-    return (f"{what}: for {seconds:.1f} s the strongest bands are at {best_db:+.0f} dB against bleed, "
-            f"all at {all_db:+.0f} dB")
+    return (f"{what}: for {seconds:.1f} s the strongest bands are at {round(best_db):+d} dB against bleed, "
+            f"all at {round(all_db):+d} dB")
 
 
 def _why_bleed(found: Candidate, activity: Activity, session: Session, m: Measurements) -> str:

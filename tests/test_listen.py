@@ -80,6 +80,15 @@ def test_what_may_be_a_lost_word_comes_first_with_its_lead_in() -> None:
     assert 0.01 < first.doubt <= 1
 
 
+def test_no_reason_names_a_nought_below_nought() -> None:
+    """What rounds to nought is +0 dB from either side."""
+    activity = with_words((600, 0))
+    under = dataclasses.replace(
+        activity, standing_out_db=np.where(activity.standing_out_db == 4, -0.3, activity.standing_out_db),
+        own_to_bleed_db=np.where(activity.standing_out_db == 4, -9.0, activity.own_to_bleed_db))
+    assert "the strongest bands are at +0 dB against bleed, all at -9 dB" in heard(under)[0].reason
+
+
 def test_nothing_in_doubt_asks_for_nothing() -> None:
     """Plain bleed beside plain own voice gives no place, nor does a track that is no voice."""
     assert heard(with_words()) == ()
